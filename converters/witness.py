@@ -1,0 +1,37 @@
+"""Witness values through PySCF: an evaluation of orbitals in which no code of qwfx takes part."""
+
+from __future__ import annotations
+
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from qwfx.model import WitnessOrbitals
+from qwfx.points import WITNESS_SEED, probe_points
+
+__all__ = ["WITNESS_POINTS", "orbitals_by_pyscf", "witness_points"]
+
+WITNESS_POINTS = 48
+
+
+def witness_points(positions: NDArray[np.float64]) -> NDArray[np.float64]:
+    """The points of a witness, (N, 3) bohr: at least three near every nucleus of a small molecule."""
+    n_points = max(WITNESS_POINTS, min(3 * 3 * len(positions), 4 * WITNESS_POINTS))
+    return probe_points(positions, n_points, np.random.default_rng(WITNESS_SEED))
+
+
+def orbitals_by_pyscf(mol: Any, coefficients: NDArray[Any], points: NDArray[np.float64]) -> WitnessOrbitals:
+    """Values, gradients and Laplacians of orbitals by PySCF's own ``eval_gto``.
+
+    Parameters
+    ----------
+    mol : pyscf.gto.Mole, built.
+    coefficients : (F, M) in PySCF's order of functions, as ``mf.mo_coeff``.
+    points : (N, 3) bohr.
+    """
+    derivative = mol.eval_gto("GTOval_cart_deriv2" if mol.cart else "GTOval_sph_deriv2", points)
+    value, *first = (derivative[i] @ coefficients for i in range(4))
+    # Components of the second derivatives: xx, xy, xz, yy, yz, zz.
+    laplacian = (derivative[4] + derivative[7] + derivative[9]) @ coefficients
+    return WitnessOrbitals(values=value, gradients=np.stack(first, axis=-1), laplacians=laplacian)
