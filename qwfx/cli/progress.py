@@ -1,0 +1,47 @@
+"""Progress of long work: a line on standard error that is there on a terminal only and goes when the work ends."""
+
+from __future__ import annotations
+
+import sys
+import time
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
+
+__all__ = ["progress_line"]
+
+SHOW_AFTER = 0.5  # seconds; short work should not flicker
+
+
+@contextmanager
+def progress_line() -> Iterator[Callable[[str, float], None] | None]:
+    """Yields the callback that verbs hand down, or None where standard error is not a terminal."""
+    if not sys.stderr.isatty():
+        yield None
+        return
+    from rich.console import Console
+    from rich.progress import BarColumn, Progress, TextColumn, TimeElapsedColumn
+
+    bar = Progress(
+        TextColumn("{task.description}"),
+        BarColumn(bar_width=30),
+        TextColumn("{task.percentage:>3.0f} %"),
+        TimeElapsedColumn(),
+        console=Console(stderr=True),
+        transient=True,
+    )
+    task = bar.add_task("", total=1.0)
+    start = time.monotonic()
+    shown = False
+
+    def update(phase: str, fraction: float) -> None:
+        nonlocal shown
+        if not shown and time.monotonic() - start > SHOW_AFTER:
+            bar.start()
+            shown = True
+        bar.update(task, description=phase, completed=min(max(fraction, 0.0), 1.0))
+
+    try:
+        yield update
+    finally:
+        if shown:
+            bar.stop()
