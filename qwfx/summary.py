@@ -41,17 +41,18 @@ def _system_lines(system: System) -> list[tuple[str, str]]:
     charge = float(system.effective_charges.sum()) - system.n_electrons
     lines = [("system", f"{_formula(system)}, charge {charge:+.4g}"), ("electrons", electrons)]
     if system.n_atoms > 1:
-        d = np.linalg.norm(system.positions[:, None] - system.positions[None, :], axis=-1) if system.n_atoms < 2000 else None
-        if d is not None:
-            near = d[np.triu_indices(system.n_atoms, 1)].min()
-            lines.append(("geometry", f"{system.n_atoms} centres, nearest pair {near:.4f} bohr"))
+        near = min(
+            float(np.linalg.norm(system.positions[a + 1 :] - system.positions[a], axis=1).min())
+            for a in range(system.n_atoms - 1)
+        )
+        lines.append(("geometry", f"{system.n_atoms} centres, nearest pair {near:.4f} bohr"))
     if system.cell is not None:
         lines.append(("cell", f"periodic, {len(system.cell.kpoints)} k-points"))
     return lines
 
 
 def _potential_line(system: System, potentials: Potentials) -> str:
-    atoms = sorted(set(int(c) for c in potentials.center))
+    atoms = sorted({int(c) for c in potentials.center})
     names = [system.labels[a] for a in atoms if 0 <= a < system.n_atoms]
     shown = ", ".join(names[:6]) + (f" and {len(names) - 6} more" if len(names) > 6 else "")
     removed = float((system.atomic_numbers[atoms] - system.effective_charges[atoms]).sum()) if names else 0.0
@@ -60,7 +61,8 @@ def _potential_line(system: System, potentials: Potentials) -> str:
 
 def _basis_line(basis: Basis) -> str:
     counts = Counter(int(angular) for angular in basis.shell_l)
-    shells = " ".join(f"{n}{SHELL_LETTERS[a] if a < len(SHELL_LETTERS) else f'(l={a})'}" for a, n in sorted(counts.items()))
+    letters = {a: SHELL_LETTERS[a] if a < len(SHELL_LETTERS) else f"(l={a})" for a in counts}
+    shells = " ".join(f"{counts[a]}{letters[a]}" for a in sorted(counts))
     monomial = int(np.count_nonzero(basis.shell_monomial))
     kind = "solid" if not monomial else "monomial" if monomial == basis.n_shells else "mixed solid and monomial"
     return (
@@ -90,7 +92,10 @@ def _hamiltonian_line(h: Hamiltonian) -> str:
     kind = ("complex " if h.complex_orbitals else "") + ("spin-resolved" if h.spin_resolved else "spin-restricted")
     stored = sum(int(t.values.shape[0]) for t in h.two_body.values())
     sparse = "sparse" if any(t.index is not None for t in h.two_body.values()) else "dense"
-    return f"{h.n_orbitals} orbitals, {kind}, {stored} two-electron integrals ({sparse}), core energy {h.core_energy:.8f}"
+    return (
+        f"{h.n_orbitals} orbitals, {kind}, {stored} two-electron integrals ({sparse}), "
+        f"core energy {h.core_energy:.8f} hartree"
+    )
 
 
 def _energy_lines(energies: Energies) -> list[tuple[str, str]]:
@@ -122,9 +127,8 @@ def summarise(wavefunction: Wavefunction, path: Path | None = None) -> list[tupl
         lines += _energy_lines(w.energies)
     if w.witness is not None:
         independent = "independent of qwfx" if w.witness.independent else "not independent of qwfx"
-        lines.append(
-            ("witness", f"{len(w.witness.points)} points by {w.witness.evaluator} {w.witness.evaluator_version}, {independent}")
-        )
+        evaluator = f"{w.witness.evaluator} {w.witness.evaluator_version}"
+        lines.append(("witness", f"{len(w.witness.points)} points by {evaluator}, {independent}"))
     for step in w.provenance.steps[-3:]:
         lines.append(("made by", f"{step.get('activity', '?')}, {step.get('agent', '?')}, {step.get('time', '?')}"))
     lines += [("extension", f"{name} (carried along, not interpreted)") for name in w.extensions]

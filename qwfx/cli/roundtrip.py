@@ -129,18 +129,19 @@ def command(
     A sign, an order or a rotation among orbitals of equal energy is undone first, and said. Exit code 0: the same
     within the tolerance; 1: different; 2: could not be done.
     """
-    from qwfx.compare.roundtrip import REGIONS, roundtrip
+    from qwfx.compare.roundtrip import roundtrip
+    from qwfx.points import REGIONS
 
     points = _points_from(points_file) if points_file else None
     if keep:
         keep.mkdir(parents=True, exist_ok=True)
-    with (nullcontext(str(keep)) if keep else tempfile.TemporaryDirectory(prefix="qwfx-")) as folder:
-        with progress_line() as progress:
-            result = roundtrip(
-                source, Path(folder), source_format=source_format, options=settings(assignments, reading),
-                through=through, n_points=n_points, seed=seed, regions=regions or REGIONS, points=points,
-                tolerance=tolerance, progress=progress,
-            )  # fmt: skip
+    temporary = nullcontext(str(keep)) if keep else tempfile.TemporaryDirectory(prefix="qwfx-")
+    with temporary as folder, progress_line() as progress:
+        result = roundtrip(
+            source, Path(folder), source_format=source_format, options=settings(assignments, reading),
+            through=through, n_points=n_points, seed=seed, regions=regions or REGIONS, points=points,
+            tolerance=tolerance, progress=progress,
+        )  # fmt: skip
     if form == "json":
         click.echo(json.dumps(_to_json(result), indent=2))
     else:

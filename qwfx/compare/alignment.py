@@ -74,8 +74,8 @@ def align(
     for p in range(n_orbitals):
         settled[p] = cosine[p, p] >= threshold
     loose = np.flatnonzero(~settled)
-    for p in loose:
-        q = loose[int(np.argmax(cosine[p, loose]))] if len(loose) else p
+    for p in map(int, loose):
+        q = int(loose[int(np.argmax(cosine[p, loose]))])
         if cosine[p, q] >= threshold and not np.any((partner == q) & settled):
             partner[p], settled[p] = q, True
             freedom[p] = f"order (was {q})"

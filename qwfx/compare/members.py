@@ -111,11 +111,10 @@ def _compare_member(
         return [MemberDifference(path, kind, text if b is None else "-", text if a is None else "-")], False
     if a["kind"] != b["kind"]:
         return [MemberDifference(path, "type", _describe(a), _describe(b))], False
-    differences = _compare_attributes(path, a, b, everything)
+    differences = _compare_attributes(path, a, b, (absolute, relative), everything)
     if a["kind"] == "group":
         return differences, not differences
-    text = [m["dtype"] == "string" for m in (a, b)]
-    if text[0] != text[1]:
+    if (a["dtype"] == "string") != (b["dtype"] == "string"):
         return [*differences, MemberDifference(path, "type", _describe(a), _describe(b))], False
     if a["shape"] != b["shape"]:
         return [*differences, MemberDifference(path, "shape", _describe(a), _describe(b))], False
@@ -124,16 +123,17 @@ def _compare_member(
 
 
 def _compare_attributes(
-    path: str, a: dict[str, Any], b: dict[str, Any], everything: bool
+    path: str, a: dict[str, Any], b: dict[str, Any], tolerance: tuple[float, float], everything: bool
 ) -> list[MemberDifference]:
     ones, twos = a.get("attributes", {}), b.get("attributes", {})
     differences = []
     for name in sorted(ones.keys() | twos.keys()):
         if path == "/" and name == "content_digest" and not everything:
             continue  # it follows from the members, which are compared themselves
-        one, two = (str(table[name]["value"]) if name in table else "-" for table in (ones, twos))
-        if one != two:
-            differences.append(MemberDifference(f"{path}@{name}", "attribute", one, two))
+        one, two = (table[name]["value"] if name in table else "-" for table in (ones, twos))
+        close = isinstance(one, float) and isinstance(two, float) and not _beyond(one, two, *tolerance)[0]
+        if one != two and not close:
+            differences.append(MemberDifference(f"{path}@{name}", "attribute", str(one), str(two)))
     return differences
 
 
@@ -164,9 +164,7 @@ def _compare_values(
     return [MemberDifference(path, "values", *sample, largest=largest, n_different=n_different)], False
 
 
-def _beyond(
-    one: NDArray[Any], two: NDArray[Any], absolute: float, relative: float
-) -> tuple[NDArray[np.bool_], float | None, bool]:
+def _beyond(one: Any, two: Any, absolute: float, relative: float) -> tuple[NDArray[np.bool_], float | None, bool]:
     """Where two arrays differ beyond the tolerance, the largest finite difference, and whether they are equal."""
     one, two = np.asarray(one), np.asarray(two)
     if one.dtype.kind not in "fciu" or two.dtype.kind not in "fciu":
