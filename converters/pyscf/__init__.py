@@ -5,6 +5,7 @@ PySCF itself is imported inside the functions that need it.
 
 from __future__ import annotations
 
+from qwfx.converters.pyscf.checkpoint import CheckpointConverter
 from qwfx.converters.pyscf.energies import casci_energy, energy
 from qwfx.converters.pyscf.from_mean_field import from_pyscf
 from qwfx.converters.pyscf.full_ci import fci_energy
@@ -16,6 +17,7 @@ from qwfx.converters.pyscf.to_mole import Translation, to_mole, translate
 __all__ = [
     "Translation",
     "casci_energy",
+    "converter",
     "energy",
     "fci_energy",
     "from_pyscf",
@@ -25,3 +27,5 @@ __all__ = [
     "translate",
     "with_hamiltonian",
 ]
+
+converter = CheckpointConverter()

@@ -30,7 +30,7 @@ from qwfx.model import (
     Witness,
 )
 
-__all__ = ["Parts", "assemble", "energies_table", "from_pyscf", "single_determinant"]
+__all__ = ["Parts", "assemble", "energies_table", "from_pyscf", "per_spin", "provenance_step", "single_determinant"]
 
 INTEGER_WITHIN = 1e-8  # electrons; PySCF's own integer occupations are exact
 
@@ -119,9 +119,9 @@ def from_pyscf(
         )
     parts = Parts(
         mol=mol,
-        coefficients=_per_spin(mo_coeff, 2),
-        occupations=_per_spin(mo_occ, 1) or None,
-        energies=_per_spin(energies, 1) or None,
+        coefficients=per_spin(mo_coeff, 2),
+        occupations=per_spin(mo_occ, 1) or None,
+        energies=per_spin(energies, 1) or None,
         method=method,
         total_energy=total,
         notes=notes,
@@ -134,15 +134,15 @@ def from_pyscf(
     return wavefunction
 
 
-def _per_spin(values: Any, rank: int) -> list[NDArray[Any]]:
+def per_spin(values: Any, rank: int) -> list[NDArray[Any]]:
     """A list of one array (spin-restricted) or of two (up, down); empty if there is nothing."""
     if values is None:
         return []
     if isinstance(values, (tuple, list)) or np.ndim(values) == rank + 1:
         arrays = [np.array(v) for v in values]
-        if len(arrays) == 2 and all(a.ndim == rank for a in arrays):
+        if len(arrays) == 2 and all(a.ndim == rank and a.dtype.kind in "fciu" for a in arrays):
             return arrays
-    elif np.ndim(values) == rank:
+    elif np.ndim(values) == rank and np.array(values).dtype.kind in "fciu":
         return [np.array(values)]
     raise ConversionError(
         f"an array of orbitals has the shape {np.shape(values)}",

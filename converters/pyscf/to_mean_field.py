@@ -14,7 +14,7 @@ from qwfx.converters.pyscf.to_mole import translate
 from qwfx.errors import ConversionError, UnsupportedError
 from qwfx.model import OrbitalSet, Wavefunction
 
-__all__ = ["Determinant", "choose_sets", "stored_method", "stored_total", "to_mean_field"]
+__all__ = ["Determinant", "choose_sets", "hartree_fock_kind", "stored_method", "stored_total", "to_mean_field"]
 
 WHERE = "conversion to PySCF"
 ELECTRONS_WITHIN = 1e-4  # a Molden file prints occupations such as 13.99999
@@ -118,6 +118,13 @@ def stored_total(wavefunction: Wavefunction) -> tuple[str, float] | None:
     return None
 
 
+def hartree_fock_kind(wavefunction: Wavefunction) -> str:
+    """``RHF``, ``ROHF`` or ``UHF``, by the orbital sets and the electron counts. Raises as `choose_sets`."""
+    if len(_set_names(wavefunction)) == 2:
+        return "UHF"
+    return "RHF" if wavefunction.system.n_up == wavefunction.system.n_down else "ROHF"
+
+
 def stored_method(wavefunction: Wavefunction, method: str | None = None) -> MeanField:
     """The mean-field method of `method`, else of the stored total energy, else Hartree-Fock of the kind the sets say.
 
@@ -126,9 +133,7 @@ def stored_method(wavefunction: Wavefunction, method: str | None = None) -> Mean
     total = stored_total(wavefunction)
     text = method or (total[0] if total else None)
     if text is None:
-        restricted = len(_set_names(wavefunction)) == 1
-        closed = wavefunction.system.n_up == wavefunction.system.n_down
-        return MeanField(kind=("R" if closed else "RO") if restricted else "U")
+        text = hartree_fock_kind(wavefunction)
     parsed = parse_mean_field(text)
     if parsed is None:
         raise UnsupportedError(
