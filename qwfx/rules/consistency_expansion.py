@@ -1,0 +1,300 @@
+"""Tier *consistency*: spin strings and the sparse matrix of the CI expansion, in one pass and bounded memory."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from qwfx.findings import Severity
+from qwfx.rules.inspection import Inspection
+from qwfx.rules.registry import Covered, Measured, Premise, Problem, Purpose, Remark, rule
+from qwfx.rules.wording import at
+
+__all__ = ["popcount", "row_slices"]
+
+TRIAL: tuple[Purpose, ...] = ("trial",)
+WORD = 64
+STRINGS = ("/expansion/up_strings", "/expansion/down_strings")
+MATRIX = ("/expansion/row_start", "/expansion/columns", *STRINGS)
+ONE_PASS_STRINGS = "one pass over the strings"
+ONE_PASS_MATRIX = "one pass over row_start and columns"
+
+_BITS = np.array([bin(byte).count("1") for byte in range(256)], dtype=np.uint8)
+
+
+def popcount(strings: NDArray[np.uint64]) -> NDArray[np.int64]:
+    """Number of set bits of each row of (k, W) uint64. (NumPy has a ufunc for this from version 2 only.)"""
+    octets = np.ascontiguousarray(strings).view(np.uint8).reshape(len(strings), -1)
+    return np.asarray(_BITS[octets].sum(axis=1, dtype=np.int64))
+
+
+def _words(block: NDArray[Any]) -> NDArray[np.uint64]:
+    return np.ascontiguousarray(block, dtype=np.uint64)
+
+
+def _precedes(a: NDArray[np.uint64], b: NDArray[np.uint64]) -> NDArray[np.bool_]:
+    """Row by row a < b as integers whose most significant word comes last."""
+    result = np.zeros(len(a), dtype=bool)
+    undecided = np.ones(len(a), dtype=bool)
+    for word in range(a.shape[1] - 1, -1, -1):
+        result |= undecided & (a[:, word] < b[:, word])
+        undecided &= a[:, word] == b[:, word]
+    return result
+
+
+def _spin_of(member: str) -> str:
+    return "up" if member.endswith("up_strings") else "down"
+
+
+@rule(
+    name="string-electrons",
+    tier="consistency",
+    severity=Severity.ERROR,
+    premise=Premise(members=(*STRINGS, "/system"), rules=("electron-count",)),
+    cost=ONE_PASS_STRINGS,
+    purposes=TRIAL,
+    summary="each spin string occupies as many orbitals as there are electrons of its spin",
+)
+def string_electrons(file: Inspection) -> Iterator[Remark]:
+    for member in STRINGS:
+        spin = _spin_of(member)
+        electrons = file.integer("/system", f"n_{spin}")
+        bad, first, seen = 0, (0, 0), 0
+        for start, block in file.blocks(member):
+            counts = popcount(_words(block))
+            wrong = counts != electrons
+            if wrong.any() and not bad:
+                k = int(np.argmax(wrong))
+                first = (start + k, int(counts[k]))
+            bad += int(wrong.sum())
+            seen += len(block)
+        if bad:
+            yield Problem(
+                at(member, first[0]),
+                f"{electrons} occupied orbitals: n_{spin} = {electrons}",
+                str(first[1]),
+                "write all occupied orbitals, frozen ones too, or correct the number of electrons",
+                count=bad,
+            )
+        yield Covered(f"all {seen} {spin} strings")
+
+
+@rule(
+    name="string-order",
+    tier="consistency",
+    severity=Severity.ERROR,
+    premise=Premise(members=STRINGS),
+    cost=ONE_PASS_STRINGS,
+    purposes=TRIAL,
+    summary="spin strings are unique and strictly ascending",
+)
+def string_order(file: Inspection) -> Iterator[Remark]:
+    for member in STRINGS:
+        bad, first, seen = 0, (0, False), 0
+        for start, block in file.blocks(member, overlap=1):
+            words = _words(block)
+            wrong = ~_precedes(words[:-1], words[1:])
+            if wrong.any() and not bad:
+                k = int(np.argmax(wrong))
+                first = (start + k + 1, bool(np.array_equal(words[k], words[k + 1])))
+            bad += int(wrong.sum())
+            seen = start + len(block)
+        if bad:
+            index, same = first
+            yield Problem(
+                at(member, index),
+                "a string above the one before it",
+                "the same string again" if same else "a lower one",
+                "sort the strings as integers, most significant word last, and add up entries of like strings",
+                count=bad,
+            )
+        yield Covered(f"all {seen} {_spin_of(member)} strings")
+
+
+@rule(
+    name="string-range",
+    tier="consistency",
+    severity=Severity.ERROR,
+    premise=Premise(members=(*STRINGS, "/orbitals"), rules=("named-sets",)),
+    cost=ONE_PASS_STRINGS,
+    purposes=TRIAL,
+    summary="strings occupy orbitals that exist, in no more words than that takes",
+)
+def string_range(file: Inspection) -> Iterator[Remark]:
+    for member in STRINGS:
+        spin = _spin_of(member)
+        name = file.attribute("/expansion", f"{spin}_set")
+        if name not in file.orbital_sets or not file.usable(f"/orbitals/{name}/coefficients"):
+            continue
+        n_orbitals = file.shape(f"/orbitals/{name}/coefficients")[0]
+        n_words = file.shape(member)[1]
+        enough = max(1, -(-n_orbitals // WORD))
+        allowed = np.array(
+            [(1 << min(max(n_orbitals - WORD * w, 0), WORD)) - 1 for w in range(n_words)], dtype=np.uint64
+        )
+        bad, first = 0, 0
+        for start, block in file.blocks(member):
+            beyond = (_words(block) & ~allowed).any(axis=1)
+            if beyond.any() and not bad:
+                first = start + int(np.argmax(beyond))
+            bad += int(beyond.sum())
+        if bad:
+            yield Problem(
+                at(member, first),
+                f"bits 0 to {n_orbitals - 1}: set {name!r} has {n_orbitals} orbitals",
+                "a bit beyond them",
+                "number orbitals as the rows of the set",
+                count=bad,
+            )
+        if n_words > enough:
+            yield Problem(
+                member,
+                f"{enough} words for {n_orbitals} orbitals",
+                f"{n_words} words",
+                "leave out the words that are always 0",
+                Severity.NOTE,
+            )
+        yield Covered(f"all {file.shape(member)[0]} {spin} strings")
+
+
+@rule(
+    name="row-offsets",
+    tier="consistency",
+    severity=Severity.ERROR,
+    premise=Premise(members=MATRIX),
+    cost="one pass over row_start",
+    purposes=TRIAL,
+    summary="row_start begins with 0, does not fall, and ends with the number of entries",
+)
+def row_offsets(file: Inspection) -> Iterator[Remark]:
+    member = "/expansion/row_start"
+    entries = file.shape("/expansion/columns")[0]
+    remedy = "row I owns the entries row_start[I] up to, not including, row_start[I+1]"
+    falls, first, last = 0, (0, 0, 0), 0
+    for start, block in file.blocks(member, overlap=1):
+        if start == 0 and len(block) and block[0] != 0:
+            yield Problem(at(member, 0), "0", str(block[0]), remedy)
+        down = block[1:] < block[:-1]
+        if down.any() and not falls:
+            k = int(np.argmax(down))
+            first = (start + k + 1, int(block[k]), int(block[k + 1]))
+        falls += int(down.sum())
+        last = int(block[-1])
+    if falls:
+        yield Problem(
+            at(member, first[0]), f"{first[1]} or more, the offset before it", str(first[2]), remedy, count=falls
+        )
+    if last != entries:
+        yield Problem(at(member, file.shape(member)[0] - 1), f"{entries}, the number of entries", str(last), remedy)
+    yield Covered(f"all {file.shape(member)[0]} offsets")
+
+
+def row_slices(
+    file: Inspection, size: int = 1 << 20
+) -> Iterator[tuple[int, NDArray[np.int64], int, NDArray[np.int64]]]:
+    """The sparse matrix in pieces: (first row, row_start of these rows and one more, first entry, columns).
+
+    Rows longer than `size` entries come in several pieces, each with the same rows; a piece begins one entry before
+    its place where that entry belongs to the same rows, so that neighbours can be compared.
+    """
+    n_rows = file.shape("/expansion/row_start")[0] - 1
+    for first in range(0, n_rows, size):
+        stop = min(first + size, n_rows)
+        offsets = np.asarray(file.raw.read("/expansion/row_start", first, stop + 1), dtype=np.int64)
+        low, high = int(offsets[0]), int(offsets[-1])
+        for start in range(low, high, size):
+            begin = max(low, start - 1)
+            columns = np.asarray(file.raw.read("/expansion/columns", begin, min(start + size, high)), dtype=np.int64)
+            yield first, offsets, begin, columns
+
+
+@rule(
+    name="column-order",
+    tier="consistency",
+    severity=Severity.ERROR,
+    premise=Premise(members=MATRIX, rules=("row-offsets",)),
+    cost=ONE_PASS_MATRIX,
+    purposes=TRIAL,
+    summary="columns are strictly ascending within a row and name down strings that exist",
+)
+def column_order(file: Inspection) -> Iterator[Remark]:
+    member = "/expansion/columns"
+    n_down = file.shape("/expansion/down_strings")[0]
+    outside = disorder = entries = 0
+    first_outside, first_disorder = (0, 0), (0, 0, 0)
+    for _, offsets, begin, columns in row_slices(file):
+        beyond = (columns < 0) | (columns >= n_down)
+        if beyond.any() and not outside:
+            k = int(np.argmax(beyond))
+            first_outside = (begin + k, int(columns[k]))
+        outside += int(beyond.sum())
+        starts_row = np.zeros(len(columns) + 1, dtype=bool)
+        inside = offsets[(offsets >= begin) & (offsets <= begin + len(columns))]
+        starts_row[inside - begin] = True
+        wrong = (columns[1:] <= columns[:-1]) & ~starts_row[1:-1]
+        if wrong.any() and not disorder:
+            k = int(np.argmax(wrong))
+            first_disorder = (begin + k + 1, int(columns[k]), int(columns[k + 1]))
+        disorder += int(wrong.sum())
+        entries = begin + len(columns)
+    if outside:
+        yield Problem(
+            at(member, first_outside[0]),
+            f"0 to {n_down - 1}: there are {n_down} down strings",
+            str(first_outside[1]),
+            "count down strings from 0",
+            count=outside,
+        )
+    if disorder:
+        index, before, here = first_disorder
+        yield Problem(
+            at(member, index),
+            f"more than {before}, the column before it in the row",
+            str(here),
+            "sort the entries of each row by column, and add up entries of like columns",
+            count=disorder,
+        )
+    yield Covered(f"all {entries} entries")
+
+
+@rule(
+    name="unused-strings",
+    tier="consistency",
+    severity=Severity.NOTE,
+    premise=Premise(members=MATRIX, rules=("row-offsets", "column-order")),
+    cost=ONE_PASS_MATRIX,
+    purposes=TRIAL,
+    summary="each string belongs to an entry",
+)
+def unused_strings(file: Inspection) -> Iterator[Remark]:
+    used = np.zeros(file.shape("/expansion/down_strings")[0], dtype=bool)
+    empty, first_empty, previous = 0, 0, -1
+    for first, offsets, _, columns in row_slices(file):
+        used[columns] = True
+        if first != previous:
+            previous = first
+            idle = np.flatnonzero(np.diff(offsets) == 0)
+            if len(idle) and not empty:
+                first_empty = first + int(idle[0])
+            empty += len(idle)
+    remedy = "leave out strings that no entry uses: each costs a determinant in every step of a run"
+    if empty:
+        yield Problem(
+            at("/expansion/up_strings", first_empty),
+            "an entry in the row of each up string",
+            "an empty row",
+            remedy,
+            count=empty,
+        )
+    if not used.all():
+        yield Problem(
+            at("/expansion/down_strings", int(np.argmin(used))),
+            "a column for each down string",
+            "a string that no entry uses",
+            remedy,
+            count=int((~used).sum()),
+        )
+    yield Measured(f"{empty} up and {int((~used).sum())} down strings unused")

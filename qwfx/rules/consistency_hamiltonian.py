@@ -1,0 +1,187 @@
+"""Tier *consistency*: keys, packed lengths and sparse indices of the Hamiltonian, sizes of density matrices."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+
+import numpy as np
+
+from qwfx.findings import Severity
+from qwfx.rules.inspection import Inspection
+from qwfx.rules.registry import Covered, Measured, Premise, PremiseError, Problem, Purpose, Remark, rule
+from qwfx.rules.wording import at, listed
+
+__all__ = ["packed_length"]
+
+HAMILTONIAN: tuple[Purpose, ...] = ("hamiltonian",)
+RESTRICTED = (("both",), ("both",))
+RESOLVED = (("down", "up"), ("down_down", "up_down", "up_up"))
+IRREPS = 8
+"""Irreps of D2h, the largest group whose products are a bitwise exclusive-or in FCIDUMP order."""
+
+
+def packed_length(n: int, packing: str, key: str) -> int:
+    """Length of the packed vector of two-electron integrals (FORMAT.md, Hamiltonian)."""
+    pairs = n * n if packing == "complex" else n * (n + 1) // 2
+    return pairs * pairs if key == "up_down" else pairs * (pairs + 1) // 2
+
+
+@rule(
+    name="hamiltonian-keys",
+    tier="consistency",
+    severity=Severity.ERROR,
+    premise=Premise(members=("/hamiltonian",)),
+    purposes=HAMILTONIAN,
+    summary="integrals are all spin-restricted or all spin-resolved, and complete",
+)
+def hamiltonian_keys(file: Inspection) -> Iterator[Remark]:
+    one, two = file.members("/hamiltonian/one_body"), file.members("/hamiltonian/two_body")
+    if (one, two) not in (RESTRICTED, RESOLVED):
+        yield Problem(
+            "/hamiltonian",
+            "one_body both and two_body both; or up, down and up_up, up_down, down_down",
+            f"one_body {listed(one) or 'nothing'}; two_body {listed(two) or 'nothing'}",
+            "write all integrals of one kind",
+        )
+    strange = [key for key in file.members("/hamiltonian/orbital_energies") if key not in one]
+    if strange:
+        yield Problem(
+            f"/hamiltonian/orbital_energies/{strange[0]}",
+            f"keys as in one_body: {listed(one)}",
+            listed(strange),
+            "name orbital energies by the spin of their one-body integrals",
+        )
+    yield Covered("all keys")
+
+
+@rule(
+    name="packed-length",
+    tier="consistency",
+    severity=Severity.ERROR,
+    premise=Premise(members=("/hamiltonian",), rules=("hamiltonian-keys",)),
+    purposes=HAMILTONIAN,
+    summary="dense two-electron integrals have the length that n_orbitals and the packing give",
+)
+def packed_length_rule(file: Inspection) -> Iterator[Remark]:
+    n, packing = file.integer("/hamiltonian", "n_orbitals"), file.attribute("/hamiltonian", "packing")
+    dense = 0
+    for key in file.members("/hamiltonian/two_body"):
+        member = f"/hamiltonian/two_body/{key}/values"
+        if file.has(f"/hamiltonian/two_body/{key}/index") or not file.usable(member):
+            continue
+        dense += 1
+        length, wanted = file.shape(member)[0], packed_length(n, packing, key)
+        if length != wanted:
+            other = "complex" if packing == "real" else "real"
+            hint = f", the length of packing {other!r}" if length == packed_length(n, other, key) else ""
+            hint = ", all n^4 elements without packing" if length == n**4 and not hint else hint
+            yield Problem(
+                member,
+                f"{wanted} values for {n} orbitals, packing {packing!r}",
+                f"{length}{hint}",
+                "pack the integrals as FORMAT.md says, or add their index",
+            )
+    yield Covered(f"{dense} dense data sets")
+
+
+@rule(
+    name="sparse-index",
+    tier="consistency",
+    severity=Severity.ERROR,
+    premise=Premise(members=("/hamiltonian",), rules=("hamiltonian-keys",)),
+    cost="one pass over the index of two-electron integrals",
+    purposes=HAMILTONIAN,
+    summary="positions of sparse two-electron integrals are strictly ascending and within the packed vector",
+)
+def sparse_index(file: Inspection) -> Iterator[Remark]:
+    n, packing = file.integer("/hamiltonian", "n_orbitals"), file.attribute("/hamiltonian", "packing")
+    sparse = 0
+    for key in file.members("/hamiltonian/two_body"):
+        member = f"/hamiltonian/two_body/{key}/index"
+        if not file.usable(member):
+            continue
+        sparse += 1
+        length = packed_length(n, packing, key)
+        outside = disorder = 0
+        first_outside, first_disorder = (0, 0), (0, 0, 0)
+        for start, block in file.blocks(member, overlap=1):
+            beyond = np.asarray(block >= length) | np.asarray(block < 0)
+            if beyond.any() and not outside:
+                k = int(np.argmax(beyond))
+                first_outside = (start + k, int(block[k]))
+            outside += int(beyond[1 if start else 0 :].sum())
+            wrong = block[1:] <= block[:-1]
+            if wrong.any() and not disorder:
+                k = int(np.argmax(wrong))
+                first_disorder = (start + k + 1, int(block[k]), int(block[k + 1]))
+            disorder += int(wrong.sum())
+        if outside:
+            yield Problem(
+                at(member, first_outside[0]),
+                f"a position below {length}, the packed length for {n} orbitals",
+                str(first_outside[1]),
+                "number positions as FORMAT.md says",
+                count=outside,
+            )
+        if disorder:
+            index, before, here = first_disorder
+            yield Problem(
+                at(member, index),
+                f"more than {before}, the position before it",
+                str(here),
+                "sort the integrals by position, each once",
+                count=disorder,
+            )
+    if not sparse:
+        raise PremiseError("the two-electron integrals are dense")
+    yield Covered(f"all positions of {sparse} sparse data sets")
+
+
+@rule(
+    name="symmetry-numbers",
+    tier="consistency",
+    severity=Severity.ERROR,
+    premise=Premise(members=("/hamiltonian/orbital_symmetry",)),
+    purposes=HAMILTONIAN,
+    summary="irreps of the Hamiltonian's orbitals are numbered 0 to 7",
+)
+def symmetry_numbers(file: Inspection) -> Iterator[Remark]:
+    numbers = file.read("/hamiltonian/orbital_symmetry")
+    outside = (numbers < 0) | (numbers >= IRREPS)
+    if outside.any():
+        i = int(np.argmax(outside))
+        yield Problem(
+            at("/hamiltonian/orbital_symmetry", i),
+            f"0 to {IRREPS - 1}, totally symmetric first",
+            str(numbers[i]),
+            "count irreps from 0",
+            count=int(outside.sum()),
+        )
+    state = file.attribute("/hamiltonian", "state_symmetry")
+    if state is not None and not 0 <= int(state) < IRREPS:
+        yield Problem("/hamiltonian@state_symmetry", f"0 to {IRREPS - 1}", str(state), "count irreps from 0")
+    yield Covered(f"all {len(numbers)} orbitals")
+
+
+@rule(
+    name="orbital-capacity",
+    tier="consistency",
+    severity=Severity.ERROR,
+    premise=Premise(members=("/hamiltonian", "/system"), rules=("electron-count",)),
+    purposes=HAMILTONIAN,
+    summary="the electrons fit into the orbitals of the Hamiltonian",
+)
+def orbital_capacity(file: Inspection) -> Iterator[Remark]:
+    n = file.integer("/hamiltonian", "n_orbitals")
+    for spin in ("up", "down"):
+        electrons = file.integer("/system", f"n_{spin}")
+        if electrons > n:
+            yield Problem(
+                f"/system@n_{spin}",
+                f"at most {n} electrons of a spin: the Hamiltonian has {n} orbitals",
+                str(electrons),
+                "write integrals over all orbitals, or count only the electrons they describe",
+                # With orbitals beside it the Hamiltonian may be that of an active space over a frozen core.
+                Severity.NOTE if file.has("/orbitals") else None,
+            )
+    yield Measured(f"{n} orbitals")

@@ -1,0 +1,75 @@
+"""Tier *digests*: are these the bytes that were written?"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+
+from qwfx.findings import Severity
+from qwfx.rules.inspection import Inspection
+from qwfx.rules.registry import Covered, Measured, Premise, PremiseError, Problem, Remark, rule
+
+__all__: list[str] = []
+
+
+@rule(
+    name="member-digests",
+    tier="digests",
+    severity=Severity.ERROR,
+    premise=Premise(members=("/digests",), rules=("version",)),
+    cost="one pass over the whole file",
+    summary="each data set has the SHA-256 digests that were stored with it",
+)
+def member_digests(file: Inspection) -> Iterator[Remark]:
+    check = file.digests
+    for mismatch in check.mismatches:
+        place = mismatch.path if mismatch.block is None else f"{mismatch.path}, from byte {mismatch.offset} on"
+        yield Problem(
+            mismatch.path,
+            "the digest stored when it was written",
+            f"{mismatch.reason} ({place})",
+            "restore the file from a copy; if the change was meant, save it anew so that digests agree",
+        )
+    for path in check.missing:
+        yield Problem(
+            path, "the member that /digests lists", "it is absent", "restore the file from a copy, or save it anew"
+        )
+    for path in check.extra:
+        yield Problem(
+            path,
+            "a digest for each member",
+            "none is stored",
+            "save the file anew so that digests are complete",
+            Severity.WARNING,
+        )
+    yield Measured(f"{check.checked} members, {check.bytes} bytes")
+    yield Covered("every byte of every data set")
+
+
+@rule(
+    name="content-digest",
+    tier="digests",
+    severity=Severity.ERROR,
+    premise=Premise(rules=("version",)),
+    cost="one pass over the whole file",
+    summary="the content digest at the root is that of the physics in the file",
+)
+def content_digest(file: Inspection) -> Iterator[Remark]:
+    stored = file.attribute("/", "content_digest")
+    if not file.has("/digests"):
+        yield Problem(
+            "/digests",
+            "digests of all members",
+            "none",
+            "save the file with qwfx, or write /digests as in FORMAT.md: without it damage goes unseen",
+            Severity.WARNING,
+        )
+        raise PremiseError("the file has no digests")
+    computed = file.digests.content_digest_computed
+    if stored != computed:
+        yield Problem(
+            "/@content_digest",
+            f"{computed[:16]}..., that of the members",
+            f"{str(stored)[:16]}..." if stored else "no such attribute",
+            "two files with one content digest hold the same wave function: save the file anew",
+        )
+    yield Covered("the groups that make up the wave function")
