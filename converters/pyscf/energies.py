@@ -6,8 +6,8 @@ from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
-from qwfx.converters.pyscf.methods import parse_active_space
-from qwfx.converters.pyscf.to_mean_field import choose_sets, stored_total, to_mean_field
+from qwfx.converters.pyscf.methods import MeanField, parse_active_space
+from qwfx.converters.pyscf.to_mean_field import bare_mean_field, choose_sets, stored_total, to_mean_field
 from qwfx.converters.pyscf.to_mole import translate
 
 from qwfx.errors import ConversionError, EvaluationError
@@ -67,7 +67,7 @@ def casci_energy(wavefunction: Wavefunction, n_active_orbitals: int, n_active_el
             remedy="check the active space",
         )
     order = np.argsort(-occupations, kind="stable")
-    mf = to_mean_field(wavefunction, "ROHF")
+    mf = bare_mean_field(translate(wavefunction).mole, MeanField("RO"))
     difference = system.n_up - system.n_down
     n_up = (n_active_electrons + difference) // 2
     solver = mcscf.CASCI(mf, n_active_orbitals, (n_up, n_active_electrons - n_up), ncore=n_core)

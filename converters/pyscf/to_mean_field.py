@@ -14,7 +14,10 @@ from qwfx.converters.pyscf.to_mole import translate
 from qwfx.errors import ConversionError, UnsupportedError
 from qwfx.model import OrbitalSet, Wavefunction
 
-__all__ = ["Determinant", "choose_sets", "hartree_fock_kind", "stored_method", "stored_total", "to_mean_field"]
+__all__ = [
+    "Determinant", "bare_mean_field", "choose_sets", "hartree_fock_kind", "stored_method", "stored_total",
+    "to_mean_field",
+]  # fmt: skip
 
 WHERE = "conversion to PySCF"
 ELECTRONS_WITHIN = 1e-4  # a Molden file prints occupations such as 13.99999
@@ -175,7 +178,7 @@ def to_mean_field(wavefunction: Wavefunction, method: str | None = None) -> Any:
             expected="UHF or UKS",
             remedy="name the method",
         )
-    mf = _mean_field(translation.mole, settings)
+    mf = bare_mean_field(translation.mole, settings)
     for quantity, values in zip(ORBITAL_QUANTITIES, (coefficients, occupations, energies), strict=True):
         setattr(mf, f"mo_{quantity}", _stacked(values))
     stored = stored_total(wavefunction)
@@ -192,7 +195,8 @@ def _stacked(values: list[NDArray[Any]]) -> Any:
     return np.array(values) if values[0].shape == values[1].shape else tuple(values)
 
 
-def _mean_field(mole: Any, settings: MeanField) -> Any:
+def bare_mean_field(mole: Any, settings: MeanField) -> Any:
+    """The mean-field object of a method on a molecule, silent and without orbitals or checkpoint."""
     from pyscf import dft, scf
 
     if settings.dispersion:
@@ -223,4 +227,8 @@ def _mean_field(mole: Any, settings: MeanField) -> Any:
         mf = mf.sfx2c1e()
     mf.verbose = 0
     mf.chkfile = None
+    temporary = vars(mf).pop("_chkfile", None)
+    if temporary is not None:
+        temporary.close()  # PySCF opens one for every object and leaves it to the garbage collector
+        mf._chkfile = None
     return mf

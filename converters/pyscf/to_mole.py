@@ -20,8 +20,8 @@ from qwfx.model import Basis, Potentials, System, Wavefunction
 
 __all__ = ["Translation", "to_mole", "translate"]
 
-_MOST_RADIAL_POWER = 4  # of r in a term of a core potential: n - 2 with the largest n that PySCF integrates
-_LARGEST_CHANNEL = 5
+_MOST_RADIAL_POWER = 6  # of r in a term of a core potential; tested against closed forms
+_LARGEST_CHANNEL = 5  # PySCF leaves higher ones out without a word
 _WHOLE_WITHIN = 1e-9
 
 
@@ -76,8 +76,26 @@ def _check(system: System, basis: Basis | None) -> None:
         problem, expected = "the basis is of Slater functions", "Gaussian functions: PySCF has no integrals of others"
     elif basis.powers is not None and np.any(basis.powers):
         problem, expected = "Gaussian primitives are multiplied with powers of r", "plain Gaussian primitives"
+    else:
+        zero = [s for s in range(basis.n_shells) if not _self_overlap(basis, s) > 0.0]
+        if zero:
+            problem, expected = f"the radial function of shell {zero[0]} is zero", "functions that have a norm"
+            remedy = "leave the shell out of the basis"
     if problem:
         raise UnsupportedError(problem, where="conversion to PySCF", expected=expected, remedy=remedy)
+
+
+def _self_overlap(basis: Basis, shell: int) -> float:
+    """``int R(r)^2 r^(2l+2) dr`` over its largest single term, so that rounding shows as zero; NaN if not finite."""
+    from scipy.special import gamma
+
+    own = slice(int(basis.primitive_start[shell]), int(basis.primitive_start[shell + 1]))
+    exponents, coefficients = np.asarray(basis.exponents[own]), np.asarray(basis.coefficients[own])
+    half = float(basis.shell_l[shell]) + 1.5
+    terms = np.outer(coefficients, coefficients) * gamma(half) / (2 * np.add.outer(exponents, exponents) ** half)
+    largest = np.abs(terms).max(initial=0.0)
+    share = float(terms.sum() / largest) if largest > 0.0 else 0.0
+    return share if share > 1e-14 else 0.0
 
 
 class _Plan:
@@ -271,9 +289,7 @@ def _ratio(
     theirs: NDArray[np.float64],
     contraction: NDArray[np.float64],
 ) -> float:
-    """Our radial part over PySCF's; the same for every primitive, taken from the largest."""
-    largest = int(np.argmax(np.abs(coefficients)))
-    if coefficients[largest] == 0.0:
-        return 0.0
-    same = np.flatnonzero(theirs == exponents[largest])
-    return float(coefficients[exponents == exponents[largest]].sum() / contraction[same].sum())
+    """Our radial part over PySCF's: one number for all primitives, by least squares."""
+    order = np.lexsort((coefficients, exponents))[::-1]  # PySCF's order: descending
+    contraction = contraction[np.isin(theirs, exponents)]
+    return float(coefficients[order] @ contraction / (contraction @ contraction))
