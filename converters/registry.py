@@ -8,6 +8,7 @@ from importlib.metadata import entry_points
 from pathlib import Path
 
 from qwfx.converters.plugin import Converter
+
 from qwfx.errors import ConversionError, FileError, UnsupportedError
 
 __all__ = ["ENTRY_POINT_GROUP", "available", "by_name", "check_options", "for_target", "recognise"]
@@ -117,7 +118,7 @@ def check_options(converter: Converter, options: Mapping[str, str]) -> None:
                 f"the converter {converter.name} has no option {name!r}",
                 where=f"--set {name}={value}",
                 expected=", ".join(known) or "no options",
-                remedy=f"see `qwfx convert --formats`",
+                remedy="see `qwfx convert --formats`",
             )
         choices = known[name].choices
         if choices and value not in choices:
