@@ -205,7 +205,7 @@ def _at_center(shell: Shell) -> NDArray[np.float64]:
             j = n + shell.q * order
             series[j] = series.get(j, 0.0) + c * (-a) ** order / math.factorial(order)
     polynomials = shell_polynomials(l, shell.monomial)
-    mean_p, mean_r_p, mean_gradient, mean_laplacian = (polynomials @ part for part in _means(l))
+    mean_p, mean_r_p, mean_gradient, mean_laplacian = (_snapped(polynomials @ part) for part in _means(l))
     result = np.empty((5, len(polynomials)))
     for f in range(len(polynomials)):
         result[0, f] = _limit({l + j: s * mean_p[f] for j, s in series.items()})
@@ -230,6 +230,11 @@ def _means(l: int) -> tuple[NDArray[np.float64], ...]:  # noqa: E741
     return np.array([mean_over_sphere(*own) for own in powers]), raised, gradient, laplacian
 
 
+def _snapped(means: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Zero in place of what rounding left, which a diverging factor would blow up; exact means are 0 or >> 1e-12."""
+    return np.where(np.abs(means) < 1e-12, 0.0, means)
+
+
 def _shifted(powers: tuple[int, int, int], axis: int, by: int) -> tuple[int, int, int]:
     changed = list(powers)
     changed[axis] += by
@@ -239,4 +244,4 @@ def _shifted(powers: tuple[int, int, int], axis: int, by: int) -> tuple[int, int
 def _limit(terms: dict[int, float]) -> float:
     """Limit of ``sum_j terms[j] r^j`` as r falls to 0."""
     diverging = [j for j, s in terms.items() if j < 0 and s != 0.0]
-    return math.copysign(math.inf, terms[min(diverging)]) if diverging else terms.get(0, 0.0)
+    return math.copysign(math.inf, terms[min(diverging)]) if diverging else terms.get(0, 0.0) + 0.0  # no minus zero
