@@ -28,6 +28,7 @@ __all__ = ["CheckpointConverter"]
 
 HDF5_SIGNATURE = b"\x89HDF\r\n\x1a\n"
 SAME_ENERGY_WITHIN = 1e-6  # hartree; convergence of the stored energy against that of its orbitals
+NATURAL_WITHIN = 1e-6  # electrons, off the diagonal of the density matrix
 LARGEST_CHECKED = 400  # functions; larger molecules would take minutes for one Fock matrix
 UNKNOWN_METHOD = "SCF (method not in the checkpoint)"
 _REMEDY = "check that the file is complete, or write the checkpoint again with PySCF"
@@ -227,9 +228,17 @@ def _mcscf_parts(mol: Any, content: dict[str, Any], where: str) -> Parts:
     if parts.occupations is None and density is not None and np.shape(density) == (active, active):
         parts.coefficients, parts.occupations = _natural(coefficients[0], np.asarray(density), core, active)
         parts.notes.append("the active orbitals were turned into natural orbitals")
+    elif density is not None and _off_diagonal(np.asarray(density)) > NATURAL_WITHIN:
+        parts.notes.append("the active orbitals are not natural orbitals: each occupation is an expectation value")
     if parts.occupations is None:
         parts.notes.append("the checkpoint has no occupations of its active orbitals")
     return parts
+
+
+def _off_diagonal(density: NDArray[Any]) -> float:
+    if density.ndim != 2 or density.shape[0] != density.shape[1]:
+        return 0.0
+    return float(np.abs(density - np.diag(np.diag(density))).max(initial=0.0))
 
 
 def _natural(

@@ -118,11 +118,12 @@ def symmetry_numbers(labels: tuple[str, ...]) -> NDArray[np.int32] | None:
     numbers them so that the last decimal digit is that number). None if no group has all the labels.
     """
     from pyscf import symm
+    from pyscf.lib.exceptions import PointGroupSymmetryError
 
     for group in ("C1", "Ci", "C2", "Cs", "C2h", "C2v", "D2", "D2h", "Coov", "Dooh"):
         try:
             numbers = [symm.irrep_name2id(group, label) for label in labels]
-        except (KeyError, ValueError):
+        except (KeyError, ValueError, PointGroupSymmetryError):
             continue
         return np.array(numbers, dtype=np.int32) % 10
     return None

@@ -227,7 +227,7 @@ def _symbols(system: System, contents: list[tuple[Any, int, Any]]) -> list[str]:
     ):
         return [symbol for symbol in kept if symbol]
     plain = [f"{'GHOST-' if ghost else ''}{ELEMENTS[number] if number else ''}" for number, ghost in identities]
-    return [f"{symbol.rstrip('-')}{atom + 1}" for atom, symbol in enumerate(plain)]
+    return [_as_symbol(f"{symbol.rstrip('-')}{atom + 1}") for atom, symbol in enumerate(plain)]
 
 
 def _as_symbol(label: str) -> str:
