@@ -16,9 +16,9 @@ from qwfx.converters.plugin import Option, Progress, Reading, Writing
 from qwfx.converters.pyscf.checkpoint_mole import molecule_from_text
 from qwfx.converters.pyscf.describe import ORBITAL_QUANTITIES
 from qwfx.converters.pyscf.energies import energy
-from qwfx.converters.pyscf.from_mean_field import Parts, assemble, energies_table, per_spin
 from qwfx.converters.pyscf.hamiltonian import with_hamiltonian
 from qwfx.converters.pyscf.methods import parse_active_space, parse_mean_field
+from qwfx.converters.pyscf.parts import Parts, assemble, energies_table, per_spin
 from qwfx.converters.pyscf.to_mean_field import hartree_fock_kind, stored_total, to_mean_field
 
 from qwfx.errors import ConversionError, FileError, UnsupportedError
@@ -169,12 +169,13 @@ def _array(content: dict[str, Any], key: str, where: str) -> Any:
     return values
 
 
-def _number(content: dict[str, Any], key: str) -> float | None:
+def _numbers(content: dict[str, Any], key: str) -> list[float]:
+    """One finite number, or nothing."""
     try:
         value = float(np.real(content[key]))
     except (KeyError, TypeError, ValueError):
-        return None
-    return value if np.isfinite(value) else None
+        return []
+    return [value] if np.isfinite(value) else []
 
 
 def _scf_parts(mol: Any, content: dict[str, Any], where: str) -> Parts:
@@ -191,7 +192,7 @@ def _scf_parts(mol: Any, content: dict[str, Any], where: str) -> Parts:
         coefficients=coefficients,
         occupations=per_spin(_array(content, "mo_occ", where), 1),
         energies=per_spin(content.get(f"mo_{ORBITAL_QUANTITIES[2]}"), 1) or None,
-        total_energy=_number(content, "e_tot"),
+        totals=_numbers(content, "e_tot"),
     )
 
 
@@ -221,7 +222,7 @@ def _mcscf_parts(mol: Any, content: dict[str, Any], where: str) -> Parts:
         coefficients=coefficients,
         occupations=per_spin(content.get("mo_occ"), 1) or None,
         method=f"CASSCF({electrons},{active})",
-        total_energy=_number(content, "e_tot"),
+        totals=_numbers(content, "e_tot"),
         roles=("core",) * core + ("active",) * active + ("virtual",) * (n_orbitals - core - active),
     )
     density = content.get("casdm1")
@@ -263,7 +264,7 @@ def _with_method(wavefunction: Wavefunction, parts: Parts, named: str | None) ->
             expected="RHF, ROHF, UHF, or such as RKS/b3lyp, ROKS/pbe,pbe, UKS/lda,vwn",
             remedy="correct the method, or leave it out",
         )
-    stored = parts.total_energy
+    stored = parts.totals[0] if parts.totals else None
     method = named or UNKNOWN_METHOD
     if stored is not None and named is None:
         hartree_fock = hartree_fock_kind(wavefunction)
@@ -283,7 +284,7 @@ def _with_method(wavefunction: Wavefunction, parts: Parts, named: str | None) ->
                     f"{found:.8f}: a Kohn-Sham calculation, density fitting, a solvent, or not converged; name the "
                     "method with --set method=..."
                 )
-    return replace(wavefunction, energies=energies_table(method, stored, float(parts.mol.energy_nuc())))
+    return replace(wavefunction, energies=energies_table(method, parts.totals, float(parts.mol.energy_nuc())))
 
 
 def _with_notes(wavefunction: Wavefunction, notes: list[str]) -> Wavefunction:

@@ -8,7 +8,7 @@ from qwfx.converters.pyscf.methods import DEFAULT_GRID_LEVEL, MeanField
 
 from qwfx.errors import ConversionError, UnsupportedError
 
-__all__ = ["ORBITAL_QUANTITIES", "describe_method"]
+__all__ = ["ORBITAL_QUANTITIES", "describe_method", "reference_details"]
 
 ORBITAL_QUANTITIES = ("coeff", "occ", "energy")
 """What PySCF's mean-field objects hold of the orbitals, in attributes that begin with ``mo_``."""
@@ -40,6 +40,13 @@ def describe_method(mf: Any) -> tuple[str, list[str]]:
         text += " (density fitting with an auxiliary basis without a name)"
         notes.append("the auxiliary basis of the density fitting has no name, so the energy cannot be recomputed")
     return text, notes
+
+
+def reference_details(mf: Any) -> str:
+    """What of a mean-field reference enters the Hamiltonian of a later calculation, as text to append to its method."""
+    method = MeanField(kind="R", scalar_x2c=_is_scalar_x2c(mf), **_fitting(mf, None))
+    unnamed = getattr(mf, "with_df", None) is not None and not method.auxiliary
+    return " (density fitting with an auxiliary basis without a name)" if unnamed else str(method)[len("RHF") :]
 
 
 def _kind(mf: Any) -> str:

@@ -122,7 +122,7 @@ def basis_of(mol: Any) -> Basis:
     """
     center, angular, sizes, exponents, coefficients = [], [], [], [], []
     for shell in range(mol.nbas):
-        l = mol.bas_angular(shell)  # noqa: E741 - the letter of the formulas
+        l = mol.bas_angular(shell)
         shell_exponents = mol.bas_exp(shell)
         contractions = mol._libcint_ctr_coeff(shell)
         if mol.cart and l < 2:
@@ -151,7 +151,7 @@ def function_order(mol: Any) -> NDArray[np.int64]:
     """(F) for each function of `basis_of` its position in PySCF's order: ``ours = theirs[order]``."""
     order: list[int] = []
     for shell in range(mol.nbas):
-        l = mol.bas_angular(shell)  # noqa: E741
+        l = mol.bas_angular(shell)
         size = (l + 1) * (l + 2) // 2 if mol.cart else 2 * l + 1
         within = [1, 2, 0] if l == 1 and not mol.cart else list(range(size))
         for _ in range(mol.bas_nctr(shell)):

@@ -19,7 +19,7 @@ def gaussian_moment(power: int, exponent: float) -> float:
     return gamma((power + 1) / 2) / (2 * exponent ** ((power + 1) / 2))
 
 
-def matrix_element(potentials: Potentials, l: int, exponent: float) -> float:  # noqa: E741
+def matrix_element(potentials: Potentials, l: int, exponent: float) -> float:
     """<g|V|g> of the normalised on-centre Gaussian r^l exp(-a r^2), straight from FORMAT.md's formula."""
     norm = gaussian_moment(2 * l + 2, 2 * exponent)
     total = 0.0
@@ -39,7 +39,7 @@ CLOSED_FORMS = {0: 1.976450760611971, 1: -0.020047979842980, 2: -0.0063392356383
 def test_stored_table_gives_the_closed_forms():
     table, cores = potentials_from_library({"C": "ccecp"}, ["C"], [6])
     assert cores.tolist() == [2]
-    for l, expected in CLOSED_FORMS.items():  # noqa: E741
+    for l, expected in CLOSED_FORMS.items():
         assert matrix_element(table, l, BASIS["C"][l][1][0]) == pytest.approx(expected, abs=1e-14)
 
 
@@ -56,7 +56,7 @@ def test_table_reaches_pyscf_and_comes_back():
     assert rows(wavefunction.potentials) == rows(table)
     mole = to_mole(wavefunction)
     integrals = mole.intor("ECPscalar")
-    for l, position in ((0, 0), (1, 1), (2, 4)):  # noqa: E741
+    for l, position in ((0, 0), (1, 1), (2, 4)):
         assert integrals[position, position] == pytest.approx(CLOSED_FORMS[l], abs=1e-12)
     assert rows(from_pyscf(mole).potentials) == rows(table)
     np.testing.assert_allclose(integrals, mol.intor("ECPscalar"), rtol=0, atol=1e-14)
@@ -65,7 +65,7 @@ def test_table_reaches_pyscf_and_comes_back():
 @pytest.mark.parametrize("channel", range(-1, 6))
 @pytest.mark.parametrize("power", range(-2, 7))
 def test_every_power_and_channel_that_is_handed_to_pyscf(channel, power):
-    l = max(channel, 0)  # noqa: E741
+    l = max(channel, 0)
     mol = molecule(atom="Ne 0 0 0", basis={"Ne": [[l, [1.3, 1.0]]]})
     table = Potentials(
         np.zeros(2, np.int32),
