@@ -1,6 +1,6 @@
 """Outlines for the tests, written with a few helpers; ``schema/examples/`` holds them as JSON for everybody.
 
-``python tests/schema/schema_outlines.py`` writes the examples anew.
+``python tests/schema_outlines.py`` writes the examples anew.
 """
 
 from __future__ import annotations
@@ -10,7 +10,7 @@ import json
 from pathlib import Path
 from typing import Any
 
-EXAMPLES = Path(__file__).parents[2] / "schema" / "examples"
+EXAMPLES = Path(__file__).parents[1] / "schema" / "examples"
 Json = dict[str, Any]
 
 
