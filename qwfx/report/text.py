@@ -9,7 +9,7 @@ from rich.padding import Padding
 from rich.table import Table
 from rich.text import Text
 
-from qwfx.findings import ExitCode, Finding, Outcome, Report, RuleResult, Severity
+from qwfx.findings import ExitCode, Finding, Outcome, Report, Severity
 
 __all__ = ["render_text", "verdict"]
 
@@ -24,7 +24,6 @@ OUTCOME_STYLE = {
 }
 WIDTH = 100
 """Columns where the output is not a terminal, so that a saved report reads the same everywhere."""
-SHOWN_MEASURES = 110
 
 
 def render_text(reports: Report | Sequence[Report], console: Console | None = None, *, verbose: bool = False) -> None:
@@ -63,9 +62,9 @@ def verdict(report: Report) -> str:
 def _whole(report: Report, verbose: bool) -> RenderableType:
     head = Text.assemble((report.file, "bold"), ": ", (verdict(report), VERDICT_STYLE[report.exit_code]))
     if report.failure:
-        return Group(head, Padding(Text(report.failure), (0, 0, 0, 2)))
+        return Group(head, Padding(Text(report.failure), (0, 0, 0, 2), expand=False))
     parts: list[RenderableType] = [head]
-    parts += [Padding(Text(note, style="dim"), (0, 0, 0, 2)) for note in report.notes]
+    parts += [Padding(Text(note, style="dim"), (0, 0, 0, 2), expand=False) for note in report.notes]
     for finding in report.findings:
         parts += [Text(""), _finding(finding)]
     parts += [Text(""), _every_rule(report) if verbose else _tiers(report)]
@@ -85,32 +84,26 @@ def _finding(finding: Finding) -> RenderableType:
     grid.add_row("expected", Text(finding.expected))
     grid.add_row("found", Text(finding.found))
     grid.add_row("to do", Text(finding.remedy))
-    return Group(head, Padding(grid, (0, 0, 0, 2)))
+    return Group(head, Padding(grid, (0, 0, 0, 2), expand=False))
 
 
-def _tiers(report: Report) -> Table:
-    """One row a tier: how many rules did what, and the figures of the tiers that compute."""
-    table = _table("tier", "run", "found", "skipped", "not evaluated", "broken", "measured")
+def _tiers(report: Report) -> RenderableType:
+    """How many rules of each tier did what, and the figures of the tiers that compute."""
+    table = _table("tier", "run", "found", "skipped", "not evaluated", "broken")
     for tier in dict.fromkeys(r.tier for r in report.results):
         rules = [r for r in report.results if r.tier == tier]
         n = {outcome: sum(r.outcome is outcome for r in rules) for outcome in Outcome}
-        ran = n[Outcome.PASSED] + n[Outcome.FOUND]
-        cells = [
-            str(ran),
-            *(
-                str(n[o]) if n[o] else "."
-                for o in (Outcome.FOUND, Outcome.SKIPPED, Outcome.NOT_EVALUATED, Outcome.BROKEN)
-            ),
-        ]
-        table.add_row(tier, *cells, _figures(rules))
-    return table
-
-
-def _figures(rules: Sequence[RuleResult]) -> Text:
-    """What the rules that judge by a figure measured."""
-    lines = [f"{r.rule}: {r.measured}" for r in rules if r.measured and r.tier in ("algebra", "witness", "digests")]
-    lines = [line if len(line) <= SHOWN_MEASURES else line[: SHOWN_MEASURES - 3] + "..." for line in lines]
-    return Text("\n".join(lines))
+        shown = (Outcome.FOUND, Outcome.SKIPPED, Outcome.NOT_EVALUATED, Outcome.BROKEN)
+        table.add_row(tier, str(n[Outcome.PASSED] + n[Outcome.FOUND]), *(str(n[o]) if n[o] else "." for o in shown))
+    figures = [r for r in report.results if r.measured and r.tier in ("algebra", "witness", "digests")]
+    if not figures:
+        return table
+    grid = Table.grid(padding=(0, 2, 0, 0))
+    grid.add_column(no_wrap=True)
+    grid.add_column(overflow="fold")
+    for result in figures:
+        grid.add_row(result.rule, Text(result.measured))
+    return Group(table, Text(""), Text("measured", style="dim"), grid)
 
 
 def _every_rule(report: Report) -> Table:

@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 from qwfx.findings import Severity
 from qwfx.rules.inspection import Inspection
 from qwfx.rules.registry import Covered, Measured, Premise, PremiseError, Problem, Purpose, Remark, rule
-from qwfx.rules.wording import at, figure, first_true
+from qwfx.rules.wording import at, every, figure, first_true
 
 __all__ = ["BASIS_RULES", "ORTHONORMAL_ERROR", "ORTHONORMAL_WARNING"]
 
@@ -136,4 +136,4 @@ def linear_dependence(file: Inspection) -> Iterator[Remark]:
             "orbital coefficients lose digits by cancellation: remove diffuse or duplicate functions",
             None if singular else Severity.NOTE,
         )
-    yield Covered(f"all {len(S)} functions")
+    yield Covered(every(len(S), "function"))

@@ -9,7 +9,7 @@ import numpy as np
 from qwfx.findings import Severity
 from qwfx.rules.inspection import Inspection
 from qwfx.rules.registry import Covered, Premise, Problem, Remark, rule
-from qwfx.rules.wording import at, first_true
+from qwfx.rules.wording import at, every, first_true
 
 __all__: list[str] = []
 
@@ -69,7 +69,7 @@ def atom_indices(file: Inspection) -> Iterator[Remark]:
                 "count atoms from 0",
                 count=int(outside.sum()),
             )
-        yield Covered(f"all {len(index)} of {member}")
+        yield Covered(every(len(index), f"element of {member}"))
 
 
 @rule(
@@ -105,7 +105,7 @@ def angular_momenta(file: Inspection) -> Iterator[Remark]:
                 str(powers[i]),
                 "r^l belongs to the angular part: powers count what is beyond it",
             )
-    yield Covered(f"all {len(angular)} shells")
+    yield Covered(every(len(angular), "shell"))
 
 
 @rule(
@@ -135,7 +135,7 @@ def primitive_offsets(file: Inspection) -> Iterator[Remark]:
             str(start[i + 1]),
             remedy,
         )
-    yield Covered(f"all {len(start)} offsets")
+    yield Covered(every(len(start), "offset"))
 
 
 @rule(
@@ -154,7 +154,7 @@ def positive_exponents(file: Inspection) -> Iterator[Remark]:
             f"{exponents[i]:g}",
             "correct the exponent",
         )
-    yield Covered(f"all {len(exponents)} primitives")
+    yield Covered(every(len(exponents), "primitive"))
 
 
 @rule(
@@ -176,7 +176,7 @@ def empty_contractions(file: Inspection) -> Iterator[Remark]:
             f"shell {s} has none, so its functions vanish",
             "remove the shell, or write its coefficients",
         )
-    yield Covered(f"all {len(largest)} shells")
+    yield Covered(every(len(largest), "shell"))
 
 
 @rule(
@@ -206,4 +206,4 @@ def function_count(file: Inspection) -> Iterator[Remark]:
                 f"{columns}{hint}{swapped}",
                 "write (orbitals, functions), with the functions that the shells define",
             )
-    yield Covered(f"{len(file.orbital_sets)} orbital sets")
+    yield Covered(every(len(file.orbital_sets), "orbital set"))

@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 from qwfx.findings import Severity
 from qwfx.rules.inspection import Inspection
 from qwfx.rules.registry import Covered, Measured, Premise, Problem, Purpose, Remark, rule
-from qwfx.rules.wording import at
+from qwfx.rules.wording import at, every
 
 __all__ = ["popcount", "row_slices"]
 
@@ -79,7 +79,7 @@ def string_electrons(file: Inspection) -> Iterator[Remark]:
                 "write all occupied orbitals, frozen ones too, or correct the number of electrons",
                 count=bad,
             )
-        yield Covered(f"all {seen} {spin} strings")
+        yield Covered(every(seen, f"{spin} string"))
 
 
 @rule(
@@ -111,7 +111,7 @@ def string_order(file: Inspection) -> Iterator[Remark]:
                 "sort the strings as integers, most significant word last, and add up entries of like strings",
                 count=bad,
             )
-        yield Covered(f"all {seen} {_spin_of(member)} strings")
+        yield Covered(every(seen, f"{_spin_of(member)} string"))
 
 
 @rule(
@@ -157,7 +157,7 @@ def string_range(file: Inspection) -> Iterator[Remark]:
                 "leave out the words that are always 0",
                 Severity.NOTE,
             )
-        yield Covered(f"all {file.shape(member)[0]} {spin} strings")
+        yield Covered(every(file.shape(member)[0], f"{spin} string"))
 
 
 @rule(
@@ -189,7 +189,7 @@ def row_offsets(file: Inspection) -> Iterator[Remark]:
         )
     if last != entries:
         yield Problem(at(member, file.shape(member)[0] - 1), f"{entries}, the number of entries", str(last), remedy)
-    yield Covered(f"all {file.shape(member)[0]} offsets")
+    yield Covered(every(file.shape(member)[0], "offset"))
 
 
 def row_slices(
@@ -257,7 +257,7 @@ def column_order(file: Inspection) -> Iterator[Remark]:
             "sort the entries of each row by column, and add up entries of like columns",
             count=disorder,
         )
-    yield Covered(f"all {entries} entries")
+    yield Covered(every(entries, "entry"))
 
 
 @rule(

@@ -1,4 +1,4 @@
-"""Tier *consistency*: keys, packed lengths and sparse indices of the Hamiltonian, sizes of density matrices."""
+"""Tier *consistency*: sparse indices, symmetries and capacity of the Hamiltonian."""
 
 from __future__ import annotations
 
@@ -9,13 +9,11 @@ import numpy as np
 from qwfx.findings import Severity
 from qwfx.rules.inspection import Inspection
 from qwfx.rules.registry import Covered, Measured, Premise, PremiseError, Problem, Purpose, Remark, rule
-from qwfx.rules.wording import at, listed
+from qwfx.rules.wording import at, every
 
 __all__ = ["packed_length"]
 
 HAMILTONIAN: tuple[Purpose, ...] = ("hamiltonian",)
-RESTRICTED = (("both",), ("both",))
-RESOLVED = (("down", "up"), ("down_down", "up_down", "up_up"))
 IRREPS = 8
 """Irreps of D2h, the largest group whose products are a bitwise exclusive-or in FCIDUMP order."""
 
@@ -27,68 +25,10 @@ def packed_length(n: int, packing: str, key: str) -> int:
 
 
 @rule(
-    name="hamiltonian-keys",
-    tier="consistency",
-    severity=Severity.ERROR,
-    premise=Premise(members=("/hamiltonian",)),
-    purposes=HAMILTONIAN,
-    summary="integrals are all spin-restricted or all spin-resolved, and complete",
-)
-def hamiltonian_keys(file: Inspection) -> Iterator[Remark]:
-    one, two = file.members("/hamiltonian/one_body"), file.members("/hamiltonian/two_body")
-    if (one, two) not in (RESTRICTED, RESOLVED):
-        yield Problem(
-            "/hamiltonian",
-            "one_body both and two_body both; or up, down and up_up, up_down, down_down",
-            f"one_body {listed(one) or 'nothing'}; two_body {listed(two) or 'nothing'}",
-            "write all integrals of one kind",
-        )
-    strange = [key for key in file.members("/hamiltonian/orbital_energies") if key not in one]
-    if strange:
-        yield Problem(
-            f"/hamiltonian/orbital_energies/{strange[0]}",
-            f"keys as in one_body: {listed(one)}",
-            listed(strange),
-            "name orbital energies by the spin of their one-body integrals",
-        )
-    yield Covered("all keys")
-
-
-@rule(
-    name="packed-length",
-    tier="consistency",
-    severity=Severity.ERROR,
-    premise=Premise(members=("/hamiltonian",), rules=("hamiltonian-keys",)),
-    purposes=HAMILTONIAN,
-    summary="dense two-electron integrals have the length that n_orbitals and the packing give",
-)
-def packed_length_rule(file: Inspection) -> Iterator[Remark]:
-    n, packing = file.integer("/hamiltonian", "n_orbitals"), file.attribute("/hamiltonian", "packing")
-    dense = 0
-    for key in file.members("/hamiltonian/two_body"):
-        member = f"/hamiltonian/two_body/{key}/values"
-        if file.has(f"/hamiltonian/two_body/{key}/index") or not file.usable(member):
-            continue
-        dense += 1
-        length, wanted = file.shape(member)[0], packed_length(n, packing, key)
-        if length != wanted:
-            other = "complex" if packing == "real" else "real"
-            hint = f", the length of packing {other!r}" if length == packed_length(n, other, key) else ""
-            hint = ", all n^4 elements without packing" if length == n**4 and not hint else hint
-            yield Problem(
-                member,
-                f"{wanted} values for {n} orbitals, packing {packing!r}",
-                f"{length}{hint}",
-                "pack the integrals as FORMAT.md says, or add their index",
-            )
-    yield Covered(f"{dense} dense data sets")
-
-
-@rule(
     name="sparse-index",
     tier="consistency",
     severity=Severity.ERROR,
-    premise=Premise(members=("/hamiltonian",), rules=("hamiltonian-keys",)),
+    premise=Premise(members=("/hamiltonian/two_body",)),
     cost="one pass over the index of two-electron integrals",
     purposes=HAMILTONIAN,
     summary="positions of sparse two-electron integrals are strictly ascending and within the packed vector",
@@ -160,7 +100,7 @@ def symmetry_numbers(file: Inspection) -> Iterator[Remark]:
     state = file.attribute("/hamiltonian", "state_symmetry")
     if state is not None and not 0 <= int(state) < IRREPS:
         yield Problem("/hamiltonian@state_symmetry", f"0 to {IRREPS - 1}", str(state), "count irreps from 0")
-    yield Covered(f"all {len(numbers)} orbitals")
+    yield Covered(every(len(numbers), "orbital"))
 
 
 @rule(

@@ -9,7 +9,7 @@ import numpy as np
 from qwfx.findings import Severity
 from qwfx.rules.inspection import Inspection
 from qwfx.rules.registry import Covered, Measured, Premise, PremiseError, Problem, Purpose, Remark, rule
-from qwfx.rules.wording import at, listed
+from qwfx.rules.wording import at, every, listed
 
 __all__: list[str] = []
 
@@ -153,16 +153,18 @@ def kpoint_indices(file: Inspection) -> Iterator[Remark]:
 )
 def spin_partners(file: Inspection) -> Iterator[Remark]:
     spins = {name: file.spin(name) for name in file.orbital_sets}
-    for spin in ("up", "down"):
-        electrons = file.integer("/system", f"n_{spin}")
-        if electrons and not {spin, "both"} & set(spins.values()):
-            yield Problem(
-                "/orbitals",
-                f"a set with spin {spin} or both, for {electrons} {spin} electrons",
-                f"{listed(f'{n} (spin {s})' for n, s in spins.items()) or 'no set'}",
-                "add the set of the other spin, or mark the set as both",
-            )
-    yield Covered(f"{len(spins)} orbital sets")
+    if not spins:
+        raise PremiseError("the file has no orbital set")
+    lonely = [s for s in ("up", "down") if file.integer("/system", f"n_{s}") and not {s, "both"} & set(spins.values())]
+    if lonely:
+        electrons = " and ".join(f"{file.integer('/system', f'n_{s}')} {s}" for s in lonely)
+        yield Problem(
+            "/orbitals",
+            f"a set with spin {' or '.join(lonely)}, or both, for {electrons} electrons",
+            listed(f"{n} (spin {s})" for n, s in spins.items()),
+            "add the set of the other spin, or mark the set as both",
+        )
+    yield Covered(every(len(spins), "orbital set"))
 
 
 @rule(
@@ -188,7 +190,7 @@ def named_sets(file: Inspection) -> Iterator[Remark]:
                     repr(name),
                     "write the set, or name one that is there",
                 )
-            elif file.spin(name) not in (spin, "both"):
+            elif file.spin(name) not in (spin, "both") and file.integer("/system", f"n_{spin}"):
                 yield Problem(
                     where,
                     f"a set with spin {spin} or both",

@@ -9,7 +9,7 @@ import numpy as np
 from qwfx.findings import Severity
 from qwfx.rules.inspection import Inspection
 from qwfx.rules.registry import Covered, Measured, Premise, Problem, Remark, rule
-from qwfx.rules.wording import at, figure
+from qwfx.rules.wording import at, every, figure
 
 __all__: list[str] = []
 
@@ -39,7 +39,7 @@ def potential_terms(file: Inspection) -> Iterator[Remark]:
             f"{exponents[i]:g}",
             "correct the exponent, or remove the term",
         )
-    yield Covered(f"all {len(exponents)} terms")
+    yield Covered(every(len(exponents), "term"))
 
 
 def _local_pole(file: Inspection) -> np.ndarray:
@@ -109,7 +109,7 @@ def core_charges(file: Inspection) -> Iterator[Remark]:
                 "check the effective charge against the source of the potential",
                 Severity.WARNING,
             )
-    yield Covered(f"all {len(numbers)} atoms")
+    yield Covered(every(len(numbers), "atom"))
     yield Measured(f"{np.count_nonzero(terms)} atoms with core potentials")
 
 

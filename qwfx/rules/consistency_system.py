@@ -11,7 +11,7 @@ from qwfx.findings import Severity
 from qwfx.rules.elements import BOHR, COVALENT_RADII, NOBLE, SYMBOLS, element_readings
 from qwfx.rules.inspection import Inspection
 from qwfx.rules.registry import Covered, Measured, Premise, PremiseError, Problem, Remark, rule
-from qwfx.rules.wording import at, listed
+from qwfx.rules.wording import at, every, listed
 
 __all__: list[str] = []
 
@@ -27,18 +27,13 @@ TOO_CLOSE = 0.6  # bohr: less than half the shortest bond (H2, 1.4 bohr)
     tier="consistency",
     severity=Severity.ERROR,
     premise=Premise(members=("/system",)),
-    summary="n_up and n_down are not negative, and there is an electron",
+    summary="there is at least one electron",
 )
 def electron_count(file: Inspection) -> Iterator[Remark]:
-    counts = {name: file.integer("/system", name) for name in ("n_up", "n_down")}
-    for name, n in counts.items():
-        if n < 0:
-            yield Problem(
-                f"/system@{name}", "a number of electrons, 0 or more", str(n), "write the number of electrons"
-            )
-    if sum(counts.values()) == 0:
+    n_up, n_down = file.integer("/system", "n_up"), file.integer("/system", "n_down")
+    if n_up + n_down == 0:
         yield Problem("/system@n_up", "at least one electron", "n_up = n_down = 0", "write the numbers of electrons")
-    yield Measured(f"n_up = {counts['n_up']}, n_down = {counts['n_down']}")
+    yield Measured(f"n_up = {n_up}, n_down = {n_down}")
 
 
 @rule(
@@ -83,7 +78,7 @@ def atomic_numbers(file: Inspection) -> Iterator[Remark]:
             f"{charges[i]:g}",
             "write the atomic number less the electrons in the core potential, 0 for a ghost",
         )
-    yield Covered(f"all {len(numbers)} atoms")
+    yield Covered(every(len(numbers), "atom"))
 
 
 @rule(
@@ -104,7 +99,7 @@ def element_labels(file: Inspection) -> Iterator[Remark]:
                 repr(label),
                 "correct the label or the atomic number: one of them belongs to another atom",
             )
-    yield Covered(f"all {len(labels)} labels")
+    yield Covered(every(len(labels), "label"))
 
 
 @rule(
@@ -190,7 +185,7 @@ def coincident_nuclei(file: Inspection) -> Iterator[Remark]:
             "nothing, if two basis sets on one atom are meant",
             Severity.NOTE,
         )
-    yield Covered(f"all {len(i)} pairs of atoms")
+    yield Covered(every(len(i), "pair of atoms"))
     if len(distance):
         yield Measured(f"shortest distance {distance.min():.4g} bohr")
 

@@ -11,7 +11,7 @@ from qwfx.findings import Severity
 from qwfx.rules.consistency_system import MANY_ATOMS
 from qwfx.rules.inspection import Inspection
 from qwfx.rules.registry import Covered, Measured, Premise, PremiseError, Problem, Remark, rule
-from qwfx.rules.wording import at, figure, listed
+from qwfx.rules.wording import at, every, figure, listed
 
 __all__: list[str] = []
 
@@ -39,7 +39,7 @@ def energies_table(file: Inspection) -> Iterator[Remark]:
     keys = zip(state.tolist(), file.strings("/energies/method"), file.strings("/energies/quantity"), strict=True)
     for row, key in enumerate(keys):
         first = known.setdefault(key, row)
-        slack = 1e-8 + 5 * float(uncertainty[row] + uncertainty[first])
+        slack = 1e-8 + 5 * float(abs(uncertainty[row]) + abs(uncertainty[first]))
         if abs(value[row] - value[first]) > slack:
             yield Problem(
                 at("/energies/value", row),
@@ -56,7 +56,7 @@ def energies_table(file: Inspection) -> Iterator[Remark]:
                 "check the unit and what the number is",
                 Severity.WARNING,
             )
-    yield Covered(f"all {len(value)} rows")
+    yield Covered(every(len(value), "row"))
 
 
 @rule(
@@ -160,4 +160,4 @@ def provenance_steps(file: Inspection) -> Iterator[Remark]:
                 "say what was done in each step",
                 Severity.WARNING,
             )
-    yield Covered(f"all {len(steps)} steps")
+    yield Covered(every(len(steps), "step"))

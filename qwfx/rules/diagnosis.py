@@ -11,6 +11,7 @@ from numpy.typing import NDArray
 
 from qwfx.model import Basis
 from qwfx.rules.elements import BOHR
+from qwfx.rules.evaluator import evaluate_orbitals
 
 __all__ = ["explain_mismatch"]
 
@@ -37,8 +38,6 @@ def explain_mismatch(
     word : which of the three disagrees.
     bad : (M) the orbitals that disagree.
     """
-    from qwfx.kernels import evaluate_orbitals
-
     ours = np.asarray(evaluate_orbitals(basis, positions, C, points, derivatives=2))
     mine = {"values": ours[0], "gradients": np.moveaxis(ours[1:4], 0, -1), "laplacians": ours[4]}[word]
     factor = _common_factor(mine[:, bad], witness[word][:, bad])

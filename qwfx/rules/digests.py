@@ -6,7 +6,7 @@ from collections.abc import Iterator
 
 from qwfx.findings import Severity
 from qwfx.rules.inspection import Inspection
-from qwfx.rules.registry import Covered, Measured, Premise, PremiseError, Problem, Remark, rule
+from qwfx.rules.registry import Covered, Measured, Premise, Problem, Remark, rule
 
 __all__: list[str] = []
 
@@ -49,21 +49,12 @@ def member_digests(file: Inspection) -> Iterator[Remark]:
     name="content-digest",
     tier="digests",
     severity=Severity.ERROR,
-    premise=Premise(rules=("version",)),
+    premise=Premise(members=("/digests",), rules=("version",)),
     cost="one pass over the whole file",
     summary="the content digest at the root is that of the physics in the file",
 )
 def content_digest(file: Inspection) -> Iterator[Remark]:
     stored = file.attribute("/", "content_digest")
-    if not file.has("/digests"):
-        yield Problem(
-            "/digests",
-            "digests of all members",
-            "none",
-            "save the file with qwfx, or write /digests as in FORMAT.md: without it damage goes unseen",
-            Severity.WARNING,
-        )
-        raise PremiseError("the file has no digests")
     computed = file.digests.content_digest_computed
     if stored != computed:
         yield Problem(

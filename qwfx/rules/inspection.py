@@ -198,7 +198,7 @@ class Inspection:
             raise PremiseError(f"{n} functions; the overlap matrix is formed for up to {OVERLAP_LIMIT}")
         if self.progress is not None:
             self.progress("overlap integrals", 0.0)
-        from qwfx.kernels import overlap
+        from qwfx.rules.evaluator import overlap
 
         return np.asarray(overlap(self.basis, self.positions))
 

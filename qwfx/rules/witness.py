@@ -10,7 +10,9 @@ from numpy.typing import NDArray
 
 from qwfx.findings import Severity
 from qwfx.rules.algebra_orbitals import BASIS_RULES
+from qwfx.rules.configurations import DeterminantSum, evaluate, occupied
 from qwfx.rules.diagnosis import explain_mismatch
+from qwfx.rules.evaluator import evaluate_orbitals
 from qwfx.rules.inspection import Inspection
 from qwfx.rules.registry import Covered, Measured, Premise, PremiseError, Problem, Purpose, Remark, rule
 from qwfx.rules.wording import at, figure
@@ -55,12 +57,6 @@ def witness_presence(file: Inspection) -> Iterator[Remark]:
         yield Measured(f"by {evaluator} {file.attribute('/witness', 'evaluator_version', '')}".rstrip())
 
 
-def _evaluate(file: Inspection, C: NDArray[Any], points: NDArray[np.float64]) -> NDArray[Any]:
-    from qwfx.kernels import evaluate_orbitals
-
-    return np.asarray(evaluate_orbitals(file.basis, file.positions, C, points, derivatives=2))
-
-
 def compare_set(
     ours: NDArray[Any], values: NDArray[Any], gradients: NDArray[Any], laplacians: NDArray[Any]
 ) -> dict[str, NDArray[np.float64]]:
@@ -96,7 +92,7 @@ def witness_orbitals(file: Inspection) -> Iterator[Remark]:
             word: np.asarray(file.read(f"/witness/orbitals/{name}/{word}"))
             for word in ("values", "gradients", "laplacians")
         }
-        deviation = compare_set(_evaluate(file, C, points), **witness)
+        deviation = compare_set(evaluate_orbitals(file.basis, file.positions, C, points), **witness)
         figures = ", ".join(f"{word} {figure(d.max(initial=0.0))}" for word, d in deviation.items())
         yield Measured(f"{name}: largest relative deviation: {figures}; tolerance {WITNESS_WARNING:.0e}")
         yield from _judge(file, name, C, points, witness, deviation)
@@ -117,6 +113,7 @@ def _judge(
             continue
         p = int(np.argmax(d))
         error = float(d[p]) > WITNESS_ERROR
+        bad = d > WITNESS_ERROR if error else bad
         why = explain_mismatch(file.basis, file.positions, C, points, witness, word, bad) if error else ""
         yield Problem(
             at(f"/witness/orbitals/{name}/{word}", (0, p)),
@@ -130,3 +127,84 @@ def _judge(
         )
         if word == "values":
             return  # wrong values make the derivatives wrong: one cause, one finding
+
+
+OPERATIONS = 2e10
+"""Floating-point operations that the comparison of configurations may take; the rest is left out and said."""
+
+
+def _expansion(file: Inspection) -> DeterminantSum:
+    row_start = file.read("/expansion/row_start").astype(np.int64)
+    strings = {
+        spin: occupied(file.read(f"/expansion/{spin}_strings").astype(np.uint64), file.integer("/system", f"n_{spin}"))
+        for spin in ("up", "down")
+    }
+    return DeterminantSum(
+        strings["up"],
+        strings["down"],
+        np.repeat(np.arange(len(row_start) - 1), np.diff(row_start)),
+        file.read("/expansion/columns").astype(np.int64),
+        np.asarray(file.read("/expansion/coefficients")),
+    )
+
+
+@rule(
+    name="witness-configurations",
+    tier="witness",
+    severity=Severity.ERROR,
+    premise=Premise(
+        members=(*MOLECULE, "/expansion", "/witness/configurations"),
+        absent=("/system/cell",),
+        rules=(*BASIS_RULES, "string-electrons", "string-range", "row-offsets", "column-order"),
+    ),
+    cost="all determinants at each configuration, within a limit",
+    purposes=("trial",),
+    summary="D evaluated from the file equals the witness in logarithm, sign, gradient and Laplacian",
+)
+def witness_configurations(file: Inspection) -> Iterator[Remark]:
+    group = "/witness/configurations"
+    positions = file.read(f"{group}/positions").astype(np.float64)
+    entries = file.shape("/expansion/columns")[0]
+    if entries > MANY_ENTRIES:
+        raise PremiseError(f"{entries} entries; whole configurations are evaluated for up to {MANY_ENTRIES}")
+    total = _expansion(file)
+    affordable = min(len(positions), int(OPERATIONS / max(total.cost, 1.0)))
+    if not affordable:
+        raise PremiseError(f"{len(total.up)} up and {len(total.down)} down strings are too many to evaluate here")
+    n_up = file.integer("/system", "n_up")
+    theirs = {word: np.asarray(file.read(f"{group}/{word}")) for word in ("log_abs", "sign", "gradients", "laplacian")}
+    worst = dict.fromkeys(theirs, (0.0, 0, 0))
+    sets = [
+        np.asarray(file.read(f"/orbitals/{file.attribute('/expansion', f'{s}_set')}/coefficients"))
+        for s in ("up", "down")
+    ]
+    for m in range(affordable):
+        phi_up = evaluate_orbitals(file.basis, file.positions, sets[0], positions[m, :n_up])
+        phi_down = evaluate_orbitals(file.basis, file.positions, sets[1], positions[m, n_up:])
+        mine = evaluate(total, phi_up, phi_down)
+        for word, value in theirs.items():
+            ours = getattr(mine, word)
+            for state in range(len(ours)):
+                scale = 1.0 if word == "sign" else max(1.0, float(np.abs(value[state, m]).max(initial=0.0)))
+                gap = float(np.abs(ours[state] - value[state, m]).max(initial=0.0)) / scale
+                if not gap <= worst[word][0]:  # true for NaN as well
+                    worst[word] = (gap, state, m)
+    yield Measured(f"largest deviation: {', '.join(f'{w} {figure(d[0])}' for w, d in worst.items())}")
+    # The first that is off stands for what follows from it: a wrong D has wrong derivatives.
+    off = next((word for word, (gap, _, _) in worst.items() if not gap <= WITNESS_WARNING), None)
+    if off is not None:
+        gap, state, m = worst[off]
+        error = not gap <= WITNESS_ERROR
+        yield Problem(
+            at(f"{group}/{off}", (state, m)),
+            f"{off} of D as evaluated from orbitals and expansion, to {WITNESS_WARNING:.0e}",
+            f"configuration {m}, state {state} is off by {figure(gap)}",
+            "compare the order of electrons, orbitals and strings, and the factor of D, with FORMAT.md"
+            if error
+            else "write witness and coefficients with all their digits",
+            None if error else Severity.WARNING,
+        )
+    yield Covered(f"D at {affordable} of {len(positions)} configurations; potential and local energy are not evaluated")
+
+
+MANY_ENTRIES = 1 << 22

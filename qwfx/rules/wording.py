@@ -8,7 +8,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-__all__ = ["NOISE", "at", "figure", "first_true", "listed"]
+__all__ = ["NOISE", "at", "every", "figure", "first_true", "listed"]
 
 NOISE = 1e-12
 """Deviations below this are rounding and are reported as such, so that reports do not depend on the machine."""
@@ -20,6 +20,15 @@ def at(member: str, index: Any = None) -> str:
         return member
     parts = index if isinstance(index, tuple) else (index,)
     return f"{member}[{','.join(str(int(i)) for i in parts)}]"
+
+
+def every(n: int, noun: str) -> str:
+    """``all 12 atoms``, ``the only atom``, ``no atom``."""
+    if n < 2:
+        return f"the only {noun}" if n else f"no {noun}"
+    word, _, rest = noun.partition(" of ")
+    plural = f"{word[:-1]}ies" if word.endswith("y") else f"{word}s"
+    return f"all {n} {plural}{' of ' + rest if rest else ''}"
 
 
 def figure(x: float) -> str:

@@ -1,0 +1,50 @@
+"""Which implementation evaluates functions for a rule: the plain one for small files, the fast one for the rest.
+
+Both give the same numbers (property tests hold them together). The plain one needs no compiler, so a small file is
+judged in a fraction of a second even where the compiled kernels are not cached yet.
+"""
+
+from __future__ import annotations
+
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from qwfx.model import Basis
+
+__all__ = ["evaluate_orbitals", "overlap"]
+
+PLAIN_PRIMITIVE_PAIRS = 10_000
+"""Pairs of primitives up to which the plain overlap integrals take less time than loading the compiled ones."""
+PLAIN_VALUES = 300_000
+"""Primitives times points, likewise for values at points."""
+
+
+def evaluate_orbitals(
+    basis: Basis,
+    positions: NDArray[np.float64],
+    coefficients: NDArray[Any],
+    points: NDArray[np.float64],
+    *,
+    derivatives: int = 2,
+) -> NDArray[Any]:
+    """(k, n, M) values and derivatives of orbitals; see `qwfx.reference.evaluate_orbitals`."""
+    if len(basis.exponents) * len(points) <= PLAIN_VALUES:
+        from qwfx import reference
+
+        return np.asarray(reference.evaluate_orbitals(basis, positions, coefficients, points, derivatives=derivatives))
+    from qwfx import kernels
+
+    return np.asarray(kernels.evaluate_orbitals(basis, positions, coefficients, points, derivatives=derivatives))
+
+
+def overlap(basis: Basis, positions: NDArray[np.float64]) -> NDArray[np.float64]:
+    """(F, F) overlap of the functions; see `qwfx.reference.overlap`."""
+    if len(basis.exponents) ** 2 <= PLAIN_PRIMITIVE_PAIRS:
+        from qwfx import reference
+
+        return np.asarray(reference.overlap(basis, positions))
+    from qwfx import kernels
+
+    return np.asarray(kernels.overlap(basis, positions))

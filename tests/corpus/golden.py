@@ -1,0 +1,64 @@
+"""Golden reports: what the validator says of each file of the corpus, compared whole.
+
+After a change that is meant, write them anew and read the difference::
+
+    cd tests && python -m corpus.golden
+"""
+
+from __future__ import annotations
+
+import json
+import tempfile
+from pathlib import Path
+from typing import Any
+
+from corpus.edits import blocks_of, build
+from corpus.valid import VALID
+
+from qwfx.report import to_json
+from qwfx.rules import all_rules, page_body
+from qwfx.validate import validate
+
+GOLDEN = Path(__file__).parent / "golden"
+
+
+def cases() -> dict[str, dict[str, str]]:
+    """Name of the golden file -> its examples: one for each valid file and one for each rule."""
+    result = {f"valid-{name}": {"file": name} for name in VALID}
+    for rule in all_rules():
+        result[rule.name] = {heading.lower(): text for heading, text in blocks_of(page_body(rule.name)).items()}
+    return result
+
+
+def report_of(text: str, folder: Path) -> dict[str, Any]:
+    """The JSON report of one example, without what depends on the machine: path and content digest."""
+    report = to_json(validate(build(text, folder / "example.qwfx")))["files"][0]
+    report["file"] = "example.qwfx"
+    report["content_digest"] = "sealed" if report["content_digest"] else ""
+    return dict(report)
+
+
+def dump(reports: dict[str, dict[str, Any]]) -> str:
+    """JSON with one line a rule."""
+    pieces = []
+    for heading, report in reports.items():
+        head = [f"    {json.dumps(key)}: {json.dumps(value)}" for key, value in report.items() if key != "rules"]
+        rules = [f"      {json.dumps(rule, ensure_ascii=False)}" for rule in report["rules"]]
+        body = ",\n".join([*head, '    "rules": [\n' + ",\n".join(rules) + "\n    ]"])
+        pieces.append(f"  {json.dumps(heading)}: {{\n{body}\n  }}")
+    return "{\n" + ",\n".join(pieces) + "\n}\n"
+
+
+def main() -> None:
+    """Write all golden reports."""
+    GOLDEN.mkdir(exist_ok=True)
+    for old in GOLDEN.glob("*.json"):
+        old.unlink()
+    with tempfile.TemporaryDirectory() as folder:
+        for name, examples in cases().items():
+            reports = {heading: report_of(text, Path(folder)) for heading, text in examples.items()}
+            (GOLDEN / f"{name}.json").write_text(dump(reports), encoding="utf-8")
+
+
+if __name__ == "__main__":
+    main()
