@@ -35,7 +35,7 @@ class Shell:
     """One shell of a basis with its numbers at hand."""
 
     center: int
-    l: int  # noqa: E741 - the name of the formulas
+    l: int
     monomial: bool
     q: int
     """2 gaussian, 1 slater."""
@@ -179,7 +179,7 @@ def _radial(shell: Shell, r: NDArray[np.float64]) -> tuple[NDArray[np.float64], 
     ``R'' + 2 (l+1) R'/r = sum c r^(n-2) (n (n+2l+1) - (2n+2l+1+q) t + t^2) exp``.
     """
     radial, slope, bend = np.zeros_like(r), np.zeros_like(r), np.zeros_like(r)
-    q, l = shell.q, shell.l  # noqa: E741
+    q, l = shell.q, shell.l
     for a, c, n in zip(shell.exponents, shell.coefficients, shell.powers.tolist(), strict=True):
         decay = c * np.exp(-a * r**q)
         t_over_r2 = q * a * r ** (q - 2.0)  # 2a for a Gaussian: no digits lost to r^2 / r^2 close to the centre
@@ -198,7 +198,7 @@ def _at_center(shell: Shell) -> NDArray[np.float64]:
     ``sum_j s_j r^(l+j) M(p)``, ``sum_j s_j r^(l+j-1) (j M(x p) + M(dp/dx))`` and
     ``sum_j s_j r^(l+j-2) (j (j+2l+1) M(p) + M(lap p))``. Powers above j = 2 - l vanish with r.
     """
-    l = shell.l  # noqa: E741
+    l = shell.l
     series: dict[int, float] = {}
     for a, c, n in zip(shell.exponents.tolist(), shell.coefficients.tolist(), shell.powers.tolist(), strict=True):
         for order in range(max(0, (2 - l - n) // shell.q + 1)):
@@ -217,7 +217,7 @@ def _at_center(shell: Shell) -> NDArray[np.float64]:
     return result
 
 
-def _means(l: int) -> tuple[NDArray[np.float64], ...]:  # noqa: E741
+def _means(l: int) -> tuple[NDArray[np.float64], ...]:
     """Means over the unit sphere of the monomials, of (x, y, z) times them, of their gradients and Laplacians."""
     powers = monomial_powers(l)
     raised, gradient, laplacian = np.zeros((len(powers), 3)), np.zeros((len(powers), 3)), np.zeros(len(powers))

@@ -19,13 +19,13 @@ Polynomial = dict[tuple[int, int, int], Fraction]
 
 
 @cache
-def monomial_powers(l: int) -> tuple[tuple[int, int, int], ...]:  # noqa: E741 - the name of the formulas
+def monomial_powers(l: int) -> tuple[tuple[int, int, int], ...]:
     """Powers (i, j, k) of the (l+1)(l+2)/2 monomials of degree l, in the order of the format."""
     return tuple((i, j, l - i - j) for i in range(l, -1, -1) for j in range(l - i, -1, -1))
 
 
 @cache
-def solid_from_monomial(l: int) -> NDArray[np.float64]:  # noqa: E741
+def solid_from_monomial(l: int) -> NDArray[np.float64]:
     """Coefficients of the solid harmonics ``S_lm = r^l Y_lm`` in monomials.
 
     ``int |Y_lm|^2 dOmega = 1``, no Condon-Shortley phase, m = -l..l as rows; m < 0 goes with sin |m|phi, m > 0 with
@@ -51,12 +51,12 @@ def solid_from_monomial(l: int) -> NDArray[np.float64]:  # noqa: E741
     return matrix
 
 
-def shell_polynomials(l: int, monomial: bool) -> NDArray[np.float64]:  # noqa: E741
+def shell_polynomials(l: int, monomial: bool) -> NDArray[np.float64]:
     """(functions of the shell, monomials of degree l): the polynomial of each function of a shell."""
     return np.eye((l + 1) * (l + 2) // 2) if monomial else solid_from_monomial(l)
 
 
-def evaluate_monomials(l: int, points: NDArray[np.float64]) -> NDArray[np.float64]:  # noqa: E741
+def evaluate_monomials(l: int, points: NDArray[np.float64]) -> NDArray[np.float64]:
     """Values, gradients and Laplacians of the monomials of degree l.
 
     Parameters
@@ -98,7 +98,7 @@ def _double_factorial(n: int) -> int:
     return math.prod(range(n, 0, -2))
 
 
-def _polar_part(l: int, m: int) -> Polynomial:  # noqa: E741
+def _polar_part(l: int, m: int) -> Polynomial:
     """``Pi_l^m(z, r)`` with ``r^2k = (x^2 + y^2 + z^2)^k`` written out."""
     total: Polynomial = {}
     for k in range((l - m) // 2 + 1):

@@ -44,7 +44,7 @@ def radial_norm(degree: int, exponent: Real, radial: Radial) -> Real:
     return result
 
 
-def gaussian_norm(l: int, exponent: Real) -> Real:  # noqa: E741 - the name of the formulas
+def gaussian_norm(l: int, exponent: Real) -> Real:
     """N such that ``N S_lm exp(-a r^2)`` has unit norm: ``N^2 = 2 (2a)^(l+3/2) / Gamma(l+3/2)``."""
     return radial_norm(l, exponent, "gaussian")
 

@@ -24,6 +24,9 @@ from qwfx.reference.slater_overlap import two_center_slater
 
 __all__ = ["overlap"]
 
+COINCIDENT = 1e-100
+"""bohr; centres nearer than this are one centre: no digit of any integral changes, and no square underflows."""
+
 
 def overlap(
     basis: Basis,
@@ -67,11 +70,13 @@ def overlap(
     for s, one in enumerate(listed):
         for other in listed[: s + 1]:
             separation = centers[other.center] - centers[one.center]
-            if np.any(separation):
+            if np.abs(separation).max() > COINCIDENT:
                 _check_powers(one, other)
                 block = two_center(one, other, separation)
             else:
                 block = one_center_overlap(one, other)
+            if one is other:
+                block = (block + block.T) / 2  # symmetric to the last bit, like the rest
             matrix[one.functions, other.functions] = block
             matrix[other.functions, one.functions] = block.T
         if progress is not None:
@@ -117,7 +122,7 @@ def _line_integrals(
     ])  # fmt: skip
 
 
-def _times_r_squared(polynomials: NDArray[np.float64], l: int, times: int) -> NDArray[np.float64]:  # noqa: E741
+def _times_r_squared(polynomials: NDArray[np.float64], l: int, times: int) -> NDArray[np.float64]:
     """Coefficients of ``(x^2 + y^2 + z^2)^times p`` over the monomials of degree l + 2 times."""
     column = {powers: c for c, powers in enumerate(monomial_powers(l + 2 * times))}
     result = np.zeros((len(polynomials), len(column)))

@@ -1,4 +1,4 @@
-"""Solid harmonics against the tables of Schlegel and Frisch, Int. J. Quantum Chem. 54, 83 (1995), and their identities."""
+"""Solid harmonics against the tables of Schlegel and Frisch, Int. J. Quantum Chem. 54, 83 (1995), and identities."""
 
 from __future__ import annotations
 
@@ -113,7 +113,7 @@ def test_same_as_the_matrices_of_pyscf(l: int) -> None:
 
 
 @settings(max_examples=30, deadline=None)
-@given(st.integers(0, 8), st.tuples(*(st.floats(-1, 1) for _ in range(3))).filter(lambda v: 0.1 < np.hypot(*v[:2])))
+@given(st.integers(0, 8), st.tuples(*(st.floats(-1, 1) for _ in range(3))).filter(lambda v: np.hypot(*v[:2]) > 0.1))
 def test_addition_theorem(l: int, point: tuple[float, float, float]) -> None:
     """``sum_m Y_lm^2 = (2l+1)/(4 pi)`` in each direction."""
     x = np.array([point]) / np.linalg.norm(point)
