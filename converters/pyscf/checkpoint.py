@@ -29,7 +29,7 @@ __all__ = ["CheckpointConverter"]
 HDF5_SIGNATURE = b"\x89HDF\r\n\x1a\n"
 SAME_ENERGY_WITHIN = 1e-6  # hartree; convergence of the stored energy against that of its orbitals
 NATURAL_WITHIN = 1e-6  # electrons, off the diagonal of the density matrix
-LARGEST_CHECKED = 400  # functions; larger molecules would take minutes for one Fock matrix
+LARGEST_CHECKED = 300  # functions; larger molecules would take minutes for one Fock matrix
 UNKNOWN_METHOD = "SCF (method not in the checkpoint)"
 _REMEDY = "check that the file is complete, or write the checkpoint again with PySCF"
 

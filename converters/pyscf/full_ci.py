@@ -15,7 +15,7 @@ __all__ = ["dense_two_body", "fci_energy"]
 
 LARGEST_SPACE = 20_000_000  # determinants: a few hundred MB of vectors
 LARGEST_COMPLEX_SPACE = 200_000
-CONVERGED = 1e-11
+CONVERGED = 1e-10
 
 
 def fci_energy(wavefunction: Wavefunction, nroots: int = 1, symmetry: int | None = None) -> float | NDArray[np.float64]:
