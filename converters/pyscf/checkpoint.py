@@ -112,12 +112,10 @@ class CheckpointConverter:
 
         notes = _left_out(wavefunction)
         total = stored_total(wavefunction)
-        method = options.get("method")
-        if method is None and (total is None or parse_mean_field(total[0]) is None):
-            method = hartree_fock_kind(wavefunction)
-        if total is not None and method is not None and total[0] != method:
-            notes.append(f"the energy of the checkpoint is that of {total[0]}: {total[1]:.10f} hartree")
-        mf = to_mean_field(wavefunction, method)
+        kind = hartree_fock_kind(wavefunction)  # a checkpoint has no word for the method, only arrays of its shape
+        if total is not None and total[0] != kind:
+            notes.append(f"not carried: that the energy, {total[1]:.10f} hartree, is that of {total[0]}")
+        mf = to_mean_field(wavefunction, kind)
         if total is None:
             notes.append("the model has no total energy, so that of the checkpoint is not a number")
         coefficients, occupations, energies = (getattr(mf, f"mo_{q}") for q in ORBITAL_QUANTITIES)

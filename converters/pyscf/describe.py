@@ -22,31 +22,34 @@ def describe_method(mf: Any) -> tuple[str, list[str]]:
     from pyscf import dft
 
     _refuse(mf)
-    notes: list[str] = []
-    functional = None
     settings: dict[str, Any] = {}
+    unrecorded: list[str] = []
+    functional = None
     if isinstance(mf, dft.rks.KohnShamDFT):
         functional = "".join(str(mf.xc).split())
-        settings = _grid(mf, notes)
+        settings = _grid(mf, unrecorded)
         if getattr(mf, "nlc", ""):
-            notes.append(f"the non-local correlation {mf.nlc!r} was set apart from the functional; it is not recorded")
+            unrecorded.append(f"non-local correlation {mf.nlc} apart from the functional")
     if getattr(mf, "disp", None):
         settings["dispersion"] = str(mf.disp)
+    settings |= _fitting(mf, functional, unrecorded)
     method = MeanField(
-        kind=_kind(mf), functional=functional, scalar_x2c=_is_scalar_x2c(mf), **settings, **_fitting(mf, functional)
+        kind=_kind(mf),
+        functional=functional,
+        scalar_x2c=_is_scalar_x2c(mf),
+        unrecorded=tuple(unrecorded),
+        **settings,
     )
-    text = str(method)
-    if getattr(mf, "with_df", None) is not None and not method.auxiliary:
-        text += " (density fitting with an auxiliary basis without a name)"
-        notes.append("the auxiliary basis of the density fitting has no name, so the energy cannot be recomputed")
-    return text, notes
+    notes = [f"{what}: this is not recorded in full, so the energy cannot be recomputed" for what in unrecorded]
+    return str(method), notes
 
 
 def reference_details(mf: Any) -> str:
     """What of a mean-field reference enters the Hamiltonian of a later calculation, as text to append to its method."""
-    method = MeanField(kind="R", scalar_x2c=_is_scalar_x2c(mf), **_fitting(mf, None))
-    unnamed = getattr(mf, "with_df", None) is not None and not method.auxiliary
-    return " (density fitting with an auxiliary basis without a name)" if unnamed else str(method)[len("RHF") :]
+    unrecorded: list[str] = []
+    settings = _fitting(mf, None, unrecorded)
+    method = MeanField(kind="R", scalar_x2c=_is_scalar_x2c(mf), unrecorded=tuple(unrecorded), **settings)
+    return str(method)[len("RHF") :]
 
 
 def _kind(mf: Any) -> str:
@@ -94,23 +97,23 @@ def _refuse(mf: Any) -> None:
     )
 
 
-def _grid(mf: Any, notes: list[str]) -> dict[str, Any]:
+def _grid(mf: Any, unrecorded: list[str]) -> dict[str, Any]:
     """What differs from PySCF's default grid, as far as the text of a method can hold it."""
     grids = mf.grids
     plain = type(grids)(mf.mol)
     for name in ("prune", "radi_method", "radii_adjust", "becke_scheme"):
         if getattr(grids, name) is not getattr(plain, name) and getattr(grids, name) != getattr(plain, name):
-            notes.append(f"the grid has its own setting of {name}, which is not recorded")
+            unrecorded.append(f"grid with its own {name}")
     if not grids.atom_grid:
         return {} if grids.level == DEFAULT_GRID_LEVEL else {"grid_level": int(grids.level)}
     if isinstance(grids.atom_grid, (tuple, list)) and len(grids.atom_grid) == 2:
         return {"grid": (int(grids.atom_grid[0]), int(grids.atom_grid[1]))}
-    notes.append("the grid differs from atom to atom, which is not recorded")
+    unrecorded.append("grid that differs from atom to atom")
     return {}
 
 
-def _fitting(mf: Any, functional: str | None) -> dict[str, Any]:
-    """Names of the auxiliary bases of a density-fitted calculation; nothing if one of them has no name."""
+def _fitting(mf: Any, functional: str | None, unrecorded: list[str]) -> dict[str, Any]:
+    """Names of the auxiliary bases of a density-fitted calculation."""
     fitting = getattr(mf, "with_df", None)
     if fitting is None:
         return {}
@@ -122,11 +125,11 @@ def _fitting(mf: Any, functional: str | None) -> dict[str, Any]:
         names = make_auxbasis(mf.mol, xc=functional or "HF")
     if isinstance(names, str):
         names = dict.fromkeys(symbols, names)
-    if not isinstance(names, dict):
-        return {}
+    names = names if isinstance(names, dict) else {}
     pure = {symbol: "".join(filter(str.isalpha, symbol)) for symbol in symbols}
     found = {symbol: names.get(symbol, names.get(pure[symbol], names.get("default"))) for symbol in symbols}
     if not all(isinstance(name, str) for name in found.values()):
+        unrecorded.append("density fitting with an auxiliary basis without a name")
         return {}
     return {
         "auxiliary": {symbol: str(found[symbol]) for symbol in sorted(symbols)},

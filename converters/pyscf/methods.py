@@ -40,6 +40,8 @@ class MeanField:
     """Whether the exchange of a density-fitted calculation is exact."""
     scalar_x2c: bool = False
     dispersion: str | None = None
+    unrecorded: tuple[str, ...] = ()
+    """Settings that the energy depends on, but that this text cannot hold: it is then not recomputed."""
 
     def __str__(self) -> str:
         name = f"{self.kind}{'HF' if self.functional is None else f'KS/{self.functional}'}"
@@ -55,6 +57,7 @@ class MeanField:
             details.append("scalar X2C")
         if self.dispersion:
             details.append(f"dispersion {self.dispersion}")
+        details += self.unrecorded
         return f"{name} ({'; '.join(details)})" if details else name
 
 
@@ -104,5 +107,5 @@ def _parse_detail(detail: str, text: str) -> dict[str, object]:
         where=f"method {text!r}",
         expected="grid level N; grid RADIAL,ANGULAR; density fitting with ELEMENT=BASIS, ...; scalar X2C; "
         "dispersion NAME",
-        remedy="correct the text of the method",
+        remedy="name the method in full; what the text cannot hold cannot be repeated",
     )

@@ -105,7 +105,7 @@ def test_kohn_sham_needs_its_name(calculation, tmp_path):
     with pytest.raises(UnsupportedError, match="'b3lyp' is not known"):
         converter.read(path, {"method": "b3lyp"})
     notes = converter.write(reading.wavefunction, tmp_path / "b.chk", {}).notes
-    assert any("energy of the checkpoint is that of SCF (method not in the checkpoint)" in note for note in notes)
+    assert any("is that of SCF (method not in the checkpoint)" in note for note in notes)
 
 
 def test_integrals_on_request(calculation, tmp_path):
@@ -323,7 +323,7 @@ def test_what_a_checkpoint_cannot_hold_is_said(calculation, tmp_path):
         replace(wavefunction, orbitals=bare, energies=correlated), tmp_path / "a.chk", {}
     ).notes
     text = " ".join(notes)
-    for word in ("Hamiltonian", "witness", "orbital energies", "that of CCSD(T): -0.49"):
+    for word in ("Hamiltonian", "witness", "orbital energies", "-0.4900000000 hartree, is that of CCSD(T)"):
         assert word in text
     notes = converter.write(replace(wavefunction, energies=None), tmp_path / "a.chk", {}).notes
     assert any("not a number" in note for note in notes)

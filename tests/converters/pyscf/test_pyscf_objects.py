@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pytest
 from pyscf_cases import HYDROXYL, METHYLENE, WATER, molecule, orbital_energies
-from qwfx.converters.pyscf import from_pyscf, to_mean_field
+from qwfx.converters.pyscf import energy, from_pyscf, to_mean_field
 
 from qwfx.errors import ConversionError, UnsupportedError
 
@@ -111,7 +111,7 @@ def test_unconverged_is_said():
     assert "the self-consistent field is not converged" in notes
 
 
-def test_grids_that_the_text_of_a_method_cannot_hold_are_noted(calculation):
+def test_grids_that_the_text_of_a_method_cannot_hold_are_noted():
     from pyscf import dft
 
     mf = dft.RKS(molecule(atom=WATER, basis="sto-3g"), xc="lda,vwn")
@@ -119,9 +119,24 @@ def test_grids_that_the_text_of_a_method_cannot_hold_are_noted(calculation):
     mf.grids.atom_grid = {"O": (20, 50), "H": (10, 38)}
     mf.max_cycle = 0
     mf.kernel()
-    notes = " ".join(from_pyscf(mf, witness=False).provenance.steps[0]["notes"])
-    assert "own setting of prune" in notes
-    assert "differs from atom to atom" in notes
+    wavefunction = from_pyscf(mf, witness=False)
+    notes = " ".join(wavefunction.provenance.steps[0]["notes"])
+    for text in (notes, wavefunction.energies.method[0]):
+        assert "grid with its own prune" in text
+        assert "grid that differs from atom to atom" in text
+    with pytest.raises(UnsupportedError, match="'grid with its own prune' of the method is not known"):
+        energy(wavefunction)
+
+
+def test_auxiliary_basis_without_a_name_is_noted():
+    from pyscf import df, scf
+
+    mol = molecule(atom=WATER, basis="sto-3g")
+    mf = scf.RHF(mol).density_fit(auxbasis=df.aug_etb(mol)).run()
+    wavefunction = from_pyscf(mf, witness=False)
+    assert wavefunction.energies.method[0] == "RHF (density fitting with an auxiliary basis without a name)"
+    with pytest.raises(UnsupportedError, match="without a name"):
+        energy(wavefunction)
 
 
 def _ghf():
