@@ -8,7 +8,7 @@ solid harmonic or a monomial), all relative to the centre of the shell. Then, wi
 At the centre itself a function with a cusp has no derivative, and its Laplacian diverges. There each quantity is
 *the limit of its mean over a small sphere around the centre* as the sphere shrinks. Where the quantity is continuous
 that is its value. For a 1s Slater function it gives gradient 0 and Laplacian minus infinity; for ``x exp(-a r)``
-gradient (1, 0, 0) and Laplacian 0.
+gradient (1, 0, 0) and Laplacian 0. For an orbital the functions are added up first and the limit is taken then.
 """
 
 from __future__ import annotations
@@ -16,6 +16,7 @@ from __future__ import annotations
 import math
 from collections.abc import Iterator
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -136,7 +137,12 @@ def evaluate_orbitals(
             remedy="pass orbitals that belong to this basis",
         )
     functions = evaluate_functions(basis, positions, points, derivatives=derivatives)
-    return np.asarray(np.einsum("pf,knf->knp", matrix, functions, optimize=True))
+    diverging = np.flatnonzero(~np.isfinite(functions).all(axis=(0, 2)))
+    functions[:, diverging] = 0.0
+    result = np.asarray(functions @ matrix.T)
+    for i in diverging:
+        result[:, i] = _orbitals_at_center(basis, positions, matrix, points[i])[: ROWS[derivatives]]
+    return result
 
 
 def _checked(
@@ -168,7 +174,8 @@ def _evaluate_shell(shell: Shell, points: NDArray[np.float64]) -> NDArray[np.flo
         slope * points[:, 2, None] * p + radial * pz,
         bend * p + radial * p_laplacian,
     ])  # fmt: skip
-    result[:, center] = _at_center(shell)[:, None]
+    if center.any():
+        result[:, center] = _limit(_series_at_center(shell), result[:, 0])[:, None]
     return result
 
 
@@ -191,30 +198,28 @@ def _radial(shell: Shell, r: NDArray[np.float64]) -> tuple[NDArray[np.float64], 
     return radial, slope, bend
 
 
-def _at_center(shell: Shell) -> NDArray[np.float64]:
-    """(5, functions of the shell): limit of the mean over a small sphere around the centre.
+def _series_at_center(shell: Shell) -> dict[int, NDArray[np.float64]]:
+    """Power of r -> (5, functions of the shell): means over a small sphere around the centre, up to r^0.
 
     With ``R = sum_j s_j r^j`` and M the mean over the unit sphere, the means over the sphere of radius r are
     ``sum_j s_j r^(l+j) M(p)``, ``sum_j s_j r^(l+j-1) (j M(x p) + M(dp/dx))`` and
     ``sum_j s_j r^(l+j-2) (j (j+2l+1) M(p) + M(lap p))``. Powers above j = 2 - l vanish with r.
     """
     l = shell.l
-    series: dict[int, float] = {}
+    radial: dict[int, float] = {}
     for a, c, n in zip(shell.exponents.tolist(), shell.coefficients.tolist(), shell.powers.tolist(), strict=True):
         for order in range(max(0, (2 - l - n) // shell.q + 1)):
             j = n + shell.q * order
-            series[j] = series.get(j, 0.0) + c * (-a) ** order / math.factorial(order)
+            radial[j] = radial.get(j, 0.0) + c * (-a) ** order / math.factorial(order)
     polynomials = shell_polynomials(l, shell.monomial)
     mean_p, mean_r_p, mean_gradient, mean_laplacian = (_snapped(polynomials @ part) for part in _means(l))
-    result = np.empty((5, len(polynomials)))
-    for f in range(len(polynomials)):
-        result[0, f] = _limit({l + j: s * mean_p[f] for j, s in series.items()})
-        for x in range(3):
-            terms = {l + j - 1: s * (j * mean_r_p[f, x] + mean_gradient[f, x]) for j, s in series.items()}
-            result[1 + x, f] = _limit(terms)
-        terms = {l + j - 2: s * (j * (j + 2 * l + 1) * mean_p[f] + mean_laplacian[f]) for j, s in series.items()}
-        result[4, f] = _limit(terms)
-    return result
+    series: dict[int, NDArray[np.float64]] = {}
+    for j, s in radial.items():
+        gradient = s * (j * mean_r_p + mean_gradient)
+        rows = [s * mean_p, *gradient.T, s * (j * (j + 2 * l + 1) * mean_p + mean_laplacian)]
+        for row, (mean, power) in enumerate(zip(rows, (l + j, *[l + j - 1] * 3, l + j - 2), strict=True)):
+            series.setdefault(power, np.zeros((5, len(polynomials))))[row] += mean
+    return {power: means for power, means in series.items() if power <= 0}
 
 
 def _means(l: int) -> tuple[NDArray[np.float64], ...]:
@@ -241,7 +246,31 @@ def _shifted(powers: tuple[int, int, int], axis: int, by: int) -> tuple[int, int
     return changed[0], changed[1], changed[2]
 
 
-def _limit(terms: dict[int, float]) -> float:
-    """Limit of ``sum_j terms[j] r^j`` as r falls to 0."""
-    diverging = [j for j, s in terms.items() if j < 0 and s != 0.0]
-    return math.copysign(math.inf, terms[min(diverging)]) if diverging else terms.get(0, 0.0) + 0.0  # no minus zero
+def _limit(series: dict[int, NDArray[np.float64]], like: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Limit of ``sum_j series[j] r^j`` (no j above 0) as r falls to 0, an array like the given one."""
+    result = series.get(0, np.zeros_like(like)) + 0.0  # no minus zero
+    for power in sorted((j for j in series if j < 0), reverse=True):  # the most negative power has the last word
+        result = np.where(series[power] != 0.0, np.copysign(math.inf, series[power]), result)
+    return result
+
+
+def _orbitals_at_center(
+    basis: Basis, positions: NDArray[np.float64], matrix: NDArray[Any], point: NDArray[np.float64]
+) -> NDArray[Any]:
+    """(5, M) at one point that is a centre: divergences are added up before the limit is taken."""
+    series: dict[int, NDArray[Any]] = {0: np.zeros((5, basis.n_functions))}
+    for shell in shells(basis):
+        x = point - positions[shell.center]
+        if np.linalg.norm(x) > 0.0:
+            series[0][:, shell.functions] = _evaluate_shell(shell, x[None])[:, 0]
+            continue
+        for power, means in _series_at_center(shell).items():
+            series.setdefault(power, np.zeros((5, basis.n_functions)))[:, shell.functions] = means
+    combined = {power: means @ matrix.T for power, means in series.items()}
+    if not np.iscomplexobj(matrix):
+        return _limit(combined, combined[0])
+    # Part by part: infinity times a complex number is not a number.
+    result: NDArray[np.complex128] = np.empty_like(combined[0])
+    result.real = _limit({power: c.real for power, c in combined.items()}, combined[0].real)
+    result.imag = _limit({power: c.imag for power, c in combined.items()}, combined[0].imag)
+    return result

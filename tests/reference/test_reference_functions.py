@@ -136,6 +136,24 @@ def test_orbitals_are_sums_of_functions(dtype: type) -> None:
     assert evaluate_orbitals(basis, positions, coefficients, points, derivatives=0).shape == (1, 11, 3)
 
 
+@pytest.mark.parametrize("factor", [1.0, -2.0, 1j, 1.0 - 2j])
+def test_orbitals_at_a_centre_add_up_before_the_limit(factor: complex) -> None:
+    """Two functions whose Laplacians diverge against each other: the orbital has no cusp and a finite Laplacian."""
+    shells = [ShellData(0, 0, False, ((2.0, 1.0, 0),)), ShellData(0, 0, False, ((2.0, 1.0, 1),)),
+              ShellData(1, 0, False, ((1.0, 1.0, 0),))]  # fmt: skip
+    basis, positions = make_basis("slater", shells), np.array([[0.0, 0.0, 0.0], [0.0, 0.0, 1.5]])
+    both = [[1.0, 2.0, 0.5], [1.0, 0.0, 0.5], [0.0, 1.0, 0.0], [0.0, 0.0, 1.0]]
+    value, dx, _, dz, laplacian = evaluate_orbitals(basis, positions, factor * np.array(both), positions[:1])[:, 0]
+    distant = evaluate_functions(basis, positions, positions[:1])[:, 0, 2]
+    np.testing.assert_allclose(value, factor * np.array([S + distant[0] / 2, S + distant[0] / 2, 0.0, distant[0]]))
+    np.testing.assert_array_equal(dx, 0.0)
+    np.testing.assert_allclose(dz, factor * distant[3] * np.array([0.5, 0.5, 0.0, 1.0]))
+    np.testing.assert_allclose(laplacian[[0, 3]], factor * np.array([-12 * S + distant[4] / 2, distant[4]]))
+    for part in (np.real, np.imag):
+        if part(factor):
+            np.testing.assert_array_equal(part(laplacian[1:3]), np.sign(part(factor)) * np.array([-np.inf, np.inf]))
+
+
 def test_nothing_to_evaluate() -> None:
     basis, positions, points = sample()
     assert evaluate_functions(basis, positions, points[:0]).shape == (5, 0, 10)
