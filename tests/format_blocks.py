@@ -24,7 +24,7 @@ WIDTH = 100
 
 def number(value: Any) -> str:
     """Ten digits, so that the last bits of different machines do not show."""
-    if isinstance(value, (float, np.floating)):
+    if isinstance(value, float):
         return "0" if abs(value) < NOISE else f"{value:.10g}"
     return json.dumps(str(value), ensure_ascii=False) if isinstance(value, str) else str(value)
 

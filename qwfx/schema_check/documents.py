@@ -32,7 +32,9 @@ def _read(name: str) -> Json | None:
 
 
 def load_schema(name: str) -> Json:
-    """A schema document by name: ``qwfx-1.0``, ``report``, ``provenance``, ``shapes``, or ``jastrow/<form>``.
+    """A schema document by name: ``qwfx-1.0``, ``report``, ``provenance``, ``shapes``, or a Jastrow form.
+
+    A form goes by ``pade`` or ``jastrow/pade``.
 
     The document is shared between calls: do not change it.
 
@@ -41,7 +43,7 @@ def load_schema(name: str) -> Json:
     FileError
         There is no such schema.
     """
-    document = _read(name)
+    document = _read(name) or _read(f"jastrow/{name}")
     if document is None:
         raise FileError(
             "there is no such schema",

@@ -103,6 +103,10 @@ def test_everything_is_described_and_shapes_fit_their_ranks(name: str) -> None:
             assert int(schema["$ref"].rpartition("_")[2]) == len(schema["dims"]), schema
 
 
+def test_a_form_goes_by_its_own_name_too() -> None:
+    assert load_schema("pade") is load_schema("jastrow/pade")
+
+
 def test_an_unknown_schema_is_a_clear_error() -> None:
     with pytest.raises(FileError, match="jastrow/pade"):
         load_schema("jastrow/nothing")
