@@ -1,0 +1,248 @@
+"""SHA-256 of every dataset in blocks, of the attributes of every group, and of the content as a whole (FORMAT.md)."""
+
+from __future__ import annotations
+
+import hashlib
+import json
+from collections.abc import Callable, Iterable, Iterator, Mapping
+from concurrent.futures import Future, ThreadPoolExecutor
+from dataclasses import dataclass, field
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from qwfx.storage.members import DIGESTED
+from qwfx.storage.raw import RawFile, open_raw
+
+__all__ = [
+    "BLOCK_BYTES", "Digest", "DigestCheck", "DigestMismatch", "Digester", "attributes_digest", "check_digests",
+    "combine", "row_step",
+]  # fmt: skip
+
+BLOCK_BYTES = 1 << 20
+READ_BYTES = 1 << 24
+"""Data are read in pieces of about this size, so that a file of any size is digested in bounded memory."""
+THREADS = 4
+
+Progress = Callable[[str, float], None]
+
+
+@dataclass(frozen=True)
+class Digest:
+    """The digest of one item."""
+
+    path: str
+    digest: bytes
+    blocks: tuple[bytes, ...]
+
+
+def row_step(shape: tuple[int, ...], itemsize: int) -> int:
+    """How many rows along axis 0 make up about `READ_BYTES`."""
+    row = itemsize * int(np.prod(shape[1:], dtype=np.int64)) if shape else itemsize
+    return max(READ_BYTES // max(row, 1), 1)
+
+
+def canonical(array: NDArray[Any], width: int | None = None) -> NDArray[Any]:
+    """Little-endian, C order; text padded with NUL to `width` bytes."""
+    if array.dtype.kind == "S":
+        return np.ascontiguousarray(array, dtype=f"S{width or max(array.dtype.itemsize, 1)}")
+    return np.ascontiguousarray(array, dtype=array.dtype.newbyteorder("<"))
+
+
+def spelling(dtype: np.dtype[Any], width: int | None = None) -> str:
+    """NumPy's spelling of the canonical type: ``<f8``, ``|i1``, ``|S4``."""
+    return f"|S{width}" if dtype.kind == "S" else dtype.newbyteorder("<").str
+
+
+class Digester:
+    """Digest of one item from its bytes in order; blocks are hashed in threads."""
+
+    def __init__(self, path: str, dtype: str, shape: tuple[int, ...], pool: ThreadPoolExecutor, block: int) -> None:
+        self._path = path
+        self._header = f"{path}\n{dtype}\n{','.join(map(str, shape))}\n".encode()
+        self._pool, self._block = pool, block
+        self._rest = b""
+        self._pending: list[Future[bytes] | bytes] = []
+
+    def feed(self, piece: NDArray[Any]) -> None:
+        """Take the next piece, already canonical."""
+        data = memoryview(piece.data).cast("B") if piece.size else memoryview(b"")
+        if self._rest:
+            need = self._block - len(self._rest)
+            self._rest += bytes(data[:need])
+            data = data[need:]
+            if len(self._rest) < self._block:
+                return
+            self._submit(self._rest)
+            self._rest = b""
+        for start in range(0, len(data) - self._block + 1, self._block):
+            self._submit(data[start : start + self._block])
+        self._rest = bytes(data[len(data) - len(data) % self._block :])
+        for number, job in enumerate(self._pending):  # done jobs let go of their piece of memory
+            if isinstance(job, Future):
+                self._pending[number] = job.result()
+
+    def _submit(self, block: bytes | memoryview) -> None:
+        self._pending.append(self._pool.submit(lambda: hashlib.sha256(block).digest()))
+
+    def finish(self) -> Digest:
+        """The digest, once all bytes were fed."""
+        blocks = [job.result() if isinstance(job, Future) else job for job in self._pending]
+        if self._rest or not blocks:
+            blocks.append(hashlib.sha256(self._rest).digest())
+        whole = hashlib.sha256(self._header)
+        for block in blocks:
+            whole.update(block)
+        return Digest(self._path, whole.digest(), tuple(blocks))
+
+
+def attributes_digest(group: str, attributes: Mapping[str, Any]) -> Digest:
+    """The digest of the attributes of a group: of their canonical JSON."""
+    text = json.dumps(dict(attributes), sort_keys=True, separators=(",", ":"), ensure_ascii=False).encode()
+    blocks = tuple(
+        hashlib.sha256(text[start : start + BLOCK_BYTES]).digest() for start in range(0, max(len(text), 1), BLOCK_BYTES)
+    )
+    header = f"{group}@\njson\n\n".encode()
+    return Digest(f"{group}@", hashlib.sha256(header + b"".join(blocks)).digest(), blocks)
+
+
+def combine(items: Iterable[Digest]) -> str:
+    """The content digest: SHA-256 over ``path digest`` lines of the groups that are the wave function, sorted."""
+    whole = hashlib.sha256()
+    for item in sorted(items, key=lambda d: d.path):
+        if item.path.lstrip("/").rstrip("@").split("/")[0] in DIGESTED:
+            whole.update(f"{item.path} {item.digest.hex()}\n".encode())
+    return whole.hexdigest()
+
+
+@dataclass(frozen=True)
+class DigestMismatch:
+    """One item that is not what it was when its digest was written."""
+
+    path: str
+    block: int
+    """First block that differs, from 0; -1 where no single block is to blame."""
+    offset: int
+    """Byte of the item at which that block begins."""
+    reason: str
+    blocks: int = 1
+    """How many blocks differ."""
+
+
+@dataclass(frozen=True)
+class DigestCheck:
+    """What checking the digests of a file found."""
+
+    mismatches: tuple[DigestMismatch, ...]
+    checked: int
+    """Items whose digest was computed again."""
+    bytes: int
+    content_digest_stored: str
+    content_digest_computed: str
+    missing: tuple[str, ...] = field(default=())
+    """Items that have a digest and are no longer there."""
+    extra: tuple[str, ...] = field(default=())
+    """Items that are there and have no digest."""
+
+    @property
+    def sound(self) -> bool:
+        """Whether every item is as it was written."""
+        return not (self.mismatches or self.missing or self.extra) and (
+            self.content_digest_stored == self.content_digest_computed
+        )
+
+
+def digests_of(
+    file: RawFile, block: int = BLOCK_BYTES, progress: Progress | None = None
+) -> Iterator[tuple[Digest, int]]:
+    """The digest of every item of a file and its size in bytes, in the order of the paths."""
+    groups = [g for g in file.groups() if g != "/" and not _left_out(g) and file.attributes(g)]
+    for group in groups:
+        yield attributes_digest(group, file.attributes(group)), 0
+    names = [name for name in file.datasets() if not _left_out(name)]
+    with ThreadPoolExecutor(THREADS) as pool:
+        for number, name in enumerate(names):
+            if progress:
+                progress("digests", number / len(names))
+            yield _dataset_digest(file, name, block, pool)
+
+
+def _left_out(path: str) -> bool:
+    return path == "/digests" or path.startswith("/digests/")
+
+
+def _dataset_digest(file: RawFile, name: str, block: int, pool: ThreadPoolExecutor) -> tuple[Digest, int]:
+    shape = file.shape(name)
+    step = None if not shape else row_step(shape, file.itemsize(name))
+    pieces = [(0, 0)] if step is None else [(s, min(s + step, shape[0])) for s in range(0, shape[0], step)]
+
+    def piece(start: int, stop: int) -> NDArray[Any]:
+        return file.read_stored(name) if step is None else file.read_stored(name, start, stop)
+
+    width = None
+    if file.is_text(name):
+        longest = (int(np.char.str_len(p).max(initial=0)) for p in (piece(*ends) for ends in pieces) if p.size)
+        width = max(max(longest, default=0), 1)
+    digester = Digester(name, spelling(file.dtype(name), width), shape, pool, block)
+    size = 0
+    for ends in pieces:
+        data = canonical(piece(*ends), width)
+        size += data.nbytes
+        digester.feed(data)
+    return digester.finish(), size
+
+
+def check_digests(path: str | Path, progress: Progress | None = None) -> DigestCheck:
+    """Compute every digest of a file again and compare. Reads the whole file once, in bounded memory.
+
+    Raises FileError or UnsafeFileError. A file without ``/digests`` gives only `extra` items.
+    """
+    with open_raw(path) as file:
+        stored = _stored(file)
+        block = int(file.attributes("/digests").get("block_bytes", BLOCK_BYTES)) or BLOCK_BYTES
+        computed: dict[str, Digest] = {}
+        mismatches = []
+        total = 0
+        for item, size in digests_of(file, block, progress):
+            computed[item.path] = item
+            total += size
+            told = stored.get(item.path)
+            if told is not None and told.digest != item.digest:
+                mismatches.append(_mismatch(told, item, block))
+        content = str(file.attributes("/").get("content_digest", ""))
+    return DigestCheck(
+        tuple(mismatches),
+        len(computed),
+        total,
+        content,
+        combine(computed.values()),
+        tuple(sorted(stored.keys() - computed.keys())),
+        tuple(sorted(computed.keys() - stored.keys())),
+    )
+
+
+def _stored(file: RawFile) -> dict[str, Digest]:
+    """What ``/digests`` says; an inconsistent table counts as saying nothing of the items concerned."""
+    members = [f"/digests/{name}" for name in ("path", "digest", "block_start", "block_digest")]
+    if not all(file.has(member) for member in members):
+        return {}
+    paths, digest, start, blocks = (file.read(member) for member in members)
+    if digest.shape != (len(paths), 32) or start.shape != (len(paths) + 1,) or blocks.shape[1:] != (32,):
+        return {}
+    return {
+        str(p): Digest(str(p), digest[k].tobytes(), tuple(b.tobytes() for b in blocks[start[k] : start[k + 1]]))
+        for k, p in enumerate(paths)
+    }
+
+
+def _mismatch(told: Digest, found: Digest, block: int) -> DigestMismatch:
+    if len(told.blocks) != len(found.blocks):
+        reason = f"{len(told.blocks)} blocks were written, {len(found.blocks)} are there"
+        return DigestMismatch(found.path, -1, 0, reason, abs(len(told.blocks) - len(found.blocks)))
+    different = [k for k, (a, b) in enumerate(zip(told.blocks, found.blocks, strict=True)) if a != b]
+    if not different:
+        return DigestMismatch(found.path, -1, 0, "the type or shape changed, or the digest itself is damaged")
+    reason = f"{len(different)} of {len(found.blocks)} blocks differ"
+    return DigestMismatch(found.path, different[0], different[0] * block, reason, len(different))
