@@ -66,7 +66,7 @@ def test_hydrogen_molecule(tmp_path: Path) -> None:
 
 
 def test_integrals_of_the_hydrogen_molecule(tmp_path: Path) -> None:
-    """Kinetic, nuclear (11, 12, 22 of nucleus A) and Coulomb (11|11), (11|22), (21|11), (21|21), as the book has them."""
+    """Kinetic 11, 12; nucleus A 11, 12, 22; Coulomb (11|11), (11|22), (21|11), (21|21)."""
     wf = stored(diatomic((1, 1), 1.4, minimal_basis((1.24, 1.24), renormalised=True), np.eye(2)), tmp_path)
     mol = to_mole(wf)
     T, S = mol.intor("int1e_kin"), mol.intor("int1e_ovlp")

@@ -76,6 +76,36 @@ def test_slater_1s_of_different_exponents() -> None:
     assert abs(block[0, 1] - float(wanted)) < 1e-14
 
 
+@pytest.mark.parametrize(
+    ("n", "a", "b", "distance"),
+    [
+        (1, 1.0, 2.0, 1.5), (2, 60.0, 0.3, 8.0), (4, 60.0, 0.3, 8.0), (7, 60.0, 0.3, 8.0), (7, 90.0, 2.0, 25.0),
+        (6, 0.4, 80.0, 5.0),
+    ],
+)  # fmt: skip
+def test_slater_s_functions_of_very_different_extent(n: int, a: float, b: float, distance: float) -> None:
+    """Right to some 1e-12 of itself, also where the integrand sits at one end of its range and the value is 1e-23.
+
+    The mean of ``exp(-b |r - R|)`` over a sphere about the first centre is elementary; one radial integral is left.
+    """
+    with mpmath.workdps(40):
+        A, B, R = mpmath.mpf(a), mpmath.mpf(b), mpmath.mpf(distance)
+
+        def primitive(s: Any) -> Any:
+            return -(B * s + 1) / B**2 * mpmath.exp(-B * s)
+
+        def integrand(r: Any) -> Any:
+            return r**n * mpmath.exp(-A * r) * (primitive(R + r) - primitive(abs(R - r))) / (2 * R)
+
+        cuts = [k / A for k in (0, 1, 4, 10, 20, 40, 80, 160)] + [R]
+        integral = mpmath.quad(integrand, [*sorted(c for c in cuts if c <= R), R + 20 / B, R + 120 / B])
+        norm = mpmath.sqrt((2 * A) ** (2 * n + 1) / mpmath.factorial(2 * n)) * mpmath.sqrt((2 * B) ** 3 / 2)
+        wanted = float(norm * integral)
+    found = overlap(slater_pair((n, 0, a), (1, 0, b)), along_z(distance))[0, 1]
+    # What rounding of the exponents p xi and q eta allows.
+    assert abs(found / wanted - 1) < 4 * np.finfo(float).eps * (a + b + abs(a - b)) * distance / 2 + 1e-14
+
+
 def azimuthal(l: int, m: int) -> Callable[[Any, Any, Any], Any]:
     """Angular part without the azimuth, ``r^l Theta(theta)`` with ``int Theta^2 sin theta dtheta = 1``, by hand."""
     forms: dict[tuple[int, int], Callable[[Any, Any, Any], Any]] = {
