@@ -19,7 +19,8 @@ from qwfx.converters.pyscf.energies import energy
 from qwfx.converters.pyscf.hamiltonian import with_hamiltonian
 from qwfx.converters.pyscf.methods import parse_active_space, parse_mean_field
 from qwfx.converters.pyscf.parts import Parts, assemble, energies_table, per_spin
-from qwfx.converters.pyscf.to_mean_field import hartree_fock_kind, stored_total, to_mean_field
+from qwfx.converters.pyscf.symmetry import restore_symmetry
+from qwfx.converters.pyscf.to_mean_field import choose_sets, hartree_fock_kind, stored_total, to_mean_field
 
 from qwfx.errors import ConversionError, FileError, UnsupportedError
 from qwfx.model import Wavefunction
@@ -116,6 +117,11 @@ class CheckpointConverter:
         if total is not None and total[0] != kind:
             notes.append(f"not carried: that the energy, {total[1]:.10f} hartree, is that of {total[0]}")
         mf = to_mean_field(wavefunction, kind)
+        chosen = choose_sets(wavefunction)
+        irreps = [s.irreps for s in chosen.sets]
+        own = [mf.mo_coeff] if len(irreps) == 1 else list(mf.mo_coeff)
+        if any(irreps) and not restore_symmetry(mf.mol, own, irreps):
+            notes.append("not carried: irreps (PySCF finds no point group that gives the orbitals these irreps)")
         if total is None:
             notes.append("the model has no total energy, so that of the checkpoint is not a number")
         coefficients, occupations, energies = (getattr(mf, f"mo_{q}") for q in ORBITAL_QUANTITIES)

@@ -9,7 +9,7 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
-from pyscf_cases import WATER, molecule, orbital_energies
+from pyscf_cases import METHYLENE, WATER, molecule, orbital_energies
 from qwfx.converters.plugin import Converter
 from qwfx.converters.pyscf import converter, energy, from_pyscf
 
@@ -68,8 +68,7 @@ def test_hartree_fock_is_told_by_its_energy_and_survives_the_way_there_and_back(
     converter.write(wavefunction, tmp_path / "b.chk", {})
     again = converter.read(tmp_path / "b.chk", {}).wavefunction
     assert energy(again) == pytest.approx(mf.e_tot, abs=1e-9)
-    if name != "symmetry":  # a model does not hold the group, so PySCF finds no irreps in what is written
-        same_orbitals(again, wavefunction)
+    same_orbitals(again, wavefunction)
 
 
 def test_written_checkpoint_serves_pyscf(calculation, tmp_path):
@@ -328,6 +327,29 @@ def test_what_a_checkpoint_cannot_hold_is_said(calculation, tmp_path):
     notes = converter.write(replace(wavefunction, energies=None), tmp_path / "a.chk", {}).notes
     assert any("not a number" in note for note in notes)
     assert converter.read(tmp_path / "a.chk", {}).wavefunction.energies.quantity == ("nuclear-repulsion",)
+
+
+@pytest.mark.parametrize(
+    ("atoms", "group"),
+    [("N 0 0 0; N 0 0 2.1", True), ("N 0 0 0; N 0 0 2.1", "D2h"), ("N 0 0 0; N 0 0 2.1", "C2v"), (METHYLENE, "Cs")],
+)
+def test_irreps_survive_although_a_model_has_no_group(atoms, group, tmp_path):
+    from pyscf import scf
+
+    mf = scf.RHF(molecule(atom=atoms, basis="sto-3g", symmetry=group))
+    mf._chkfile.close()
+    mf.chkfile = None
+    mf.kernel()
+    wavefunction = from_pyscf(mf)
+    notes = converter.write(wavefunction, tmp_path / "a.chk", {}).notes
+    assert not any("irreps" in note for note in notes)
+    again = converter.read(tmp_path / "a.chk", {}).wavefunction
+    assert again.orbitals["spatial"].irreps == wavefunction.orbitals["spatial"].irreps
+    assert len(set(again.orbitals["spatial"].irreps)) > 1
+    swapped = replace(wavefunction.orbitals["spatial"], irreps=wavefunction.orbitals["spatial"].irreps[::-1])
+    notes = converter.write(replace(wavefunction, orbitals={"spatial": swapped}), tmp_path / "a.chk", {}).notes
+    assert any("irreps" in note for note in notes)
+    assert converter.read(tmp_path / "a.chk", {}).wavefunction.orbitals["spatial"].irreps is None
 
 
 def test_a_file_is_replaced_whole_or_not_at_all(calculation, tmp_path, monkeypatch):
