@@ -11,7 +11,10 @@ from qwfx.conversion import convert
 from qwfx.storage import load, save
 
 
-@pytest.mark.parametrize("name", ["rhf", "rhf-cartesian", "rohf", "uhf", "rks", "roks", "uks", "core-potential", "ghost"])
+KINDS = ["rhf", "rhf-cartesian", "rohf", "uhf", "rks", "roks", "uks", "core-potential", "ghost"]
+
+
+@pytest.mark.parametrize("name", KINDS)
 def test_energy_from_the_file_is_that_of_the_calculation(name, calculation, tmp_path):
     mf = calculation(name)
     path = tmp_path / "a.qwfx"
