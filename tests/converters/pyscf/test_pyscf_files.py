@@ -10,7 +10,6 @@ from qwfx.converters.pyscf import energy, fci_energy, from_pyscf
 from qwfx.conversion import convert
 from qwfx.storage import load, save
 
-
 KINDS = ["rhf", "rhf-cartesian", "rohf", "uhf", "rks", "roks", "uks", "core-potential", "ghost"]
 
 
