@@ -33,15 +33,27 @@ def render_text(reports: Report | Sequence[Report], console: Console | None = No
     """
     files = [reports] if isinstance(reports, Report) else list(reports)
     out = console or Console(highlight=False)
-    if console is None and not out.is_terminal:
+    if out.is_terminal:
+        _print(files, out, verbose)
+        return
+    if console is None:
         out = Console(highlight=False, width=WIDTH)
+    with out.capture() as captured:
+        _print(files, out, verbose)
+    # Tables pad their cells; in a saved report blanks at the ends of lines are a nuisance.
+    out.file.write("".join(f"{line.rstrip()}\n" for line in captured.get().splitlines()))
+
+
+def _print(files: Sequence[Report], out: Console, verbose: bool) -> None:
     for i, report in enumerate(files):
         if i:
             out.print()
-        out.print(_whole(report, verbose), soft_wrap=False)
+        head = Text.assemble((report.file, "bold"), ": ", (verdict(report), VERDICT_STYLE[report.exit_code]))
+        out.print(head, soft_wrap=True)
+        out.print(_body(report, verbose))
     if len(files) > 1:
         out.print()
-        out.print(_summary(files))
+        out.print(_summary(files), soft_wrap=True)
 
 
 def verdict(report: Report) -> str:
@@ -59,12 +71,10 @@ def verdict(report: Report) -> str:
     return f"{word} for purpose {report.purpose}: {found or 'no findings'}"
 
 
-def _whole(report: Report, verbose: bool) -> RenderableType:
-    head = Text.assemble((report.file, "bold"), ": ", (verdict(report), VERDICT_STYLE[report.exit_code]))
+def _body(report: Report, verbose: bool) -> RenderableType:
     if report.failure:
-        return Group(head, Padding(Text(report.failure), (0, 0, 0, 2), expand=False))
-    parts: list[RenderableType] = [head]
-    parts += [Padding(Text(note, style="dim"), (0, 0, 0, 2), expand=False) for note in report.notes]
+        return Padding(Text(report.failure), (0, 0, 0, 2), expand=False)
+    parts: list[RenderableType] = [Padding(Text(n, style="dim"), (0, 0, 0, 2), expand=False) for n in report.notes]
     for finding in report.findings:
         parts += [Text(""), _finding(finding)]
     parts += [Text(""), _every_rule(report) if verbose else _tiers(report)]
@@ -94,7 +104,8 @@ def _tiers(report: Report) -> RenderableType:
         rules = [r for r in report.results if r.tier == tier]
         n = {outcome: sum(r.outcome is outcome for r in rules) for outcome in Outcome}
         shown = (Outcome.FOUND, Outcome.SKIPPED, Outcome.NOT_EVALUATED, Outcome.BROKEN)
-        table.add_row(tier, str(n[Outcome.PASSED] + n[Outcome.FOUND]), *(str(n[o]) if n[o] else "." for o in shown))
+        counts = (n[Outcome.PASSED] + n[Outcome.FOUND], *(n[outcome] for outcome in shown))
+        table.add_row(tier, *(str(count or ".") for count in counts))
     figures = [r for r in report.results if r.measured and r.tier in ("algebra", "witness", "digests")]
     if not figures:
         return table

@@ -48,7 +48,7 @@ def orthonormality(file: Inspection) -> Iterator[Remark]:
         C = np.asarray(file.read(member))
         product = C.conj() @ S @ C.T
         product[np.diag_indices(len(C))] -= 1
-        residual = np.abs(product)
+        residual = np.nan_to_num(np.abs(product), nan=np.inf, posinf=np.inf)
         worst = float(residual.max(initial=0.0))
         yield Measured(f"{name}: largest deviation {figure(worst)}, tolerance {ORTHONORMAL_WARNING:.0e}")
         if worst > ORTHONORMAL_WARNING:

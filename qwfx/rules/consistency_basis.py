@@ -15,6 +15,8 @@ __all__: list[str] = []
 
 EVALUATED_L = 6
 """Largest angular momentum of the evaluator."""
+LARGEST_POWER = 40
+"""More than any table has; far beyond it r^n overflows."""
 
 
 @rule(
@@ -50,7 +52,7 @@ def finite_numbers(file: Inspection) -> Iterator[Remark]:
     name="atom-indices",
     tier="consistency",
     severity=Severity.ERROR,
-    premise=Premise(any_of=("/basis/shell_center", "/potentials/center")),
+    premise=Premise(members=("/system/labels",), any_of=("/basis/shell_center", "/potentials/center")),
     summary="shells and potential terms sit on atoms that exist",
 )
 def atom_indices(file: Inspection) -> Iterator[Remark]:
@@ -98,10 +100,10 @@ def angular_momenta(file: Inspection) -> Iterator[Remark]:
         yield Problem(at("/basis/shell_monomial", i), "0 (solid) or 1 (monomial)", str(kind[i]), "write 0 or 1")
     if file.has("/basis/powers"):
         powers = file.read("/basis/powers")
-        for i in np.flatnonzero(powers < 0):
+        for i in np.flatnonzero((powers < 0) | (powers > LARGEST_POWER)):
             yield Problem(
                 at("/basis/powers", i),
-                "a power of r, 0 or more",
+                f"a power of r, 0 to {LARGEST_POWER}",
                 str(powers[i]),
                 "r^l belongs to the angular part: powers count what is beyond it",
             )

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterator
-from typing import Any
+from typing import Any, TypeAlias
 
 import numpy as np
 from numpy.typing import NDArray
@@ -192,14 +192,20 @@ def row_offsets(file: Inspection) -> Iterator[Remark]:
     yield Covered(every(file.shape(member)[0], "offset"))
 
 
-def row_slices(
-    file: Inspection, size: int = 1 << 20
-) -> Iterator[tuple[int, NDArray[np.int64], int, NDArray[np.int64]]]:
+ROWS_AT_A_TIME = 1 << 20
+"""Rows, and entries, of the sparse matrix that are held at once."""
+
+
+Piece: TypeAlias = tuple[int, NDArray[np.int64], int, NDArray[np.int64]]
+
+
+def row_slices(file: Inspection) -> Iterator[Piece]:
     """The sparse matrix in pieces: (first row, row_start of these rows and one more, first entry, columns).
 
-    Rows longer than `size` entries come in several pieces, each with the same rows; a piece begins one entry before
-    its place where that entry belongs to the same rows, so that neighbours can be compared.
+    Rows with more entries than `ROWS_AT_A_TIME` come in several pieces, each with the same rows; a piece begins one
+    entry before its place where that entry belongs to the same rows, so that neighbours can be compared.
     """
+    size = ROWS_AT_A_TIME
     n_rows = file.shape("/expansion/row_start")[0] - 1
     for first in range(0, n_rows, size):
         stop = min(first + size, n_rows)

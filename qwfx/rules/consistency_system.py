@@ -136,7 +136,7 @@ def pair_distances(file: Inspection) -> tuple[NDArray[np.int64], NDArray[np.int6
     positions = file.positions
     i, j = np.triu_indices(len(positions), 1)
     between = positions[j] - positions[i]
-    if not file.has("/system/cell/vectors"):
+    if not file.usable("/system/cell/vectors"):
         return i, j, np.linalg.norm(between, axis=1)
     steps = np.array(np.meshgrid(*[(-1, 0, 1)] * 3)).reshape(3, -1).T
     images = steps @ file.read("/system/cell/vectors")
@@ -222,7 +222,11 @@ def length_unit(file: Inspection) -> Iterator[Remark]:
     nearest = nearest[bonding]
     low, high = BONDED
     yield Measured(f"nearest neighbours at {nearest.min():.2f} to {nearest.max():.2f} sums of covalent radii")
-    for factor, story in ((BOHR, "angstrom written as bohr"), (1 / BOHR, "bohr converted to bohr a second time")):
+    stories = [(BOHR, "angstrom written as bohr")]
+    if len(nearest) > 2 and len(set(numbers[bonding].tolist())) > 1:
+        # Chains and dimers of one element are often stretched on purpose.
+        stories.append((1 / BOHR, "bohr converted to bohr a second time"))
+    for factor, story in stories:
         if np.all((nearest >= low * factor) & (nearest <= high * factor)) and not np.any(
             (nearest >= low) & (nearest <= high)
         ):

@@ -20,7 +20,7 @@ __all__: list[str] = []
     name="energies-table",
     tier="consistency",
     severity=Severity.ERROR,
-    premise=Premise(members=("/energies",), rules=("finite-numbers",)),
+    premise=Premise(members=("/energies", "/system/labels"), rules=("finite-numbers",)),
     summary="states count from 0, uncertainties are not negative, and no number is given twice with two values",
 )
 def energies_table(file: Inspection) -> Iterator[Remark]:

@@ -42,9 +42,8 @@ def evaluate_orbitals(
 def overlap(basis: Basis, positions: NDArray[np.float64]) -> NDArray[np.float64]:
     """(F, F) overlap of the functions; see `qwfx.reference.overlap`."""
     if len(basis.exponents) ** 2 <= PLAIN_PRIMITIVE_PAIRS:
-        from qwfx import reference
-
-        return np.asarray(reference.overlap(basis, positions))
-    from qwfx import kernels
-
-    return np.asarray(kernels.overlap(basis, positions))
+        from qwfx.reference import overlap as integrals
+    else:
+        from qwfx.kernels import overlap as integrals
+    with np.errstate(over="ignore", invalid="ignore"):
+        return np.asarray(integrals(basis, positions))

@@ -68,7 +68,10 @@ def compare_set(
         axes = tuple(a for a in range(witness.ndim) if a != 1)
         scale = np.maximum(np.abs(witness).max(axis=axes, initial=0.0), np.abs(mine[word]).max(axis=axes, initial=0.0))
         gap = np.abs(mine[word] - witness).max(axis=axes, initial=0.0)
-        result[word] = np.divide(gap, scale, out=np.zeros_like(gap), where=scale > 0)
+        # Where a number overflows nothing is known, and that must not pass for agreement.
+        sane = np.isfinite(gap) & np.isfinite(scale)
+        relative = np.divide(gap, scale, out=np.zeros_like(gap), where=sane & (scale > 0))
+        result[word] = np.where(sane, relative, np.inf)
     return result
 
 
