@@ -110,7 +110,7 @@ def core_charges(file: Inspection) -> Iterator[Remark]:
                 Severity.WARNING,
             )
     yield Covered(every(len(numbers), "atom"))
-    yield Measured(f"{np.count_nonzero(terms)} atoms with core potentials")
+    yield Measured(f"atoms with core potentials: {np.count_nonzero(terms)}")
 
 
 @rule(
@@ -118,12 +118,13 @@ def core_charges(file: Inspection) -> Iterator[Remark]:
     tier="consistency",
     severity=Severity.WARNING,
     premise=Premise(members=(*CHARGES, "/potentials"), rules=("core-charges",)),
-    summary="local r^-1 terms, where there are any, cancel the pole of the effective charge",
+    summary="repulsive local r^-1 terms, where there are any, cancel the pole of the effective charge",
 )
 def potential_pole(file: Inspection) -> Iterator[Remark]:
     charges = file.read("/system/effective_charges").astype(np.float64)
     pole = _local_pole(file)
-    chosen = np.flatnonzero((pole != 0) & (charges > 0))
+    # Sums below 0 are those of potentials that keep the pole, as many do; only a sum above 0 is meant to cancel it.
+    chosen = np.flatnonzero((pole > 0) & (charges > 0))
     for i in chosen:
         if abs(pole[i] - charges[i]) > 1e-6 * charges[i]:
             yield Problem(
@@ -134,4 +135,4 @@ def potential_pole(file: Inspection) -> Iterator[Remark]:
             )
     if len(chosen):
         yield Measured(f"largest deviation {figure(np.abs(pole - charges)[chosen].max())}")
-    yield Covered(f"{len(chosen)} atoms with local r^-1 terms")
+    yield Covered(f"atoms with repulsive local r^-1 terms: {len(chosen)}")
