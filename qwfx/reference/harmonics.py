@@ -13,7 +13,10 @@ from functools import cache
 import numpy as np
 from numpy.typing import NDArray
 
-__all__ = ["evaluate_monomials", "mean_over_sphere", "monomial_powers", "shell_polynomials", "solid_from_monomial"]
+__all__ = [
+    "evaluate_monomials", "mean_over_sphere", "monomial_powers", "monomial_values", "shell_polynomials",
+    "solid_from_monomial",
+]  # fmt: skip
 
 Polynomial = dict[tuple[int, int, int], Fraction]
 
@@ -56,6 +59,11 @@ def shell_polynomials(l: int, monomial: bool) -> NDArray[np.float64]:
     return np.eye((l + 1) * (l + 2) // 2) if monomial else solid_from_monomial(l)
 
 
+def monomial_values(l: int, points: NDArray[np.float64]) -> NDArray[np.float64]:
+    """(n, (l+1)(l+2)/2): values of the monomials of degree l at points (n, 3), bohr, relative to the centre."""
+    return _monomial_derivatives(l, points, (0, 0, 0))
+
+
 def evaluate_monomials(l: int, points: NDArray[np.float64]) -> NDArray[np.float64]:
     """Values, gradients and Laplacians of the monomials of degree l.
 
@@ -68,22 +76,22 @@ def evaluate_monomials(l: int, points: NDArray[np.float64]) -> NDArray[np.float6
     -------
     (5, n, (l+1)(l+2)/2): value, d/dx, d/dy, d/dz, Laplacian.
     """
+    first = [_monomial_derivatives(l, points, order) for order in ((0, 0, 0), (1, 0, 0), (0, 1, 0), (0, 0, 1))]
+    second = [_monomial_derivatives(l, points, order) for order in ((2, 0, 0), (0, 2, 0), (0, 0, 2))]
+    return np.array([*first, sum(second)])
+
+
+def _monomial_derivatives(l: int, points: NDArray[np.float64], order: tuple[int, int, int]) -> NDArray[np.float64]:
     powers = np.array(monomial_powers(l))
-
-    def derivative(order: tuple[int, int, int]) -> NDArray[np.float64]:
-        factor = np.ones(len(powers))
-        product = np.ones((len(points), len(powers)))
-        for axis in range(3):
-            left = powers[:, axis].copy()
-            for _ in range(order[axis]):
-                factor *= left
-                left = np.maximum(left - 1, 0)  # the factor is 0 where the power would become negative
-            product *= points[:, axis, None] ** left
-        return np.asarray(factor * product)
-
-    laplacian = derivative((2, 0, 0)) + derivative((0, 2, 0)) + derivative((0, 0, 2))
-    first = [derivative((1, 0, 0)), derivative((0, 1, 0)), derivative((0, 0, 1))]
-    return np.array([derivative((0, 0, 0)), *first, laplacian])
+    factor = np.ones(len(powers))
+    product = np.ones((len(points), len(powers)))
+    for axis in range(3):
+        left = powers[:, axis]
+        for _ in range(order[axis]):
+            factor *= left
+            left = np.maximum(left - 1, 0)  # the factor is 0 where the power would become negative
+        product *= points[:, axis, None] ** left
+    return np.asarray(factor * product)
 
 
 def mean_over_sphere(i: int, j: int, k: int) -> float:

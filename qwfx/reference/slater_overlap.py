@@ -23,7 +23,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from qwfx.reference.functions import Shell
-from qwfx.reference.harmonics import evaluate_monomials, shell_polynomials
+from qwfx.reference.harmonics import monomial_values, shell_polynomials
 
 __all__ = ["two_center_slater"]
 
@@ -48,8 +48,8 @@ def two_center_slater(one: Shell, other: Shell, separation: NDArray[np.float64])
             rest = beyond * (above - below) / 2
             from_one = np.stack([*across, half * (rest + above)], axis=1) @ frame
             from_other = np.stack([*across, half * (rest - below)], axis=1) @ frame
-            p_one = evaluate_monomials(one.l, from_one)[0] @ left.T
-            p_other = evaluate_monomials(other.l, from_other)[0] @ right.T
+            p_one = monomial_values(one.l, from_one) @ left.T
+            p_other = monomial_values(other.l, from_other) @ right.T
             radial = c * d * weights * half * r_one ** (n + 1) * r_other ** (m + 1)
             block += p_one.T @ (radial[:, None] * p_other)
     return block
