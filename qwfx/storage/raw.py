@@ -92,8 +92,10 @@ class RawFile:
             )
         return entry
 
-    def read(self, member: str, start: int | None = None, stop: int | None = None) -> NDArray[Any]:
-        """A dataset, or the rows `start` to `stop` of it, in native byte order; text as ``numpy.str_``.
+    def read(
+        self, member: str, start: int | None = None, stop: int | None = None, axis: int = 0
+    ) -> NDArray[Any]:
+        """A dataset, or the part `start` to `stop` of it along `axis`, in native byte order; text as ``numpy.str_``.
 
         Raises FormatError if it is absent or is not UTF-8, FileError if it is damaged.
         """
@@ -101,7 +103,7 @@ class RawFile:
         name = self._absolute(member)
         sliced = entry.shape and (start is not None or stop is not None)
         with damage(self.path, name):
-            array = np.asarray(self._file[name][slice(start, stop) if sliced else ()])
+            array = np.asarray(self._file[name][(slice(None),) * axis + (slice(start, stop),) if sliced else ()])
         return texts(array, f"{self.path}:{name}") if array.dtype.kind == "S" else native(array)
 
     def read_stored(self, member: str, start: int | None = None, stop: int | None = None) -> NDArray[Any]:
