@@ -3,20 +3,22 @@
 from __future__ import annotations
 
 import itertools
+import json
 import math
 import re
 from collections.abc import Callable
 from pathlib import Path
 from typing import Any
 
+import jsonschema
 import mpmath
 import numpy as np
 import pytest
 from example_file import PADE_A, PADE_B, everything, pade, potential_energy
-from format_blocks import FORMAT, made, worked_digest
+from format_blocks import FORMAT, item_digest, made, sha256, worked_digest
 
 from qwfx.model import Wavefunction
-from qwfx.schema_check import jastrow_forms
+from qwfx.schema_check import check_outline, jastrow_forms, load_schema
 from qwfx.schema_check.layout import entries, layout
 from qwfx.schema_check.tables import format_text, with_tables
 
@@ -39,6 +41,61 @@ def test_the_layout_tables_are_those_of_the_schema() -> None:
 
 def test_the_example_dumps_are_those_of_a_real_file(tmp_path: Path) -> None:
     assert made(TEXT, tmp_path) == TEXT, "run `python tests/format_blocks.py`"
+
+
+def test_the_example_is_valid_through_and_through(example: Wavefunction, tmp_path: Path) -> None:
+    from qwfx.storage import outline, save
+    from qwfx.validate import validate
+
+    path = tmp_path / "example.qwfx"
+    save(example, path)
+    assert check_outline(outline(path)) == ()
+    steps = json.loads(json.dumps([dict(step) for step in example.provenance.steps]))
+    jsonschema.Draft202012Validator(load_schema("provenance")).validate(steps)
+    report = validate(path, purpose="trial")
+    assert [(f.where, f.found) for f in report.findings] == []
+    assert report.exit_code == 0
+
+
+def test_digests_of_a_real_file_by_the_letter_of_the_text(example: Wavefunction, tmp_path: Path) -> None:
+    """F41 and F42, written down again without a look at storage, one block an item."""
+    from qwfx.storage import open_raw, save
+
+    path = tmp_path / "example.qwfx"
+    save(example, path)
+    spelling = {"float64": "<f8", "float32": "<f4", "int32": "<i4", "int64": "<i8", "int8": "|i1", "uint64": "<u8"}
+    computed: dict[str, str] = {}
+
+    def visit(raw: Any, node: dict[str, Any], name: str) -> None:
+        if node["kind"] == "group":
+            words = {k: a["value"] for k, a in node["attributes"].items()}
+            if words and name:
+                text = "{" + ",".join(f'"{k}":{json.dumps(words[k])}' for k in sorted(words)) + "}"
+                computed[f"{name}@"] = item_digest(f"{name}@", "json", "", text.encode())[1]
+            for below, member in node["members"].items():
+                if f"{name}/{below}" != "/digests":
+                    visit(raw, member, f"{name}/{below}")
+            return
+        array = np.asarray(raw.read(name))
+        if node["dtype"] == "string":
+            texts = [str(t).encode() for t in array.ravel()]
+            width = max(len(t) for t in texts)
+            kind, data = f"|S{width}", b"".join(t.ljust(width, b"\0") for t in texts)
+        else:
+            kind = spelling[node["dtype"]]
+            data = array.astype(kind).tobytes()
+        computed[name] = item_digest(name, kind, ",".join(map(str, node["shape"])), data)[1]
+
+    with open_raw(path) as raw:
+        visit(raw, raw.outline, "")
+        told = dict(zip(map(str, raw.read("/digests/path")), (d.tobytes().hex() for d in raw.read("/digests/digest")),
+                        strict=True))  # fmt: skip
+        assert list(told) == sorted(told)
+        assert computed == told
+        physics = ("system", "potentials", "basis", "orbitals", "expansion", "jastrow", "hamiltonian", "densities",
+                   "energies")  # fmt: skip
+        lines = [f"{p} {d}\n" for p, d in told.items() if re.split(r"[/@]", p)[1] in physics]
+        assert raw.attributes("/")["content_digest"] == sha256("".join(lines).encode()).hex()
 
 
 def test_the_worked_digest_is_in_the_text() -> None:
