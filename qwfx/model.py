@@ -320,8 +320,10 @@ class WitnessConfigurations:
     """(states, m, electrons, 3) of log D."""
     laplacian: NDArray[Any]
     """(states, m) of D, summed over electrons, divided by D."""
-    potential: NDArray[np.float64] | None = None
+    potential: NDArray[Any] | None = None
+    """(states, m) (V Psi) / Psi, hartree; Psi = D exp(J)."""
     local_energy: NDArray[Any] | None = None
+    """(states, m) (H Psi) / Psi, hartree."""
 
 
 @dataclass(frozen=True, eq=False)
