@@ -137,7 +137,7 @@ def harmonic(l: int, m: int, x: float, y: float, z: float) -> float:
         for k in range((l - size) // 2 + 1)
     )  # fmt: skip
     power = complex(x, y) ** size
-    return math.sqrt(norm) * polar * (power.real if m >= 0 else power.imag)
+    return float(math.sqrt(norm) * polar * (power.real if m >= 0 else power.imag))
 
 
 def table_rows() -> list[tuple[int, int, str, str]]:
@@ -317,7 +317,10 @@ def test_three_body_derivatives() -> None:
     d = {o: mpmath.diff(f, args, o) for o in itertools.product(range(3), repeat=3) if 1 <= sum(o) <= 2}
     e_i, e_j = [v / args[0] for v in ri], [v / args[1] for v in rj]
     e_ij = [v / args[2] for v in apart]
-    dot = lambda a, b: sum(x * y for x, y in zip(a, b, strict=True))  # noqa: E731
+
+    def dot(a: Any, b: Any) -> Any:
+        return sum(x * y for x, y in zip(a, b, strict=True))
+
     grad_i = [d[1, 0, 0] * a + d[0, 0, 1] * b for a, b in zip(e_i, e_ij, strict=True)]
     grad_j = [d[0, 1, 0] * a - d[0, 0, 1] * b for a, b in zip(e_j, e_ij, strict=True)]
     lap_i = (d[2, 0, 0] + 2 * d[1, 0, 0] / args[0] + d[0, 0, 2] + 2 * d[0, 0, 1] / args[2]
@@ -348,8 +351,10 @@ def test_the_example_is_what_the_formulas_say(example: Wavefunction) -> None:
     orbitals = example.orbitals["spatial"]
     told, configurations = example.witness.orbitals["spatial"], example.witness.configurations
 
+    basis = example.basis
+
     def at(points: Any) -> Any:
-        return evaluate_orbitals(example.basis, example.system.positions, orbitals.coefficients, points)
+        return evaluate_orbitals(basis, example.system.positions, orbitals.coefficients, points)
 
     value, dx, dy, dz, laplacian = at(example.witness.points)
     assert value == pytest.approx(told.values, abs=1e-13)
@@ -371,11 +376,11 @@ def test_the_local_energy_of_the_example(example: Wavefunction) -> None:
     told = example.witness.configurations
     assert told is not None
     assert told.local_energy is not None
-    c = np.asarray(example.expansion.coefficients)[0]
+    basis, c = example.basis, np.asarray(example.expansion.coefficients)[0]
 
     def psi(flat: Any) -> Any:
         points = flat.reshape(-1, 3)
-        phi = evaluate_orbitals(example.basis, example.system.positions, example.orbitals["spatial"].coefficients,
+        phi = evaluate_orbitals(basis, example.system.positions, example.orbitals["spatial"].coefficients,
                                 points, derivatives=0)[0].reshape(-1, 2, 2)  # fmt: skip
         both = points.reshape(-1, 2, 3)
         r = np.linalg.norm(both[:, 0] - both[:, 1], axis=-1)
