@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from io import StringIO
 
 from rich.console import Console, Group, RenderableType
 from rich.padding import Padding
@@ -11,7 +12,7 @@ from rich.text import Text
 
 from qwfx.findings import ExitCode, Finding, Outcome, Report, Severity
 
-__all__ = ["render_text", "verdict"]
+__all__ = ["finding_text", "render_text", "verdict"]
 
 STYLE = {Severity.ERROR: "bold red", Severity.WARNING: "yellow", Severity.NOTE: "cyan"}
 VERDICT_STYLE = {ExitCode.OK: "bold green", ExitCode.FINDINGS: "bold red", ExitCode.FAILED: "bold magenta"}
@@ -54,6 +55,14 @@ def _print(files: Sequence[Report], out: Console, verbose: bool) -> None:
     if len(files) > 1:
         out.print()
         out.print(_summary(files), soft_wrap=True)
+
+
+def finding_text(finding: Finding) -> str:
+    """One finding as it stands in the report, as plain text."""
+    out = Console(highlight=False, width=WIDTH, file=StringIO())
+    with out.capture() as captured:
+        out.print(_finding(finding))
+    return "".join(f"{line.rstrip()}\n" for line in captured.get().splitlines())
 
 
 def verdict(report: Report) -> str:

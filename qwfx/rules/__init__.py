@@ -56,9 +56,15 @@ def page_body(name: str) -> str:
 def rule_page(name: str) -> str:
     """The page of a rule as Markdown: what the registry knows, then the written part."""
     rule = {r.name: r for r in all_rules()}[name]
+    mildness = "" if rule.severity.value == "note" else " at most"
     head = (
         f"# {rule.name}\n\n{rule.summary[0].upper()}{rule.summary[1:]}.\n\n"
-        f"- tier: {rule.tier}\n- severity: {rule.severity.value}{' at most' if rule.severity.value != 'note' else ''}\n"
+        f"- tier: {rule.tier}\n- severity: {rule.severity.value}{mildness}\n"
         f"- premise: {rule.premise.sentence()}\n- cost: {rule.cost}\n- purposes: {', '.join(rule.purposes)}\n\n"
     )
-    return head + page_body(name)
+    return head + page_body(name) + EXAMPLES
+
+
+EXAMPLES = """
+The examples name a small valid file (they are built by tests/corpus/valid.py) and what is changed in it.
+"""

@@ -8,7 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from qwfx.findings import Severity
-from qwfx.rules.inspection import BLOCK_BYTES, Inspection
+from qwfx.rules.inspection import Inspection
 from qwfx.rules.registry import Covered, Measured, Premise, PremiseError, Problem, Purpose, Remark, rule
 from qwfx.rules.wording import at, figure, listed
 
@@ -22,21 +22,14 @@ OVERLAP_SLACK = 1e-5
 
 
 def gram(file: Inspection) -> NDArray[np.complex128]:
-    """(states, states) sums of conj(c_i) c_j, a block of entries at a time.
-
-    The states are the first axis and each is read by itself where all together would not fit in a block.
-    """
-    states, entries = file.shape(COEFFICIENTS)
+    """(states, states) sums of conj(c_i) c_j, a piece of the entries at a time."""
+    states = file.shape(COEFFICIENTS)[0]
     total = np.zeros((states, states), dtype=np.complex128)
-    if 16 * states * entries <= 4 * BLOCK_BYTES:
-        c = np.asarray(file.raw.read(COEFFICIENTS))
+    if file.shape(COEFFICIENTS)[1] < states:
+        c = np.asarray(file.read(COEFFICIENTS))
         return np.asarray(c.conj() @ c.T, dtype=np.complex128)
-    for i in range(states):
-        ci = np.asarray(file.raw.read(COEFFICIENTS, i, i + 1))[0]
-        for j in range(i, states):
-            cj = ci if i == j else np.asarray(file.raw.read(COEFFICIENTS, j, j + 1))[0]
-            total[i, j] = np.vdot(ci, cj)
-            total[j, i] = np.conj(total[i, j])
+    for _, c in file.pieces(COEFFICIENTS):
+        total += c.conj() @ c.T
     return total
 
 

@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 from qwfx.findings import Severity
 from qwfx.rules.inspection import Inspection
 from qwfx.rules.registry import Covered, Measured, Premise, PremiseError, Problem, Purpose, Remark, rule
-from qwfx.rules.wording import at, figure, listed
+from qwfx.rules.wording import at, every, figure, listed
 
 __all__: list[str] = []
 
@@ -150,54 +150,70 @@ def coulomb_bounds(file: Inspection) -> Iterator[Remark]:
     """The Coulomb kernel is positive, so its matrix over pairs is, and each 2 x 2 block of it (Cauchy and Schwarz)."""
     n, is_complex = file.integer("/hamiltonian", "n_orbitals"), file.attribute("/hamiltonian", "packing") == "complex"
     n_pairs = n * n if is_complex else n * (n + 1) // 2
-    pair = np.arange(n_pairs, dtype=np.int64)
-    # (pq|(pq)*) is the diagonal for real orbitals and (pq|qp) for complex ones.
-    partner = (pair % n) * n + pair // n if is_complex else pair
-    high, low = np.maximum(pair, partner), np.minimum(pair, partner)
-    diagonals = {}
     keys = file.members("/hamiltonian/two_body")
+    diagonals = {}
     for key in keys:
         if key == "up_down":
             continue
-        position, values = _values(file, key)
-        diagonal = _lookup(position, values, high * (high + 1) // 2 + low).real.astype(np.float64)
-        # Lists of integrals are cut at a threshold: a diagonal that is not stored may be as large as that.
-        stored = np.abs(values[values != 0])
-        diagonal[diagonal == 0] = stored.min(initial=np.inf) if len(stored) else 0.0
-        diagonals[key] = diagonal
-        negative = diagonal < -BOUND_SLACK
-        if negative.any():
-            k = int(np.argmin(diagonal))
+        diagonals[key] = _self_repulsion(file, key, n, is_complex)
+        lowest = diagonals[key].min(initial=0.0)
+        if lowest < -BOUND_SLACK:
             yield Problem(
                 f"/hamiltonian/two_body/{key}/values",
                 "a self-repulsion (pq|qp) of 0 or more",
-                f"{diagonal[k]:.6g} for {_pair_name(k, n, is_complex)}",
+                f"{lowest:.6g} for {_pair_name(int(diagonals[key].argmin()), n, is_complex)}",
                 "check the sign and the order of indices (chemists' notation)",
-                count=int(negative.sum()),
+                count=int(np.count_nonzero(diagonals[key] < -BOUND_SLACK)),
             )
     for key in keys:
         left = diagonals["up_up" if key == "up_down" else key]
         right = diagonals["down_down" if key == "up_down" else key]
-        position, values = _values(file, key)
-        bad, worst, excess = 0, 0, 0.0
-        for start in range(0, len(position), CHUNK):
-            bra, ket = _pairs(position[start : start + CHUNK], n_pairs, key != "up_down")
-            bound = np.sqrt(np.maximum(left[bra], 0.0) * np.maximum(right[ket], 0.0))
-            over = np.abs(values[start : start + CHUNK]) - bound
+        seen, bad, worst, excess, value = 0, 0, 0, 0.0, 0.0
+        for start, position, values in _chunks(file, key):
+            bra, ket = _pairs(position, n_pairs, key != "up_down")
+            over = np.abs(values) - np.sqrt(np.maximum(left[bra], 0.0) * np.maximum(right[ket], 0.0))
             if over.max(initial=0.0) > excess:
-                excess, worst = float(over.max()), start + int(over.argmax())
+                k = int(over.argmax())
+                excess, worst, value = float(over[k]), start + k, float(np.abs(values[k]))
             bad += int(np.count_nonzero(over > BOUND_SLACK))
+            seen += len(values)
         yield Measured(f"{key}: bound exceeded by at most {figure(excess)}, tolerance {BOUND_SLACK:.0e}")
         if bad:
             yield Problem(
                 at(f"/hamiltonian/two_body/{key}/values", worst),
                 "|(pq|rs)| within sqrt((pq|qp)(rs|sr))",
-                f"{np.abs(values[worst]):.6g}, {excess:.3g} beyond",
-                "check the order of indices (chemists' notation), and for truncated integrals the threshold; "
-                "a model Hamiltonian may break the bound on purpose",
+                f"{value:.6g}, {excess:.3g} beyond",
+                "check the order of indices (chemists' notation); a model Hamiltonian may break the bound on purpose",
                 count=bad,
             )
-        yield Covered(f"{key}: all {len(values)} integrals")
+        yield Covered(f"{key}: {every(seen, 'integral')}")
+
+
+def _chunks(file: Inspection, key: str) -> Iterator[tuple[int, NDArray[np.int64], NDArray[Any]]]:
+    """The stored integrals of one key in pieces: number of the first, packed positions, values."""
+    path = f"/hamiltonian/two_body/{key}"
+    stored = file.shape(f"{path}/values")[0]
+    for start in range(0, stored, CHUNK):
+        stop = min(start + CHUNK, stored)
+        if file.has(f"{path}/index"):
+            position = np.asarray(file.raw.read(f"{path}/index", start, stop)).astype(np.int64)
+        else:
+            position = np.arange(start, stop, dtype=np.int64)
+        yield start, position, np.asarray(file.raw.read(f"{path}/values", start, stop))
+
+
+def _self_repulsion(file: Inspection, key: str, n: int, is_complex: bool) -> NDArray[np.float64]:
+    """(pairs) the stored (pq|qp), which is (pq|pq) for real orbitals."""
+    n_pairs = n * n if is_complex else n * (n + 1) // 2
+    diagonal, smallest = np.zeros(n_pairs), np.inf
+    for _, position, values in _chunks(file, key):
+        bra, ket = _pairs(position, n_pairs, True)
+        own = (bra % n) * n + bra // n == ket if is_complex else bra == ket
+        diagonal[bra[own]] = diagonal[ket[own]] = values[own].real
+        smallest = min(smallest, float(np.abs(values[values != 0]).min(initial=np.inf)))
+    # Lists of integrals are cut at a threshold: a diagonal that is not stored may be as large as that.
+    diagonal[diagonal == 0] = smallest if np.isfinite(smallest) else 0.0
+    return diagonal
 
 
 BOUND_SLACK = 1e-7

@@ -33,12 +33,12 @@ def finite_numbers(file: Inspection) -> Iterator[Remark]:
             continue
         looked += 1
         bad, first = 0, ""
-        for start, block in file.blocks(path):
+        for origin, block in file.pieces(path):
             mask = ~np.isfinite(block)
             here = int(np.count_nonzero(mask))
             if here and not bad:
                 index = first_true(mask)
-                first = at(path, (index[0] + start, *index[1:])) if index else path
+                first = at(path, tuple(o + k for o, k in zip(origin, index, strict=True)) or None)
                 value = block[index]
             bad += here
         if bad:

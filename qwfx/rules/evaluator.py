@@ -30,20 +30,24 @@ def evaluate_orbitals(
     derivatives: int = 2,
 ) -> NDArray[Any]:
     """(k, n, M) values and derivatives of orbitals; see `qwfx.reference.evaluate_orbitals`."""
-    if len(basis.exponents) * len(points) <= PLAIN_VALUES:
-        from qwfx import reference
-
-        return np.asarray(reference.evaluate_orbitals(basis, positions, coefficients, points, derivatives=derivatives))
-    from qwfx import kernels
-
-    return np.asarray(kernels.evaluate_orbitals(basis, positions, coefficients, points, derivatives=derivatives))
+    room = _implementation(len(basis.exponents) * len(points) <= PLAIN_VALUES)
+    # Absurd exponents overflow; the rules judge the infinities that come of it.
+    with np.errstate(over="ignore", invalid="ignore"):
+        return np.asarray(room.evaluate_orbitals(basis, positions, coefficients, points, derivatives=derivatives))
 
 
 def overlap(basis: Basis, positions: NDArray[np.float64]) -> NDArray[np.float64]:
     """(F, F) overlap of the functions; see `qwfx.reference.overlap`."""
-    if len(basis.exponents) ** 2 <= PLAIN_PRIMITIVE_PAIRS:
-        from qwfx.reference import overlap as integrals
-    else:
-        from qwfx.kernels import overlap as integrals
+    room = _implementation(len(basis.exponents) ** 2 <= PLAIN_PRIMITIVE_PAIRS)
     with np.errstate(over="ignore", invalid="ignore"):
-        return np.asarray(integrals(basis, positions))
+        return np.asarray(room.overlap(basis, positions))
+
+
+def _implementation(plain: bool) -> Any:
+    if plain:
+        from qwfx import reference
+
+        return reference
+    from qwfx import kernels
+
+    return kernels

@@ -44,7 +44,7 @@ class RawFile(Protocol):
 
     def shape(self, member: str) -> tuple[int, ...]: ...
 
-    def read(self, member: str, start: int | None = None, stop: int | None = None) -> NDArray[Any]: ...
+    def read(self, member: str, start: int | None = None, stop: int | None = None, axis: int = 0) -> NDArray[Any]: ...
 
 
 def member_of(where: str) -> str:
@@ -144,6 +144,21 @@ class Inspection:
                 self.progress(f"reading {member}", start / shape[0])
             first = max(0, start - overlap)
             yield first, np.asarray(self.raw.read(member, first, min(start + rows, shape[0])))
+
+    def pieces(self, member: str) -> Iterator[tuple[tuple[int, ...], NDArray[Any]]]:
+        """A data set cut along its longest axis, each part with the index of its first element."""
+        shape = self.shape(member)
+        if not shape:
+            yield (), np.asarray(self.raw.read(member))
+            return
+        axis = int(np.argmax(shape))
+        width = 16 * int(np.prod(shape, dtype=np.int64)) // max(shape[axis], 1)
+        step = max(1, BLOCK_BYTES // max(width, 1))
+        for start in range(0, shape[axis], step):
+            if self.progress is not None:
+                self.progress(f"reading {member}", start / shape[axis])
+            origin = tuple(start if k == axis else 0 for k in range(len(shape)))
+            yield origin, np.asarray(self.raw.read(member, start, min(start + step, shape[axis]), axis))
 
     # -- pieces that several rules need ----------------------------------------------------------------------
 

@@ -140,7 +140,7 @@ def rule(
     severity: Severity,
     summary: str,
     premise: Premise | None = None,
-    cost: str = "the outline",
+    cost: str = "",
     purposes: tuple[Purpose, ...] = PURPOSES,
 ) -> Callable[[Check], Check]:
     """Decorator that registers a generator function as a rule.
@@ -152,8 +152,10 @@ def rule(
     if tier in ("consistency", "algebra", "witness"):
         wanted = replace(wanted, rules=("dimensions", *wanted.rules))
 
+    price = cost or ("the outline" if tier == "structure" else "the small data sets that it is about")
+
     def wrap(check: Check) -> Check:
-        register(Rule(name, tier, severity, wanted, cost, purposes, summary, check))
+        register(Rule(name, tier, severity, wanted, price, purposes, summary, check))
         return check
 
     return wrap

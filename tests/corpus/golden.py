@@ -1,4 +1,4 @@
-"""Golden reports: what the validator says of each file of the corpus, compared whole.
+"""Golden reports: what the validator says of each file of the corpus, compared whole; the pages quote from them.
 
 After a change that is meant, write them anew and read the difference::
 
@@ -15,11 +15,15 @@ from typing import Any
 from corpus.edits import blocks_of, build
 from corpus.valid import VALID
 
+import qwfx.rules
+from qwfx.findings import Finding, Severity
 from qwfx.report import to_json
+from qwfx.report.text import finding_text
 from qwfx.rules import all_rules, page_body
 from qwfx.validate import validate
 
 GOLDEN = Path(__file__).parent / "golden"
+PAGES = Path(qwfx.rules.__file__).parent / "pages"
 
 
 def cases() -> dict[str, dict[str, str]]:
@@ -65,6 +69,16 @@ def dump(reports: dict[str, dict[str, Any]], bases: dict[str, str]) -> str:
     return "{\n" + ",\n".join(pieces) + "\n}\n"
 
 
+def with_finding(page: str, report: dict[str, Any], rule: str) -> str:
+    """The page with the first finding that its failing example gives, below the example."""
+    found = next(r for r in report["rules"] if r["rule"] == rule)["findings"][0]
+    text = finding_text(Finding(rule=rule, **{**found, "severity": Severity(found["severity"])}))
+    head, _, rest = page.partition("## Fails\n")
+    example, _, tail = rest.partition("## Passes\n")
+    block = example.split("```")[1]
+    return f"{head}## Fails\n\n```{block}```\n\ngives\n\n```text\n{text}```\n\n## Passes\n{tail}"
+
+
 def main() -> None:
     """Write all golden reports."""
     GOLDEN.mkdir(exist_ok=True)
@@ -76,6 +90,9 @@ def main() -> None:
             valid = name.startswith("valid-")
             bases = {heading: "" if valid else text.split()[0] for heading, text in examples.items()}
             (GOLDEN / f"{name}.json").write_text(dump(reports, bases), encoding="utf-8")
+            if not valid:
+                page = PAGES / f"{name}.md"
+                page.write_text(with_finding(page.read_text("utf-8"), reports["fails"], name), encoding="utf-8")
 
 
 if __name__ == "__main__":

@@ -204,7 +204,6 @@ def test_small_blocks_give_the_same_findings(
     path = build(f"square\n{change}", tmp_path / "a.qwfx")
     whole = validate(path, rules=[rule])
     monkeypatch.setattr("qwfx.rules.inspection.BLOCK_BYTES", 32)
-    monkeypatch.setattr("qwfx.rules.algebra_expansion.BLOCK_BYTES", 32)
     monkeypatch.setattr("qwfx.rules.consistency_expansion.ROWS_AT_A_TIME", 3)
     pieces = validate(path, rules=[rule])
     assert pieces.results == whole.results

@@ -38,8 +38,9 @@ class Memory:
     def shape(self, member: str) -> tuple[int, ...]:
         return self.arrays[member].shape
 
-    def read(self, member: str, start: int | None = None, stop: int | None = None) -> np.ndarray:
-        return self.arrays[member][start:stop] if self.arrays[member].ndim else self.arrays[member]
+    def read(self, member: str, start: int | None = None, stop: int | None = None, axis: int = 0) -> np.ndarray:
+        array = self.arrays[member]
+        return array[(slice(None),) * axis + (slice(start, stop),)] if array.ndim else array
 
 
 Check = Callable[[Inspection], Iterator[Remark]]
@@ -220,3 +221,16 @@ def test_blocks_cover_each_row_once_and_overlap_as_asked(monkeypatch: pytest.Mon
     assert [start for start, _ in pieces] == [0, 3, 6, 9]
     assert np.array_equal(np.concatenate([block for _, block in pieces]), rows)
     assert [(start, len(block)) for start, block in file.blocks("/a/x", overlap=1)] == [(0, 3), (2, 4), (5, 4), (8, 2)]
+
+
+@pytest.mark.parametrize("shape", [(2, 9), (9, 2), (3, 2, 4), (5,), ()])
+def test_pieces_cover_each_element_once(shape: tuple[int, ...], monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr("qwfx.rules.inspection.BLOCK_BYTES", 16 * 2 * 4)
+    whole = np.arange(np.prod(shape, dtype=int)).reshape(shape)
+    copy = np.full(shape, -1)
+    for origin, piece in Inspection(Memory(a__x=whole)).pieces("/a/x"):
+        place = tuple(slice(o, o + n) for o, n in zip(origin, piece.shape, strict=True))
+        assert (copy[place] == -1).all()
+        copy[place] = piece
+        assert piece.size <= 12
+    assert np.array_equal(copy, whole)

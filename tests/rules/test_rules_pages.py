@@ -7,7 +7,7 @@ from importlib.resources import files
 
 import pytest
 from corpus.edits import blocks_of
-from corpus.golden import load
+from corpus.golden import load, with_finding
 
 from qwfx.findings import Severity
 from qwfx.rules import TIERS, all_rules, page_body, rule_page
@@ -63,3 +63,8 @@ def test_failing_example_fires_and_the_mended_one_does_not(name: str) -> None:
     assert mended["outcome"] in ("passed", "found"), mended["reason"]
     assert max((RANK[Severity(f["severity"])] for f in mended["findings"]), default=-1) < worst
     assert golden["passes"]["counts"]["findings"]["error"] == 0
+
+
+@pytest.mark.parametrize("name", NAMES)
+def test_page_quotes_what_its_failing_example_gives(name: str) -> None:
+    assert with_finding(page_body(name), load(name)["fails"], name) == page_body(name)
