@@ -171,3 +171,37 @@ def string_occupations(file: Inspection) -> Iterator[Remark]:
                 count=int(wrong.sum()),
             )
     yield Covered(f"all orbitals of sets {listed(chosen)}")
+
+
+@rule(
+    name="string-roles",
+    tier="algebra",
+    severity=Severity.WARNING,
+    premise=Premise(
+        members=("/expansion", "/orbitals"),
+        rules=("named-sets", "string-electrons", "string-range", "role-words"),
+    ),
+    cost="one pass over the strings",
+    purposes=TRIAL,
+    summary="all strings occupy core orbitals and none occupies virtual ones",
+)
+def string_roles(file: Inspection) -> Iterator[Remark]:
+    names = {spin: str(file.attribute("/expansion", f"{spin}_set")) for spin in ("up", "down")}
+    chosen = [n for n in dict.fromkeys(names.values()) if file.usable(f"/orbitals/{n}/roles")]
+    if not chosen:
+        raise PremiseError("the sets of the expansion have no roles")
+    for name in chosen:
+        member = f"/orbitals/{name}/roles"
+        roles = np.array(file.strings(member))
+        for spin in (s for s in ("up", "down") if names[s] == name):
+            always, ever = _always_and_ever(file, f"/expansion/{spin}_strings", len(roles))
+            for word, wrong in (("core", (roles == "core") & ~always), ("virtual", (roles == "virtual") & ever)):
+                if wrong.any():
+                    yield Problem(
+                        at(member, int(np.argmax(wrong))),
+                        f"an orbital that {'every' if word == 'core' else 'no'} {spin} string occupies",
+                        f"{word!r}, though {'not all do' if word == 'core' else 'some do'}",
+                        "correct the roles, or the strings",
+                        count=int(wrong.sum()),
+                    )
+    yield Covered(f"all orbitals of sets {listed(chosen)}")

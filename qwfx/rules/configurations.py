@@ -8,7 +8,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-__all__ = ["DeterminantSum", "LocalValues", "evaluate", "occupied"]
+__all__ = ["DeterminantSum", "LocalValues", "coulomb", "evaluate", "occupied"]
 
 
 @dataclass(frozen=True)
@@ -89,3 +89,21 @@ def evaluate(total: DeterminantSum, phi_up: NDArray[Any], phi_down: NDArray[Any]
         ratios = np.concatenate([by_up[:, 1:], by_down[:, 1:]], axis=1).reshape(states, -1, 4) / D[:, None, None]
         return LocalValues(np.log(np.abs(D)) + up_shift + down_shift, D / np.abs(D), ratios[..., :3],
                            ratios[..., 3].sum(axis=1))  # fmt: skip
+
+
+def coulomb(
+    places: NDArray[np.float64], nuclei: NDArray[np.float64], charges: NDArray[np.float64]
+) -> NDArray[np.float64]:
+    """(m) potential energy in hartree of electrons at (m, N, 3) and nuclei at (A, 3), repulsion of nuclei included."""
+
+    def inverse(a: NDArray[np.float64]) -> NDArray[np.float64]:
+        with np.errstate(divide="ignore"):
+            return np.asarray(1.0 / np.linalg.norm(a, axis=-1))
+
+    i, j = np.triu_indices(places.shape[1], 1)
+    a, b = np.triu_indices(len(nuclei), 1)
+    a, b = a[charges[a] * charges[b] > 0], b[charges[a] * charges[b] > 0]
+    real = charges > 0
+    attraction = inverse(places[:, :, None] - nuclei[real]) @ charges[real]
+    repulsion = float((charges[a] * charges[b] * inverse(nuclei[a] - nuclei[b])).sum())
+    return np.asarray(inverse(places[:, i] - places[:, j]).sum(axis=1) - attraction.sum(axis=1) + repulsion)

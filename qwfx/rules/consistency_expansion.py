@@ -121,17 +121,17 @@ def string_order(file: Inspection) -> Iterator[Remark]:
     premise=Premise(members=(*STRINGS, "/orbitals"), rules=("named-sets",)),
     cost=ONE_PASS_STRINGS,
     purposes=TRIAL,
-    summary="strings occupy orbitals that exist, in no more words than that takes",
+    summary="strings occupy orbitals that exist, in as many words as that takes",
 )
 def string_range(file: Inspection) -> Iterator[Remark]:
+    sizes = {}
     for member in STRINGS:
         spin = _spin_of(member)
         name = file.attribute("/expansion", f"{spin}_set")
         if name not in file.orbital_sets or not file.usable(f"/orbitals/{name}/coefficients"):
             continue
         n_orbitals = file.shape(f"/orbitals/{name}/coefficients")[0]
-        n_words = file.shape(member)[1]
-        enough = max(1, -(-n_orbitals // WORD))
+        n_words, sizes[name] = file.shape(member)[1], n_orbitals
         allowed = np.array(
             [(1 << min(max(n_orbitals - WORD * w, 0), WORD)) - 1 for w in range(n_words)], dtype=np.uint64
         )
@@ -149,15 +149,16 @@ def string_range(file: Inspection) -> Iterator[Remark]:
                 "number orbitals as the rows of the set",
                 count=bad,
             )
-        if n_words > enough:
-            yield Problem(
-                member,
-                f"{enough} words for {n_orbitals} orbitals",
-                f"{n_words} words",
-                "leave out the words that are always 0",
-                Severity.NOTE,
-            )
         yield Covered(every(file.shape(member)[0], f"{spin} string"))
+    enough = max([1, *(-(-n_orbitals // WORD) for n_orbitals in sizes.values())])
+    n_words = file.shape(STRINGS[0])[1]
+    if sizes and n_words != enough:
+        yield Problem(
+            "/expansion/up_strings",
+            f"strings of {enough} words of 64 bits, for {max(sizes.values())} orbitals",
+            f"{n_words} words",
+            "use as many words as the larger of the two sets takes",
+        )
 
 
 @rule(
@@ -269,7 +270,7 @@ def column_order(file: Inspection) -> Iterator[Remark]:
 @rule(
     name="unused-strings",
     tier="consistency",
-    severity=Severity.NOTE,
+    severity=Severity.WARNING,
     premise=Premise(members=MATRIX, rules=("row-offsets", "column-order")),
     cost=ONE_PASS_MATRIX,
     purposes=TRIAL,

@@ -125,3 +125,49 @@ def orbital_capacity(file: Inspection) -> Iterator[Remark]:
                 Severity.NOTE if file.has("/orbitals") else None,
             )
     yield Measured(f"{n} orbitals")
+
+
+@rule(
+    name="density-orbitals",
+    tier="consistency",
+    severity=Severity.ERROR,
+    premise=Premise(members=("/densities",), rules=("named-sets",)),
+    summary="density matrices number orbitals that the file has",
+)
+def density_orbitals(file: Inspection) -> Iterator[Remark]:
+    """Those of the Hamiltonian, else of the sets that the expansion names, else of the only set for the spin."""
+    looked = 0
+    for order in ("one_body", "two_body"):
+        for key in file.members(f"/densities/{order}"):
+            member = f"/densities/{order}/{key}"
+            shape = file.shape(member)
+            for axis, spin in ((1, key.partition("_")[0]), (len(shape) - 1, key.rpartition("_")[2])):
+                wanted = _orbitals_of(file, spin)
+                looked += 1
+                if wanted is None:
+                    yield Problem(
+                        member,
+                        "a Hamiltonian, an expansion or a single orbital set, whose orbitals the matrix numbers",
+                        "none of the three",
+                        "write the orbitals, or leave the densities out",
+                    )
+                elif shape[axis] != wanted:
+                    yield Problem(
+                        member,
+                        f"{wanted} orbitals of spin {spin}",
+                        f"extent {shape[axis]} of axis {axis}",
+                        "write the matrix over all orbitals, zeros included",
+                    )
+    yield Covered(f"density matrices of {looked // 2} kinds of spin")
+
+
+def _orbitals_of(file: Inspection, spin: str) -> int | None:
+    if file.usable("/hamiltonian"):
+        return file.integer("/hamiltonian", "n_orbitals")
+    if file.usable("/expansion"):
+        sets = [str(file.attribute("/expansion", f"{'down' if spin == 'down' else 'up'}_set"))]
+    else:
+        sets = [name for name in file.orbital_sets if file.spin(name) in (spin, "both")]
+    if len(sets) != 1 or not file.usable(f"/orbitals/{sets[0]}/coefficients"):
+        return None
+    return file.shape(f"/orbitals/{sets[0]}/coefficients")[0]

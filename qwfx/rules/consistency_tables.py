@@ -134,11 +134,43 @@ def witness_sets(file: Inspection) -> Iterator[Remark]:
 
 
 @rule(
+    name="witness-points",
+    tier="consistency",
+    severity=Severity.WARNING,
+    premise=Premise(members=("/witness/points", "/system/positions"), rules=("finite-numbers",)),
+    purposes=("orbitals", "trial"),
+    summary="no witness point stands on a nucleus, and no two are the same",
+)
+def witness_points(file: Inspection) -> Iterator[Remark]:
+    """On a nucleus the Laplacian of a Slater function does not exist, and that of a Gaussian says little."""
+    points, positions = file.read("/witness/points").astype(np.float64), file.positions
+    for k, point in enumerate(points):
+        if len(positions) and np.linalg.norm(positions - point, axis=1).min() < ON_A_NUCLEUS:
+            yield Problem(
+                at("/witness/points", k),
+                "a point off the nuclei",
+                "it stands on one",
+                "choose points near nuclei, not on them",
+            )
+    if len(np.unique(points, axis=0)) < len(points):
+        yield Problem(
+            "/witness/points",
+            "points that differ",
+            f"{len(points) - len(np.unique(points, axis=0))} are repeated",
+            "remove them: a point that is given twice proves nothing more",
+        )
+    yield Covered(every(len(points), "point"))
+
+
+ON_A_NUCLEUS = 1e-6  # bohr
+
+
+@rule(
     name="provenance-steps",
     tier="consistency",
     severity=Severity.ERROR,
     premise=Premise(members=("/provenance/steps",)),
-    summary="provenance is a JSON array of objects, each with an activity",
+    summary="provenance is a JSON array of steps, each with activity, agent and time",
 )
 def provenance_steps(file: Inspection) -> Iterator[Remark]:
     member, expected = "/provenance/steps", "a JSON array of objects, oldest step first"
@@ -151,13 +183,16 @@ def provenance_steps(file: Inspection) -> Iterator[Remark]:
     if not isinstance(steps, list) or not all(isinstance(step, dict) for step in steps):
         yield Problem(member, expected, f"JSON of another kind ({type(steps).__name__})", "write an array of objects")
         return
-    for i, step in enumerate(steps):
-        if not isinstance(step.get("activity"), str):
-            yield Problem(
-                at(member, i),
-                "an activity, such as 'conversion'",
-                f"keys {listed(step) or 'none'}",
-                "say what was done in each step",
-                Severity.WARNING,
-            )
+    from jsonschema import Draft202012Validator
+
+    from qwfx.schema_check import load_schema
+
+    for error in Draft202012Validator(load_schema("provenance")).iter_errors(steps):
+        place = ", ".join(f"{key}" for key in list(error.absolute_path)[1:])
+        yield Problem(
+            at(member, error.absolute_path[0]),
+            "activity, agent and time (ISO 8601, UTC), with used and generated as lists of entities",
+            f"{place + ': ' if place else ''}{error.message[:200]}",
+            "see FORMAT.md, provenance",
+        )
     yield Covered(every(len(steps), "step"))

@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 
 from qwfx.findings import Severity
 from qwfx.rules.algebra_orbitals import BASIS_RULES
-from qwfx.rules.configurations import DeterminantSum, evaluate, occupied
+from qwfx.rules.configurations import DeterminantSum, coulomb, evaluate, occupied
 from qwfx.rules.diagnosis import explain_mismatch
 from qwfx.rules.evaluator import evaluate_orbitals
 from qwfx.rules.inspection import Inspection
@@ -192,6 +192,7 @@ def witness_configurations(file: Inspection) -> Iterator[Remark]:
                 gap = float(np.abs(ours[state] - value[state, m]).max(initial=0.0)) / scale
                 if not gap <= worst[word][0]:  # true for NaN as well
                     worst[word] = (gap, state, m)
+    worst.update(_energies(file, positions))
     yield Measured(f"largest deviation: {', '.join(f'{w} {figure(d[0])}' for w, d in worst.items())}")
     # The first that is off stands for what follows from it: a wrong D has wrong derivatives.
     off = next((word for word, (gap, _, _) in worst.items() if not gap <= WITNESS_WARNING), None)
@@ -207,7 +208,32 @@ def witness_configurations(file: Inspection) -> Iterator[Remark]:
             else "write witness and coefficients with all their digits",
             None if error else Severity.WARNING,
         )
-    yield Covered(f"D at {affordable} of {len(positions)} configurations; potential and local energy are not evaluated")
+    left_out = [word for word in ("potential", "local_energy") if file.has(f"{group}/{word}") and word not in worst]
+    beyond = f"; {' and '.join(left_out)} not evaluated" if left_out else ""
+    yield Covered(f"D at {affordable} of {len(positions)} configurations{beyond}")
+
+
+def _energies(file: Inspection, positions: NDArray[np.float64]) -> dict[str, tuple[float, int, int]]:
+    """Worst deviation of the potential, where it is Coulomb's alone, and of the local energy, where Psi is D."""
+    group = "/witness/configurations"
+    result: dict[str, tuple[float, int, int]] = {}
+    if file.has("/jastrow"):
+        return result
+    if file.has(f"{group}/potential") and not file.has("/potentials"):
+        ours = coulomb(positions, file.positions, file.read("/system/effective_charges"))
+        result["potential"] = _worst(file.read(f"{group}/potential"), ours)
+    if file.has(f"{group}/potential") and file.has(f"{group}/local_energy"):
+        ours = file.read(f"{group}/potential") - 0.5 * file.read(f"{group}/laplacian")
+        result["local_energy"] = _worst(file.read(f"{group}/local_energy"), ours)
+    return result
+
+
+def _worst(theirs: NDArray[Any], ours: NDArray[Any]) -> tuple[float, int, int]:
+    gap = np.nan_to_num(np.abs(theirs - ours) / np.maximum(1.0, np.abs(theirs)), nan=np.inf)
+    if not gap.size:
+        return 0.0, 0, 0
+    state, m = (int(i) for i in np.unravel_index(int(gap.argmax()), gap.shape))
+    return float(gap[state, m]), state, m
 
 
 MANY_ENTRIES = 1 << 22

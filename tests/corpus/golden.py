@@ -8,6 +8,7 @@ After a change that is meant, write them anew and read the difference::
 from __future__ import annotations
 
 import json
+import re
 import tempfile
 from pathlib import Path
 from typing import Any
@@ -39,7 +40,8 @@ def report_of(text: str, folder: Path) -> dict[str, Any]:
     report = to_json(validate(build(text, folder / "example.qwfx")))["files"][0]
     report["file"] = "example.qwfx"
     report["content_digest"] = "sealed" if report["content_digest"] else ""
-    return dict(report)
+    # Digests of computed numbers may differ between mathematical libraries by the last bit of an exponential.
+    return dict(json.loads(re.sub(r"\b(?!0{16})[0-9a-f]{16}\.\.\.", "0123456789abcdef...", json.dumps(report))))
 
 
 def load(name: str) -> dict[str, dict[str, Any]]:

@@ -21,6 +21,7 @@ from qwfx.model import (
     Energies,
     Expansion,
     Hamiltonian,
+    JastrowTerm,
     OrbitalSet,
     Potentials,
     Provenance,
@@ -181,6 +182,74 @@ def helium() -> Wavefunction:
     )
 
 
+def dressed() -> Wavefunction:
+    """Two helium atoms with a Jastrow term of each form."""
+    one = helium()
+    assert one.basis is not None
+    far = system("He1 He2", 2, 2, [[0, 0, 0], [0, 0, 6.0]])
+    doubled = {
+        name: np.tile(getattr(one.basis, name), 2)
+        for name in ("shell_l", "shell_monomial", "exponents", "coefficients")
+    }
+    basis = Basis(
+        radial="slater",
+        shell_center=np.array([0, 0, 1, 1], dtype=np.int32),
+        primitive_start=np.arange(5, dtype=np.int64),
+        **doubled,
+    )
+    c = np.asarray(one.orbitals["main"].coefficients)[0]
+    from qwfx.reference import overlap
+
+    C = np.zeros((2, 4))
+    C[0, :2] = C[1, 2:] = c
+    C = lowdin(C @ overlap(basis, far.positions) @ C.T) @ C
+    return Wavefunction(
+        system=far,
+        basis=basis,
+        orbitals={"main": OrbitalSet("both", C, occupations=np.array([2.0, 2.0]))},
+        expansion=determinant(3, 3),
+        jastrow={
+            "pairs": JastrowTerm(
+                "pade",
+                {"body": "electron-electron"},
+                {"channel": np.array(["up_down", "up_up"]), "a": np.array([0.5, 0.25]), "b": np.array([1.0, 1.0])},
+            ),
+            "nuclei": JastrowTerm(
+                "cutoff-polynomial",
+                {"body": "electron-nucleus", "smoothness": 3},
+                {
+                    "channel": np.array(["up", "down"]),
+                    "atoms": np.array([0, 1], dtype=np.int32),
+                    "cutoff": np.array([4.0, 4.0]),
+                    "coefficients": np.array([[0.01, 0.01 * 3 / 4], [0.01, 0.01 * 3 / 4]]),
+                },
+            ),
+            "inner": JastrowTerm(
+                "scaled-polynomial",
+                {"body": "three-body"},
+                {
+                    "channel": np.array(["up_down", "up_up", "down_down"]),
+                    "atoms": np.array([0, 1], dtype=np.int32),
+                    "scale": np.ones(3),
+                    "scale_electron": np.ones(3),
+                    "powers": np.array([[1, 1, 2], [2, 0, 2]], dtype=np.int32),
+                    "coefficients": np.full((3, 2), -0.05),
+                },
+            ),
+            "splines": JastrowTerm(
+                "bspline",
+                {"body": "electron-electron"},
+                {
+                    "channel": np.array(["up_down", "up_up", "down_down"]),
+                    "cutoff": np.full(3, 5.0),
+                    "coefficients": np.tile([0.2, 0.1, 0.05, 0.02], (3, 1)),
+                },
+            ),
+        },
+        provenance=MADE,
+    )
+
+
 def triplet() -> Wavefunction:
     """Helium 1s2p with complex p orbitals of m = +1, and no down electron."""
     a_s, a_p = 1.2, 0.25
@@ -233,7 +302,17 @@ def _configurations(
                     rows[i % 2] = phi[k + 1][:, i]
                     derivative[:, :, i, k] += np.multiply.outer(c, _pair((rows[0], rows[1]), *pairs[s]) * plain[1 - s])
     ratio = derivative / D[:, :, None, None]
-    return WitnessConfigurations(places, np.log(np.abs(D)), np.sign(D), ratio[..., :3], ratio[..., 3].sum(axis=2))
+    total = ratio[..., 3].sum(axis=2)
+    potential = np.tile([_coulomb(place, positions) for place in places], (n_states, 1))
+    return WitnessConfigurations(
+        places, np.log(np.abs(D)), np.sign(D), ratio[..., :3], total, potential, potential - total / 2
+    )
+
+
+def _coulomb(electrons: NDArray[np.float64], protons: NDArray[np.float64]) -> float:
+    """Potential energy of electrons and protons, pair by pair."""
+    particles = [(-1, r) for r in electrons] + [(1, r) for r in protons]
+    return sum(q * p / float(np.linalg.norm(r - s)) for k, (q, r) in enumerate(particles) for p, s in particles[:k])
 
 
 def square() -> Wavefunction:
@@ -432,6 +511,7 @@ VALID: dict[str, Callable[[], Wavefunction]] = {
     for f in (
         hydrogen,
         helium,
+        dressed,
         triplet,
         square,
         watched,
