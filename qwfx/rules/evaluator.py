@@ -6,6 +6,7 @@ judged in a fraction of a second even where the compiled kernels are not cached 
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from typing import Any
 
 import numpy as np
@@ -15,9 +16,9 @@ from qwfx.model import Basis
 
 __all__ = ["evaluate_orbitals", "overlap"]
 
-PLAIN_PRIMITIVE_PAIRS = 10_000
+PLAIN_PRIMITIVE_PAIRS = 3_000
 """Pairs of primitives up to which the plain overlap integrals take less time than loading the compiled ones."""
-PLAIN_VALUES = 300_000
+PLAIN_VALUES = 100_000
 """Primitives times points, likewise for values at points."""
 
 
@@ -28,26 +29,31 @@ def evaluate_orbitals(
     points: NDArray[np.float64],
     *,
     derivatives: int = 2,
+    progress: Callable[[str, float], None] | None = None,
 ) -> NDArray[Any]:
     """(k, n, M) values and derivatives of orbitals; see `qwfx.reference.evaluate_orbitals`."""
-    room = _implementation(len(basis.exponents) * len(points) <= PLAIN_VALUES)
+    room = _implementation(len(basis.exponents) * len(points) <= PLAIN_VALUES, progress)
     # Absurd exponents overflow; the rules judge the infinities that come of it.
     with np.errstate(over="ignore", invalid="ignore"):
         return np.asarray(room.evaluate_orbitals(basis, positions, coefficients, points, derivatives=derivatives))
 
 
-def overlap(basis: Basis, positions: NDArray[np.float64]) -> NDArray[np.float64]:
+def overlap(
+    basis: Basis, positions: NDArray[np.float64], progress: Callable[[str, float], None] | None = None
+) -> NDArray[np.float64]:
     """(F, F) overlap of the functions; see `qwfx.reference.overlap`."""
-    room = _implementation(len(basis.exponents) ** 2 <= PLAIN_PRIMITIVE_PAIRS)
+    room = _implementation(len(basis.exponents) ** 2 <= PLAIN_PRIMITIVE_PAIRS, progress)
     with np.errstate(over="ignore", invalid="ignore"):
         return np.asarray(room.overlap(basis, positions))
 
 
-def _implementation(plain: bool) -> Any:
+def _implementation(plain: bool, progress: Callable[[str, float], None] | None) -> Any:
     if plain:
         from qwfx import reference
 
         return reference
     from qwfx import kernels
 
+    if not kernels.compiled():
+        kernels.prepare(progress)
     return kernels

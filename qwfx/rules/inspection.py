@@ -215,7 +215,7 @@ class Inspection:
             self.progress("overlap integrals", 0.0)
         from qwfx.rules.evaluator import overlap
 
-        return np.asarray(overlap(self.basis, self.positions))
+        return np.asarray(overlap(self.basis, self.positions, self.progress))
 
 
 OVERLAP_LIMIT = 8000

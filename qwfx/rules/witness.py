@@ -95,7 +95,9 @@ def witness_orbitals(file: Inspection) -> Iterator[Remark]:
             word: np.asarray(file.read(f"/witness/orbitals/{name}/{word}"))
             for word in ("values", "gradients", "laplacians")
         }
-        deviation = compare_set(evaluate_orbitals(file.basis, file.positions, C, points), **witness)
+        deviation = compare_set(
+            evaluate_orbitals(file.basis, file.positions, C, points, progress=file.progress), **witness
+        )
         figures = ", ".join(f"{word} {figure(d.max(initial=0.0))}" for word, d in deviation.items())
         yield Measured(f"{name}: largest relative deviation: {figures}; tolerance {WITNESS_WARNING:.0e}")
         yield from _judge(file, name, C, points, witness, deviation)
