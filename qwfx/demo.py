@@ -18,7 +18,7 @@ import numpy as np
 from qwfx.findings import Report
 from qwfx.model import Wavefunction
 
-__all__ = ["MOLECULES", "Molecule", "run_demo"]
+__all__ = ["MOLECULES", "Molecule", "break_on_purpose", "compute", "run_demo"]
 
 
 @dataclass(frozen=True)
@@ -45,7 +45,7 @@ MOLECULES = (
 Say = Callable[[str], None]
 
 
-def _compute(molecule: Molecule, folder: Path) -> tuple[Any, Path]:
+def compute(molecule: Molecule, folder: Path) -> tuple[Any, Path]:
     """SCF by PySCF; the mean-field object and the checkpoint it left."""
     from pyscf import gto, scf
 
@@ -80,7 +80,7 @@ def _file_and_back(molecule: Molecule, folder: Path, say: Say) -> bool:
     from qwfx.storage import load
     from qwfx.validate import validate
 
-    mf, checkpoint = _compute(molecule, folder)
+    mf, checkpoint = compute(molecule, folder)
     say(f"\n{molecule.title}")
     say(f"  PySCF SCF energy                 {mf.e_tot:16.9f} hartree")
     target = folder / f"{molecule.name}.qwfx"

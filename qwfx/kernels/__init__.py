@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from qwfx.kernels.compilation import compiled, prepare
 from qwfx.kernels.evaluate import evaluate_functions, evaluate_orbitals
+from qwfx.kernels.overlap import overlap
 
-__all__ = ["evaluate_functions", "evaluate_orbitals"]
+__all__ = ["compiled", "evaluate_functions", "evaluate_orbitals", "overlap", "prepare"]

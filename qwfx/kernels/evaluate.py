@@ -3,8 +3,9 @@
 from __future__ import annotations
 
 import os
-from collections.abc import Callable, Iterator
+from collections.abc import Callable
 from concurrent.futures import ThreadPoolExecutor
+from itertools import pairwise
 from typing import Any
 
 import numpy as np
@@ -12,7 +13,7 @@ from numpy.typing import NDArray
 
 from qwfx import reference
 from qwfx.errors import EvaluationError
-from qwfx.kernels.numeric import fill_block
+from qwfx.kernels.numeric import fill_blocks
 from qwfx.kernels.plan import BLOCK, Plan, Workspace, make_plan
 from qwfx.model import Array, Basis
 
@@ -29,6 +30,7 @@ def evaluate_functions(
     derivatives: int = 2,
     threshold: float = 0.0,
     threads: int | None = None,
+    out: NDArray[np.float64] | None = None,
 ) -> NDArray[np.float64]:
     """All functions of a basis at the given points (FORMAT.md, Functions).
 
@@ -41,6 +43,8 @@ def evaluate_functions(
     threshold : shells whose values, gradients and Laplacians are all below this at every point of a block of
         points are left at zero there. 0.0 leaves nothing out. The bound is rigorous, see `Plan.cutoffs`.
     threads : number of threads; None takes all processors. The result does not depend on it.
+    out : (k, F, n) doubles in C order to write to and return a view of; saves fresh memory, which for big results
+        takes as long as the evaluation.
 
     Returns
     -------
@@ -55,21 +59,30 @@ def evaluate_functions(
     """
     plan, columns = _checked(basis, positions, points, derivatives)
     k, n = ROWS[derivatives], columns.shape[1]
-    result = np.empty((k, plan.n_functions, n))
+    shape = (k, plan.n_functions, n)
+    result = np.empty(shape) if out is None else out
+    if result.shape != shape or result.dtype != np.float64 or not result.flags.c_contiguous:
+        raise EvaluationError(
+            f"an array of {result.dtype} and shape {result.shape}",
+            where="out",
+            expected=f"float64 {shape} in C order",
+            remedy="pass such an array, or none",
+        )
     flat = result.reshape(k * plan.n_functions, n)
-    cutoffs = plan.cutoffs(threshold)
+    skip = _skipped(plan, plan.cutoffs(threshold), columns)
 
-    def work(space: Workspace, first: int, size: int) -> None:
-        skip = _skipped(plan, cutoffs, columns[:, first : first + size])
-        for s in np.flatnonzero(skip):
+    def work(space: Workspace, first: int, last: int) -> None:
+        for block, s in np.argwhere(skip[first:last]):
             function = slice(int(plan.shell_function[s]), int(plan.shell_function[s] + plan.shell_size[s]))
-            result[:, function, first : first + size] = 0.0
-        _fill(plan, columns, first, size, derivatives, space, skip, plan.shell_function, 1, plan.n_functions, flat, first)
+            start = (first + int(block)) * BLOCK
+            result[:, function, start : start + BLOCK] = 0.0
+        _fill(plan, columns, first, last, derivatives, space, skip, plan.shell_function, 1, plan.n_functions, flat, 0)
 
     _over_blocks(plan, n, threads, work)
     values: NDArray[np.float64] = result.transpose(0, 2, 1)
     for i in _points_at(plan.singular_centers, columns):
-        values[:, i] = reference.evaluate_functions(basis, positions, columns[:, i][None], derivatives=derivatives)[:, 0]
+        at = columns[:, i][None]
+        values[:, i] = reference.evaluate_functions(basis, positions, at, derivatives=derivatives)[:, 0]
     return values
 
 
@@ -118,21 +131,19 @@ def evaluate_orbitals(
     stacked = np.concatenate([matrix.real, matrix.imag]) if is_complex else matrix
     stacked = np.ascontiguousarray(stacked, dtype=np.float64)
     result = np.empty((k, len(stacked), n))
-    cutoffs = plan.cutoffs(threshold)
-    scratch: dict[int, tuple[NDArray[np.float64], NDArray[np.float64]]] = {}
+    skip = _skipped(plan, plan.cutoffs(threshold), columns)
 
-    def work(space: Workspace, first: int, size: int) -> None:
-        if id(space) not in scratch:
-            scratch[id(space)] = np.empty(plan.n_functions * k * BLOCK), np.empty(len(stacked) * k * BLOCK)
-        functions, orbitals = scratch[id(space)]
-        skip = _skipped(plan, cutoffs, columns[:, first : first + size])
-        rows, used = _compact(plan, skip)
-        x = functions[: used * k * size].reshape(used * k, size)
-        _fill(plan, columns, first, size, derivatives, space, skip, rows * k, k, 1, x, 0)
-        y = orbitals[: len(stacked) * k * size].reshape(len(stacked), k * size)
-        taken = stacked if used == plan.n_functions else stacked[:, _used_functions(plan, skip)]
-        np.matmul(taken, x.reshape(used, k * size), out=y)
-        result[:, :, first : first + size] = y.reshape(len(stacked), k, size).transpose(1, 0, 2)
+    def work(space: Workspace, first: int, last: int) -> None:
+        functions, orbitals = np.empty(plan.n_functions * k * BLOCK), np.empty(len(stacked) * k * BLOCK)
+        for block in range(first, last):
+            start, size = block * BLOCK, min(BLOCK, n - block * BLOCK)
+            rows, used = _compact(plan, skip[block])
+            x = functions[: used * k * size].reshape(used * k, size)
+            _fill(plan, columns, block, block + 1, derivatives, space, skip, rows * k, k, 1, x, start)
+            y = orbitals[: len(stacked) * k * size].reshape(len(stacked), k * size)
+            taken = stacked if used == plan.n_functions else stacked[:, _used_functions(plan, skip[block])]
+            np.matmul(taken, x.reshape(used, k * size), out=y)
+            result[:, :, start : start + size] = y.reshape(len(stacked), k, size).transpose(1, 0, 2)
 
     _over_blocks(plan, n, threads, work)
     if is_complex:
@@ -162,30 +173,28 @@ def _checked(
 
 
 def _over_blocks(plan: Plan, n: int, threads: int | None, work: Callable[[Workspace, int, int], None]) -> None:
-    """Call `work` for every block of points, each thread with a workspace of its own."""
-    starts = list(range(0, n, BLOCK))
-    n_threads = min(threads or os.cpu_count() or 1, len(starts)) or 1
-
-    def share(own: Iterator[int]) -> None:
-        space = Workspace(plan, BLOCK)
-        for first in own:
-            work(space, first, min(BLOCK, n - first))
-
+    """Call `work` for ranges of blocks of points, each thread with a workspace of its own."""
+    blocks = -(-n // BLOCK)
+    n_threads = max(min(threads or os.cpu_count() or 1, blocks), 1)
+    bounds = [blocks * t // n_threads for t in range(n_threads + 1)]
     if n_threads == 1:
-        share(iter(starts))
+        work(Workspace(plan, BLOCK), 0, blocks)
         return
     with ThreadPoolExecutor(n_threads) as pool:
-        for done in [pool.submit(share, iter(starts[t::n_threads])) for t in range(n_threads)]:
-            done.result()
+        jobs = [pool.submit(work, Workspace(plan, BLOCK), first, last) for first, last in pairwise(bounds)]
+        for job in jobs:
+            job.result()
 
 
 def _skipped(plan: Plan, cutoffs: NDArray[np.float64], columns: NDArray[np.float64]) -> NDArray[np.bool_]:
-    """Which sorted shells are negligible at all points of a block, by the distance of its nearest point."""
-    if np.isinf(cutoffs).all():
-        return np.zeros(len(cutoffs), dtype=bool)
-    # The nearest point is at least as far as the box around the block.
-    outside = np.maximum(columns.min(axis=1) - plan.centers, plan.centers - columns.max(axis=1)).clip(min=0.0)
-    nearest = np.repeat(np.linalg.norm(outside, axis=1), np.diff(plan.atom_shells))
+    """(blocks, S): which sorted shells are negligible at all points of a block, by the box around its points."""
+    starts = np.arange(0, columns.shape[1], BLOCK)
+    if np.isinf(cutoffs).all() or not len(starts):
+        return np.zeros((len(starts), len(cutoffs)), dtype=bool)
+    low = np.minimum.reduceat(columns, starts, axis=1).T[:, None, :]
+    high = np.maximum.reduceat(columns, starts, axis=1).T[:, None, :]
+    outside = np.maximum(low - plan.centers, plan.centers - high).clip(min=0.0)
+    nearest = np.repeat(np.linalg.norm(outside, axis=2), np.diff(plan.atom_shells), axis=1)
     return np.asarray(nearest > cutoffs)
 
 
@@ -219,14 +228,14 @@ def _points_at(centers: NDArray[np.float64], columns: NDArray[np.float64]) -> ND
 
 
 def _fill(
-    plan: Plan, columns: NDArray[np.float64], first: int, size: int, derivatives: int, space: Workspace,
+    plan: Plan, columns: NDArray[np.float64], first: int, last: int, derivatives: int, space: Workspace,
     skip: NDArray[np.bool_], row_of: NDArray[np.int64], function_stride: int, stride: int,
-    out: NDArray[np.float64], start: int,
+    out: NDArray[np.float64], shift: int,
 ) -> None:  # fmt: skip
-    fill_block(
-        columns, first, size, plan.centers, plan.atom_shells, plan.atom_exponents, plan.unique_exponents,
+    fill_blocks(
+        columns, first, last, BLOCK, plan.centers, plan.atom_shells, plan.atom_exponents, plan.unique_exponents,
         plan.shell_l, plan.shell_monomial, plan.shell_first, plan.shell_simple, plan.scale, plan.decay, plan.power,
-        plan.exponent_of, plan.q, plan.norms, derivatives, space.xyz, space.e, space.w, space.bits, space.bits_as_int,
+        plan.exponent_of, plan.q, plan.norms, derivatives, space.xyz, space.e, space.w,
         space.polar, space.plane, space.solid, space.cartesian, space.monomial, skip, row_of, function_stride, stride,
-        out, start,
+        out, shift,
     )  # fmt: skip

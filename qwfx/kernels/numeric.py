@@ -11,9 +11,11 @@ from __future__ import annotations
 from typing import Any
 
 import numpy as np
-from numba import njit
+from llvmlite import ir
+from numba import njit, types
+from numba.extending import intrinsic
 
-__all__ = ["LARGEST_L", "fill_block"]
+__all__ = ["LARGEST_L", "fill_blocks"]
 
 LARGEST_L = 6
 JIT: dict[str, Any] = {
@@ -40,32 +42,40 @@ C6, C7, C8, C9 = 1 / 720, 1 / 5040, 1 / 40320, 1 / 362880
 C10, C11, C12, C13 = 1 / 3628800, 1 / 39916800, 1 / 479001600, 1 / 6227020800
 
 
-@njit(**JIT)  # type: ignore[untyped-decorator]
-def exp_row(factor: float, argument: Any, result: Any, bits: Any, bits_as_int: Any, n: int) -> None:
-    """``result = exp(-factor * argument)`` for factor * argument >= 0, to about one unit in the last place.
+@intrinsic
+def bits_of(_context: Any, _number: Any) -> Any:
+    """The 64 bits of a double as an integer."""
+    return types.int64(types.float64), lambda c, builder, s, args: builder.bitcast(args[0], ir.IntType(64))
 
-    `bits` and `bits_as_int` are the same memory seen as doubles and as integers.
-    """
+
+@intrinsic
+def from_bits(_context: Any, _number: Any) -> Any:
+    """The double that 64 bits stand for."""
+    return types.float64(types.int64), lambda c, builder, s, args: builder.bitcast(args[0], ir.DoubleType())
+
+
+@njit(**JIT)  # type: ignore[untyped-decorator]
+def exp_row(factor: float, argument: Any, result: Any, n: int) -> None:
+    """``result = exp(-factor * argument)`` for factor * argument >= 0, to about one unit in the last place."""
     for i in range(n):
-        x = max(-factor * argument[i], LEAST)
-        bits[i] = x * LOG2_E + ROUNDER
-    for i in range(n):
-        x = max(-factor * argument[i], LEAST)
-        k = bits[i] - ROUNDER
+        wanted = -factor * argument[i]
+        x = max(wanted, LEAST)
+        shifted = x * LOG2_E + ROUNDER
+        k = shifted - ROUNDER
         r = (x - k * LN2_HIGH) - k * LN2_LOW
         high = C8 + r * (C9 + r * (C10 + r * (C11 + r * (C12 + r * C13))))
         low = C2 + r * (C3 + r * (C4 + r * (C5 + r * (C6 + r * C7))))
         r2 = r * r
-        result[i] = 1.0 + (r + r2 * (low + (r2 * r2 * r2) * high))
-    for i in range(n):
-        bits_as_int[i] = (bits_as_int[i] << 52) + ONE_BITS
-    for i in range(n):
-        scaled = result[i] * bits[i]
-        result[i] = scaled if -factor * argument[i] > LEAST else 0.0
+        fraction = 1.0 + (r + r2 * (low + (r2 * r2 * r2) * high))
+        # The lowest bits of `shifted` hold k: moved into the place of the exponent they make 2^k.
+        power: float = from_bits((bits_of(shifted) << 52) + ONE_BITS)  # type: ignore[call-arg]
+        result[i] = fraction * power if wanted > LEAST else 0.0
 
 
 @njit(**JIT)  # type: ignore[untyped-decorator]
-def solid_rows(top: int, derivatives: int, x: Any, y: Any, z: Any, r2: Any, norms: Any, q: Any, ab: Any, ang: Any, n: int) -> None:
+def solid_rows(
+    top: int, derivatives: int, x: Any, y: Any, z: Any, r2: Any, norms: Any, q: Any, ab: Any, ang: Any, n: int
+) -> None:
     """Solid harmonics up to degree `top` and their gradients: ``ang[l*l + l + m, 0..3]``.
 
     With ``Q_lm`` the polar part (``Q_mm = (2m-1)!!``, ``(l-m) Q_lm = (2l-1) z Q_(l-1)m - (l+m-1) r^2 Q_(l-2)m``) and
@@ -152,7 +162,7 @@ def _solid_gradient(
 
 @njit(**JIT)  # type: ignore[untyped-decorator]
 def monomial_rows(l: int, derivatives: int, powers: Any, ang: Any, n: int) -> None:
-    """Monomials of degree l, their gradients and Laplacians: ``ang[row, 0..4]``; `powers[d, p]` is coordinate d to p."""
+    """Monomials of degree l, gradients and Laplacians: ``ang[row, 0..4]``; `powers[d, p]` is coordinate d to p."""
     row = 0
     for a in range(l, -1, -1):
         for b in range(l - a, -1, -1):
@@ -164,7 +174,8 @@ def monomial_rows(l: int, derivatives: int, powers: Any, ang: Any, n: int) -> No
             if derivatives:
                 for axis in range(3):
                     p = (a, b, c)[axis]
-                    one, two = powers[(axis + 1) % 3, (a, b, c)[(axis + 1) % 3]], powers[(axis + 2) % 3, (a, b, c)[(axis + 2) % 3]]
+                    one = powers[(axis + 1) % 3, (b, c, a)[axis]]
+                    two = powers[(axis + 2) % 3, (c, a, b)[axis]]
                     lowered = powers[axis, max(p - 1, 0)]
                     target = ang[row, 1 + axis]
                     for i in range(n):
@@ -181,7 +192,9 @@ def monomial_rows(l: int, derivatives: int, powers: Any, ang: Any, n: int) -> No
 
 
 @njit(**JIT)  # type: ignore[untyped-decorator]
-def gaussian_radial(first: int, last: int, scale: Any, decay: Any, exponent_of: Any, e: Any, r2: Any, l: int, w: Any, n: int) -> None:
+def gaussian_radial(
+    first: int, last: int, scale: Any, decay: Any, exponent_of: Any, e: Any, r2: Any, l: int, w: Any, n: int
+) -> None:
     """``R``, ``R'/r`` and ``R'' + 2(l+1) R'/r`` of a Gaussian shell without powers, into rows 0, 1, 2 of `w`.
 
     The same exponentials serve three sums: S0 = sum c e, S1 = sum -2a c e, S2 = sum 4a^2 c e; the last row is
@@ -213,8 +226,9 @@ def gaussian_radial(first: int, last: int, scale: Any, decay: Any, exponent_of: 
 
 @njit(**JIT)  # type: ignore[untyped-decorator]
 def general_radial(
-    first: int, last: int, scale: Any, decay: Any, power: Any, exponent_of: Any, e: Any, r2: Any, l: int, q: int, w: Any, n: int
-) -> None:
+    first: int, last: int, scale: Any, decay: Any, power: Any, exponent_of: Any, e: Any, r2: Any, l: int, q: int,
+    w: Any, n: int,
+) -> None:  # fmt: skip
     """The same three rows for Slater functions and for any powers; at r = 0 they mean nothing.
 
     With t = q a r^q: ``R'/r = sum c r^(n-2) (n - t) exp``, and
@@ -242,117 +256,143 @@ def general_radial(
 
 
 @njit(**JIT)  # type: ignore[untyped-decorator]
-def product_rows(rows: Any, monomial: bool, derivatives: int, w: Any, out: Any, where: int, stride: int, start: int, n: int) -> None:
+def product_rows(
+    rows: Any, monomial: bool, derivatives: int, w: Any, out: Any, where: int, stride: int, start: int, n: int
+) -> None:
     """One function from its angular rows and the radial rows of its shell (w: R, R'/r, L, R'/r times x, y, z)."""
-    radial, target, s = w[0], out[where], rows[0]
+    radial, target, s = w[0], out[where, start : start + n], rows[0]
     for i in range(n):
-        target[start + i] = radial[i] * s[i]
+        target[i] = radial[i] * s[i]
     if derivatives == 0:
         return
     for axis in range(3):
-        slope, ds, target = w[3 + axis], rows[1 + axis], out[where + (1 + axis) * stride]
+        slope, ds, target = w[3 + axis], rows[1 + axis], out[where + (1 + axis) * stride, start : start + n]
         for i in range(n):
-            target[start + i] = slope[i] * s[i] + radial[i] * ds[i]
+            target[i] = slope[i] * s[i] + radial[i] * ds[i]
     if derivatives == 1:
         return
-    bend, target = w[2], out[where + 4 * stride]
+    bend, target = w[2], out[where + 4 * stride, start : start + n]
     if monomial:
         laplacian = rows[4]
         for i in range(n):
-            target[start + i] = bend[i] * s[i] + radial[i] * laplacian[i]
+            target[i] = bend[i] * s[i] + radial[i] * laplacian[i]
     else:
         for i in range(n):
-            target[start + i] = bend[i] * s[i]
+            target[i] = bend[i] * s[i]
 
 
 @njit(**JIT)  # type: ignore[untyped-decorator]
 def spherical_rows(y00: float, derivatives: int, w: Any, out: Any, where: int, stride: int, start: int, n: int) -> None:
     """The one function of an s shell: its angular part is a constant."""
-    radial, target = w[0], out[where]
+    radial, target = w[0], out[where, start : start + n]
     for i in range(n):
-        target[start + i] = radial[i] * y00
+        target[i] = radial[i] * y00
     if derivatives == 0:
         return
     for axis in range(3):
-        slope, target = w[3 + axis], out[where + (1 + axis) * stride]
+        slope, target = w[3 + axis], out[where + (1 + axis) * stride, start : start + n]
         for i in range(n):
-            target[start + i] = slope[i] * y00
+            target[i] = slope[i] * y00
     if derivatives == 2:
-        bend, target = w[2], out[where + 4 * stride]
+        bend, target = w[2], out[where + 4 * stride, start : start + n]
         for i in range(n):
-            target[start + i] = bend[i] * y00
+            target[i] = bend[i] * y00
 
 
 @njit(**JIT)  # type: ignore[untyped-decorator]
-def fill_block(
-    points: Any, first_point: int, n: int, centers: Any, atom_shells: Any, atom_exponents: Any, unique_exponents: Any,
-    shell_l: Any, shell_monomial: Any, shell_first: Any, shell_simple: Any, scale: Any, decay: Any,
-    power: Any, exponent_of: Any, q: int, norms: Any, derivatives: int, xyz: Any, e: Any, w: Any, bits: Any,
-    bits_as_int: Any, polar: Any, plane: Any, solid: Any, cartesian: Any, monomial: Any, skip: Any, row_of: Any,
-    function_stride: int, stride: int, out: Any, start: int,
+def fill_blocks(
+    points: Any, first_block: int, last_block: int, block: int, centers: Any, atom_shells: Any, atom_exponents: Any,
+    unique_exponents: Any, shell_l: Any, shell_monomial: Any, shell_first: Any, shell_simple: Any, scale: Any,
+    decay: Any, power: Any, exponent_of: Any, q: int, norms: Any, derivatives: int, xyz: Any, e: Any, w: Any,
+    polar: Any, plane: Any, solid: Any, cartesian: Any, monomial: Any, skip: Any, row_of: Any,
+    function_stride: int, stride: int, out: Any, shift: int,
 ) -> None:  # fmt: skip
-    """All functions of a basis at points ``first_point .. first_point + n`` into columns ``start ..`` of `out`.
+    """All functions of a basis at some blocks of points; point i goes to column ``i - shift`` of `out`.
 
     Component c of the function f of shell s goes to row ``row_of[s] + f * function_stride + c * stride``; shells with
-    ``skip[s]`` are left out. Shells are sorted by atom, see `qwfx.kernels.plan.Plan`.
+    ``skip[block, s]`` are left out. Shells are sorted by atom, see `qwfx.kernels.plan.Plan`. The atoms are the outer
+    loop: the rows of one atom are written from end to end before those of the next, which memory likes.
     """
     for atom in range(len(centers)):
-        s0, s1 = atom_shells[atom], atom_shells[atom + 1]
-        top_solid = -1
-        top_monomial = -1
-        for s in range(s0, s1):
-            if not skip[s]:
-                if shell_monomial[s]:
-                    top_monomial = max(top_monomial, shell_l[s])
-                else:
-                    top_solid = max(top_solid, shell_l[s])
-        if max(top_solid, top_monomial) < 0:
-            continue
-        x, y, z, r2 = xyz[0], xyz[1], xyz[2], xyz[3]
-        for axis in range(3):
-            row, c = xyz[axis], centers[atom, axis]
-            source = points[axis]
-            for i in range(n):
-                row[i] = source[first_point + i] - c
-        for i in range(n):
-            r2[i] = x[i] * x[i] + y[i] * y[i] + z[i] * z[i]
-        argument = r2
-        if q == 1:
-            argument = xyz[4]
-            for i in range(n):
-                argument[i] = np.sqrt(r2[i])
-        for k in range(atom_exponents[atom], atom_exponents[atom + 1]):
-            exp_row(unique_exponents[k], argument, e[k - atom_exponents[atom]], bits, bits_as_int, n)
-        if top_solid > 0:
-            solid_rows(top_solid, derivatives, x, y, z, r2, norms, polar, plane, solid, n)
-        if top_monomial >= 0:
-            for axis in range(3):
-                for i in range(n):
-                    cartesian[axis, 0, i] = 1.0
-                for p in range(1, top_monomial + 1):
-                    for i in range(n):
-                        cartesian[axis, p, i] = cartesian[axis, p - 1, i] * xyz[axis, i]
-        for s in range(s0, s1):
-            if skip[s]:
-                continue
-            l = shell_l[s]
-            if shell_simple[s]:
-                gaussian_radial(shell_first[s], shell_first[s + 1], scale, decay, exponent_of, e, r2, l, w, n)
-            else:
-                general_radial(shell_first[s], shell_first[s + 1], scale, decay, power, exponent_of, e, r2, l, q, w, n)
-            if derivatives:
-                slope = w[1]
-                for axis in range(3):
-                    row, d = w[3 + axis], xyz[axis]
-                    for i in range(n):
-                        row[i] = slope[i] * d[i]
-            where = row_of[s]
+        for number in range(first_block, last_block):
+            first = number * block
+            n = min(block, points.shape[1] - first)
+            _fill_atom(
+                points, first, n, atom, centers, atom_shells, atom_exponents, unique_exponents, shell_l,
+                shell_monomial, shell_first, shell_simple, scale, decay, power, exponent_of, q, norms, derivatives,
+                xyz, e, w, polar, plane, solid, cartesian, monomial, skip[number], row_of,
+                function_stride, stride, out, first - shift,
+            )  # fmt: skip
+
+
+@njit(**JIT)  # type: ignore[untyped-decorator]
+def _fill_atom(
+    points: Any, first: int, n: int, atom: int, centers: Any, atom_shells: Any, atom_exponents: Any,
+    unique_exponents: Any, shell_l: Any, shell_monomial: Any, shell_first: Any, shell_simple: Any, scale: Any,
+    decay: Any, power: Any, exponent_of: Any, q: int, norms: Any, derivatives: int, xyz: Any, e: Any, w: Any,
+    polar: Any, plane: Any, solid: Any, cartesian: Any, monomial: Any, skip: Any, row_of: Any,
+    function_stride: int, stride: int, out: Any, start: int,
+) -> None:  # fmt: skip
+    """The functions of one atom at one block of points."""
+    s0, s1 = atom_shells[atom], atom_shells[atom + 1]
+    top_solid = -1
+    top_monomial = -1
+    for s in range(s0, s1):
+        if not skip[s]:
             if shell_monomial[s]:
-                monomial_rows(l, derivatives, cartesian, monomial, n)
-                for f in range((l + 1) * (l + 2) // 2):
-                    product_rows(monomial[f], True, derivatives, w, out, where + f * function_stride, stride, start, n)
-            elif l == 0:
-                spherical_rows(norms[0], derivatives, w, out, where, stride, start, n)
+                top_monomial = max(top_monomial, shell_l[s])
             else:
-                for f in range(2 * l + 1):
-                    product_rows(solid[l * l + f], False, derivatives, w, out, where + f * function_stride, stride, start, n)
+                top_solid = max(top_solid, shell_l[s])
+    if max(top_solid, top_monomial) < 0:
+        return
+    x, y, z, r2 = xyz[0], xyz[1], xyz[2], xyz[3]
+    for axis in range(3):
+        row, c = xyz[axis], centers[atom, axis]
+        source = points[axis, first : first + n]
+        for i in range(n):
+            row[i] = source[i] - c
+    for i in range(n):
+        r2[i] = x[i] * x[i] + y[i] * y[i] + z[i] * z[i]
+    argument = r2
+    if q == 1:
+        argument = xyz[4]
+        for i in range(n):
+            argument[i] = np.sqrt(r2[i])
+    for k in range(atom_exponents[atom], atom_exponents[atom + 1]):
+        exp_row(unique_exponents[k], argument, e[k - atom_exponents[atom]], n)
+    if top_solid > 0:
+        solid_rows(top_solid, derivatives, x, y, z, r2, norms, polar, plane, solid, n)
+    if top_monomial >= 0:
+        for axis in range(3):
+            for i in range(n):
+                cartesian[axis, 0, i] = 1.0
+            for p in range(1, top_monomial + 1):
+                lower, row, d = cartesian[axis, p - 1], cartesian[axis, p], xyz[axis]
+                for i in range(n):
+                    row[i] = lower[i] * d[i]
+    for s in range(s0, s1):
+        if skip[s]:
+            continue
+        l = shell_l[s]
+        if shell_simple[s]:
+            gaussian_radial(shell_first[s], shell_first[s + 1], scale, decay, exponent_of, e, r2, l, w, n)
+        else:
+            general_radial(shell_first[s], shell_first[s + 1], scale, decay, power, exponent_of, e, r2, l, q, w, n)
+        if derivatives:
+            slope = w[1]
+            for axis in range(3):
+                row, d = w[3 + axis], xyz[axis]
+                for i in range(n):
+                    row[i] = slope[i] * d[i]
+        where = row_of[s]
+        if shell_monomial[s]:
+            monomial_rows(l, derivatives, cartesian, monomial, n)
+            for f in range((l + 1) * (l + 2) // 2):
+                product_rows(monomial[f], True, derivatives, w, out, where + f * function_stride, stride, start, n)
+        elif l == 0:
+            spherical_rows(norms[0], derivatives, w, out, where, stride, start, n)
+        else:
+            for f in range(2 * l + 1):
+                product_rows(
+                    solid[l * l + f], False, derivatives, w, out, where + f * function_stride, stride, start, n
+                )

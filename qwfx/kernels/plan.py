@@ -110,8 +110,6 @@ class Workspace:
         self.xyz = np.empty((5, block))
         self.e = np.empty((most, block))
         self.w = np.empty((6, block))
-        self.bits = np.empty(block)
-        self.bits_as_int = self.bits.view(np.int64)
         rows = (LARGEST_L + 1) * (LARGEST_L + 2) // 2
         self.polar = np.empty((rows, block))
         self.plane = np.empty((2 * (LARGEST_L + 1), block))

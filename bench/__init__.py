@@ -1,0 +1,1 @@
+"""Benchmarks: alternatives side by side in one run, ratios printed. ``python -m bench`` runs them all."""
