@@ -3,7 +3,8 @@
 from __future__ import annotations
 
 from collections.abc import Iterator
-from typing import Any, TypeAlias
+from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -197,25 +198,32 @@ ROWS_AT_A_TIME = 1 << 20
 """Rows, and entries, of the sparse matrix that are held at once."""
 
 
-Piece: TypeAlias = tuple[int, NDArray[np.int64], int, NDArray[np.int64]]
+@dataclass(frozen=True)
+class Piece:
+    """A part of the sparse matrix: some rows, and some of their entries."""
+
+    first_row: int
+    offsets: NDArray[np.int64]
+    """row_start of these rows and one more."""
+    begin: int
+    """Number of the first of the entries."""
+    columns: NDArray[np.int64]
+    repeated: int
+    """Entries at the beginning that the piece before had too, so that neighbours can be compared: 0 or 1."""
 
 
 def row_slices(file: Inspection) -> Iterator[Piece]:
-    """The sparse matrix in pieces: (first row, row_start of these rows and one more, first entry, columns).
-
-    Rows with more entries than `ROWS_AT_A_TIME` come in several pieces, each with the same rows; a piece begins one
-    entry before its place where that entry belongs to the same rows, so that neighbours can be compared.
-    """
+    """The sparse matrix in pieces. Rows with more entries than `ROWS_AT_A_TIME` come in several pieces."""
     size = ROWS_AT_A_TIME
     n_rows = file.shape("/expansion/row_start")[0] - 1
     for first in range(0, n_rows, size):
         stop = min(first + size, n_rows)
         offsets = np.asarray(file.raw.read("/expansion/row_start", first, stop + 1), dtype=np.int64)
         low, high = int(offsets[0]), int(offsets[-1])
-        for start in range(low, high, size):
+        for start in range(low, max(high, low + 1), size):
             begin = max(low, start - 1)
             columns = np.asarray(file.raw.read("/expansion/columns", begin, min(start + size, high)), dtype=np.int64)
-            yield first, offsets, begin, columns
+            yield Piece(first, offsets, begin, columns, start - begin)
 
 
 @rule(
@@ -232,14 +240,16 @@ def column_order(file: Inspection) -> Iterator[Remark]:
     n_down = file.shape("/expansion/down_strings")[0]
     outside = disorder = entries = 0
     first_outside, first_disorder = (0, 0), (0, 0, 0)
-    for _, offsets, begin, columns in row_slices(file):
+    for piece in row_slices(file):
+        begin, columns = piece.begin, piece.columns
         beyond = (columns < 0) | (columns >= n_down)
+        beyond[: piece.repeated] = False
         if beyond.any() and not outside:
             k = int(np.argmax(beyond))
             first_outside = (begin + k, int(columns[k]))
         outside += int(beyond.sum())
         starts_row = np.zeros(len(columns) + 1, dtype=bool)
-        inside = offsets[(offsets >= begin) & (offsets <= begin + len(columns))]
+        inside = piece.offsets[(piece.offsets >= begin) & (piece.offsets <= begin + len(columns))]
         starts_row[inside - begin] = True
         wrong = (columns[1:] <= columns[:-1]) & ~starts_row[1:-1]
         if wrong.any() and not disorder:
@@ -279,13 +289,13 @@ def column_order(file: Inspection) -> Iterator[Remark]:
 def unused_strings(file: Inspection) -> Iterator[Remark]:
     used = np.zeros(file.shape("/expansion/down_strings")[0], dtype=bool)
     empty, first_empty, previous = 0, 0, -1
-    for first, offsets, _, columns in row_slices(file):
-        used[columns] = True
-        if first != previous:
-            previous = first
-            idle = np.flatnonzero(np.diff(offsets) == 0)
+    for piece in row_slices(file):
+        used[piece.columns] = True
+        if piece.first_row != previous:
+            previous = piece.first_row
+            idle = np.flatnonzero(np.diff(piece.offsets) == 0)
             if len(idle) and not empty:
-                first_empty = first + int(idle[0])
+                first_empty = previous + int(idle[0])
             empty += len(idle)
     remedy = "leave out strings that no entry uses: each costs a determinant in every step of a run"
     if empty:

@@ -111,6 +111,9 @@ THRESHOLDS = [
     ("energies-table", "hydrogen\n/energies/state = [0, -1]", "error"),
     ("energies-table", "hydrogen\n/energies/value[0] = 1.1", "warning"),
     ("energies-table", 'hydrogen\n/energies/quantity = ["total", "total"]', "warning"),
+    ("unknown-members", 'hydrogen\n/orbitals/main/colour : float64 = [1, 2]', "error"),
+    ("unknown-members", 'hydrogen\n/@version = "1.3"\n/orbitals/main/colour : float64 = [1, 2]', "note"),
+    ("unknown-members", 'hydrogen\n/system@colour = "red"', "error"),
     ("provenance-steps", 'hydrogen\n/provenance/steps = "{}"', "error"),
     ("provenance-steps", 'hydrogen\n/provenance/steps = "[{}]"', "error"),
     ("provenance-steps", 'hydrogen\n/provenance/steps = "[{\\"activity\\": \\"a\\", \\"agent\\": \\"b\\", '
