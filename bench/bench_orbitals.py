@@ -1,7 +1,7 @@
 """Functions and orbitals at points, one thread each: PySCF's ``eval_gto`` and qwfx; orbitals and bare matrix products.
 
-PySCF makes ten components (value, gradient, second derivatives), of which a Laplacian needs the sum of three; qwfx makes
-five (value, gradient, Laplacian). PySCF's screening is switched off by a table that marks every shell as needed.
+PySCF makes ten components (value, gradient, second derivatives), of which a Laplacian needs the sum of three; qwfx
+makes five (value, gradient, Laplacian). PySCF's screening is switched off by a table that marks every shell as needed.
 """
 
 from __future__ import annotations
@@ -9,6 +9,8 @@ from __future__ import annotations
 from bench.harness import one_thread, side_by_side
 
 one_thread()
+
+from functools import partial  # noqa: E402
 
 import numpy as np  # noqa: E402
 from pyscf import gto, lib  # noqa: E402
@@ -53,7 +55,7 @@ def functions(name: str, wanted: str) -> None:
     memory, half = np.empty((10, N_POINTS, basis.n_functions)), np.empty((5, basis.n_functions, N_POINTS))
     side_by_side(
         "value + gradient + Laplacian, both into memory they are given",
-        {"PySCF": lambda: theirs(memory), "qwfx": lambda: ours(half)},
+        {"PySCF": partial(theirs, memory), "qwfx": partial(ours, half)},
         wanted=wanted,
     )
     del memory, half

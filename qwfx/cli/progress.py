@@ -7,7 +7,23 @@ import time
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 
-__all__ = ["progress_line"]
+__all__ = ["announce_compilation", "progress_line"]
+
+
+def announce_compilation() -> None:
+    """Compile the kernels if that was never done on this machine, and say so on a terminal while it lasts."""
+    from qwfx import kernels
+
+    if kernels.compiled():
+        return
+    if not sys.stderr.isatty():
+        kernels.prepare()
+        return
+    from rich.console import Console
+
+    with Console(stderr=True).status("compiling the evaluation kernels: once on this machine, about 20 seconds"):
+        kernels.prepare()
+
 
 SHOW_AFTER = 0.5  # seconds; short work should not flicker
 

@@ -12,7 +12,7 @@ from typing import TYPE_CHECKING, Any
 import click
 
 from qwfx.cli.options import InputFile, as_option, print_notes, set_option, settings
-from qwfx.cli.progress import progress_line
+from qwfx.cli.progress import announce_compilation, progress_line
 from qwfx.errors import FileError
 from qwfx.findings import ExitCode
 
@@ -135,6 +135,7 @@ def command(
     points = _points_from(points_file) if points_file else None
     if keep:
         keep.mkdir(parents=True, exist_ok=True)
+    announce_compilation()
     temporary = nullcontext(str(keep)) if keep else tempfile.TemporaryDirectory(prefix="qwfx-")
     with temporary as folder, progress_line() as progress:
         result = roundtrip(

@@ -1,0 +1,5 @@
+"""``python -m qwfx`` is the command ``qwfx``."""
+
+from qwfx.cli import main
+
+main()
