@@ -39,7 +39,8 @@ def _system_lines(system: System) -> list[tuple[str, str]]:
     if not system.n_atoms:
         return [("system", "no nuclei in the file"), ("electrons", electrons)]
     charge = float(system.effective_charges.sum()) - system.n_electrons
-    lines = [("system", f"{_formula(system)}, charge {charge:+.4g}"), ("electrons", electrons)]
+    state = "neutral" if abs(charge) < 1e-9 else f"charge {charge:+.4g}"
+    lines = [("system", f"{_formula(system)}, {state}"), ("electrons", electrons)]
     if system.n_atoms > 1:
         near = min(
             float(np.linalg.norm(system.positions[a + 1 :] - system.positions[a], axis=1).min())

@@ -91,7 +91,7 @@ def test_not_a_number_and_infinity() -> None:
     one = np.array([np.nan, np.inf, -np.inf, np.inf, 1.0])
     two = np.array([np.nan, np.inf, np.inf, 1.0, 1.0])
     bad, _, equal = _beyond(one, two, 1e9, 1e9)
-    assert bad.tolist() == [False, False, True, True, False]
+    assert bad.tolist() == [False, False, True, True, False], bad
     assert not equal
 
 
