@@ -148,8 +148,10 @@ THRESHOLDS = [
     ("density-orbitals", "water\n/densities/one_body/both : float64 = [[[10]]]", "error"),
     ("witness-points", "hydrogen\n/witness/points = [[1, 0, 0], [2, 0, 0], [3, 0, 0], [1, 0, 0], [4, 0, 0], [5, 0, 0]]",
      "warning"),
-    ("witness-points", "helium\n/witness/points[0,0] = 0\n/witness/points[0,1] = 0\n/witness/points[0,2] = 9e-7", "warning"),
-    ("witness-points", "helium\n/witness/points[0,0] = 0\n/witness/points[0,1] = 0\n/witness/points[0,2] = 2e-6", "none"),
+    ("witness-points", "helium\n/witness/points[0,0] = 0\n/witness/points[0,1] = 0\n"
+     "/witness/points[0,2] = 9e-7", "warning"),
+    ("witness-points", "helium\n/witness/points[0,0] = 0\n/witness/points[0,1] = 0\n"
+     "/witness/points[0,2] = 2e-6", "none"),
     ("string-roles", 'square\n/orbitals/main/roles = ["active", "active", "active", "virtual"]', "warning"),
     ("string-roles", 'radical\n/orbitals/up/roles : string = ["core", "core", "virtual"]', "none"),
     ("string-roles", 'radical\n/orbitals/down/roles : string = ["core", "core", "virtual"]', "warning"),
