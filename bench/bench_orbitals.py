@@ -14,9 +14,9 @@ from functools import partial  # noqa: E402
 
 import numpy as np  # noqa: E402
 from pyscf import gto, lib  # noqa: E402
-from qwfx.converters.pyscf.from_mole import basis_of, function_order  # noqa: E402
 
 from qwfx import kernels  # noqa: E402
+from qwfx.converters.pyscf.from_mole import basis_of, function_order  # noqa: E402
 
 N_POINTS = 20480
 N_ORBITALS = 100

@@ -8,7 +8,6 @@ from importlib.metadata import entry_points
 from pathlib import Path
 
 from qwfx.converters.plugin import Converter
-
 from qwfx.errors import ConversionError, FileError, UnsupportedError
 
 __all__ = ["ENTRY_POINT_GROUP", "available", "by_name", "check_options", "for_target", "recognise"]

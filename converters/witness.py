@@ -46,6 +46,7 @@ def witness_through_pyscf(wavefunction: Wavefunction) -> Witness:
     Raises UnsupportedError for what PySCF has no functions for, such as Slater bases.
     """
     import pyscf
+
     from qwfx.converters.pyscf.to_mole import translate
 
     translation = translate(wavefunction)

@@ -12,6 +12,7 @@ from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
+
 from qwfx.converters.plugin import Option, Progress, Reading, Writing
 from qwfx.converters.pyscf.checkpoint_mole import molecule_from_text
 from qwfx.converters.pyscf.describe import ORBITAL_QUANTITIES
@@ -21,7 +22,6 @@ from qwfx.converters.pyscf.methods import parse_active_space, parse_mean_field
 from qwfx.converters.pyscf.parts import Parts, assemble, energies_table, per_spin
 from qwfx.converters.pyscf.symmetry import restore_symmetry
 from qwfx.converters.pyscf.to_mean_field import choose_sets, hartree_fock_kind, stored_total, to_mean_field
-
 from qwfx.errors import ConversionError, FileError, UnsupportedError
 from qwfx.model import Wavefunction
 

@@ -5,7 +5,6 @@ from __future__ import annotations
 from typing import Any
 
 from qwfx.converters.pyscf.methods import DEFAULT_GRID_LEVEL, MeanField
-
 from qwfx.errors import ConversionError, UnsupportedError
 
 __all__ = ["ORBITAL_QUANTITIES", "describe_method", "reference_details"]

@@ -6,10 +6,10 @@ from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
+
 from qwfx.converters.pyscf.methods import MeanField, parse_active_space
 from qwfx.converters.pyscf.to_mean_field import bare_mean_field, choose_sets, stored_total, to_mean_field
 from qwfx.converters.pyscf.to_mole import translate
-
 from qwfx.errors import ConversionError, EvaluationError
 from qwfx.model import Wavefunction
 

@@ -6,9 +6,9 @@ from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
+
 from qwfx.converters.pyscf.describe import ORBITAL_QUANTITIES, describe_method, reference_details
 from qwfx.converters.pyscf.parts import Parts, bit_string, per_spin
-
 from qwfx.errors import ConversionError, UnsupportedError
 from qwfx.model import Expansion
 

@@ -7,7 +7,6 @@ from typing import Any
 from qwfx.converters.pyscf.describe import ORBITAL_QUANTITIES, describe_method
 from qwfx.converters.pyscf.from_active_space import active_space_parts, is_active_space
 from qwfx.converters.pyscf.parts import Parts, assemble, per_spin
-
 from qwfx.errors import ConversionError
 from qwfx.model import Wavefunction
 

@@ -7,10 +7,10 @@ from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
+
 from qwfx.converters.pyscf.energies import need_potentials
 from qwfx.converters.pyscf.to_mean_field import choose_sets
 from qwfx.converters.pyscf.to_mole import translate
-
 from qwfx.errors import UnsupportedError
 from qwfx.model import Hamiltonian, TwoBody, Wavefunction
 

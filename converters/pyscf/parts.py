@@ -9,10 +9,10 @@ from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
-from qwfx.converters.pyscf.from_mole import basis_of, check_molecule, function_order, potentials_of, system_of
-from qwfx.converters.witness import orbitals_by_pyscf, witness_points
 
 from qwfx._version import __version__
+from qwfx.converters.pyscf.from_mole import basis_of, check_molecule, function_order, potentials_of, system_of
+from qwfx.converters.witness import orbitals_by_pyscf, witness_points
 from qwfx.errors import ConversionError
 from qwfx.model import Energies, Expansion, OrbitalSet, Provenance, Spin, Wavefunction, Witness
 

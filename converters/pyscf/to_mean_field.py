@@ -7,10 +7,10 @@ from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
+
 from qwfx.converters.pyscf.describe import ORBITAL_QUANTITIES
 from qwfx.converters.pyscf.methods import MeanField, parse_mean_field
 from qwfx.converters.pyscf.to_mole import translate
-
 from qwfx.errors import ConversionError, UnsupportedError
 from qwfx.model import OrbitalSet, Wavefunction
 

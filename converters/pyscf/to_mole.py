@@ -13,8 +13,8 @@ from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
-from qwfx.converters.pyscf.from_mole import element_of
 
+from qwfx.converters.pyscf.from_mole import element_of
 from qwfx.errors import UnsupportedError
 from qwfx.model import Basis, Potentials, System, Wavefunction
 

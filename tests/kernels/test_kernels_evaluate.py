@@ -106,6 +106,7 @@ def test_points_on_a_centre(radial: str, powers: bool) -> None:
 @pytest.mark.parametrize("cart", [False, True])
 def test_functions_equal_pyscf(cart: bool) -> None:
     from pyscf import gto
+
     from qwfx.converters.pyscf.from_mole import basis_of, function_order
 
     mol = gto.M(atom="O 0 0 0.12; H 0 0.76 -0.47; H 0.1 -0.7 -0.4", basis="cc-pv5z", cart=cart, verbose=0)

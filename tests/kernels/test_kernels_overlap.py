@@ -58,6 +58,7 @@ def test_other_functions_go_to_the_reference(radial: str, powers: bool) -> None:
 @pytest.mark.parametrize("cart", [False, True])
 def test_equal_to_pyscf(cart: bool) -> None:
     from pyscf import gto
+
     from qwfx.converters.pyscf.from_mole import basis_of, function_order
 
     mol = gto.M(atom="O 0 0 0.12; H 0 0.76 -0.47; H 0.1 -0.7 -0.4", basis="cc-pv5z", cart=cart, verbose=0)

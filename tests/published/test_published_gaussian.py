@@ -15,9 +15,9 @@ import numpy as np
 import pytest
 from numpy.typing import NDArray
 from published_atoms import stored
-from qwfx.converters.pyscf import energy, from_pyscf, to_mole
 from reference_cases import ShellData, make_basis
 
+from qwfx.converters.pyscf import energy, from_pyscf, to_mole
 from qwfx.model import Basis, OrbitalSet, System, Wavefunction
 from qwfx.reference import overlap
 from qwfx.reference.norms import gaussian_norm, self_overlaps

@@ -5,9 +5,9 @@ from __future__ import annotations
 import numpy as np
 import pytest
 from pyscf_cases import METHYLENE, WATER, molecule
+
 from qwfx.converters.pyscf import casci_energy, energy, from_pyscf
 from qwfx.converters.pyscf.complex_ci import _Product
-
 from qwfx.errors import ConversionError, UnsupportedError
 
 

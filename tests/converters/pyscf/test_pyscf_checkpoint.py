@@ -10,9 +10,9 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 from pyscf_cases import METHYLENE, WATER, molecule, orbital_energies
+
 from qwfx.converters.plugin import Converter
 from qwfx.converters.pyscf import converter, energy, from_pyscf
-
 from qwfx.errors import ConversionError, FileError, QwfxError, UnsupportedError
 from qwfx.model import Energies
 

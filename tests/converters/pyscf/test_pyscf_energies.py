@@ -6,9 +6,9 @@ from dataclasses import replace
 
 import numpy as np
 import pytest
+
 from qwfx.converters.pyscf import casci_energy, energy, from_pyscf, to_mean_field, translate
 from qwfx.converters.pyscf.methods import MeanField, parse_active_space, parse_mean_field
-
 from qwfx.errors import ConversionError, EvaluationError, UnsupportedError
 from qwfx.model import Basis, OrbitalSet, System, Wavefunction
 

@@ -5,9 +5,9 @@ from __future__ import annotations
 import numpy as np
 import pytest
 from pyscf_cases import orbital_energies
-from qwfx.converters.pyscf import energy, fci_energy, from_pyscf
 
 from qwfx.conversion import convert
+from qwfx.converters.pyscf import energy, fci_energy, from_pyscf
 from qwfx.storage import load, save
 
 KINDS = ["rhf", "rhf-cartesian", "rohf", "uhf", "rks", "roks", "uks", "core-potential", "ghost"]

@@ -10,10 +10,10 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from hypothesis.extra.numpy import arrays
 from pyscf_cases import HYDROXYL, WATER, molecule
+
 from qwfx.converters.pyscf import from_pyscf, to_mole, translate
 from qwfx.converters.pyscf.from_mole import basis_of, function_order
 from qwfx.converters.witness import witness_points, witness_through_pyscf
-
 from qwfx.errors import UnsupportedError
 from qwfx.model import Basis, Cell, OrbitalSet, System, Wavefunction
 from qwfx.reference import evaluate_functions, evaluate_orbitals, overlap

@@ -7,10 +7,10 @@ from dataclasses import replace
 import numpy as np
 import pytest
 from pyscf_cases import METHYLENE, WATER, molecule
+
 from qwfx.converters.pyscf import fci_energy, from_pyscf, with_hamiltonian
 from qwfx.converters.pyscf.complex_ci import lowest_energies
 from qwfx.converters.pyscf.hamiltonian import symmetry_numbers
-
 from qwfx.errors import ConversionError, EvaluationError, UnsupportedError
 from qwfx.model import TwoBody
 

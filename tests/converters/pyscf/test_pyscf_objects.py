@@ -5,8 +5,8 @@ from __future__ import annotations
 import numpy as np
 import pytest
 from pyscf_cases import HYDROXYL, METHYLENE, WATER, molecule, orbital_energies
-from qwfx.converters.pyscf import energy, from_pyscf, to_mean_field
 
+from qwfx.converters.pyscf import energy, from_pyscf, to_mean_field
 from qwfx.errors import ConversionError, UnsupportedError
 
 

@@ -8,8 +8,8 @@ from math import gamma
 import numpy as np
 import pytest
 from pyscf_cases import molecule
-from qwfx.converters.pyscf import from_pyscf, potentials_from_library, to_mole
 
+from qwfx.converters.pyscf import from_pyscf, potentials_from_library, to_mole
 from qwfx.errors import UnsupportedError
 from qwfx.model import Potentials
 

@@ -10,8 +10,8 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
-from qwfx.converters.pyscf import energy, translate
 
+from qwfx.converters.pyscf import energy, translate
 from qwfx.model import Basis, OrbitalSet, System, Wavefunction
 
 EXPONENTS = np.array([0.109818, 0.405771, 2.22766])
