@@ -138,6 +138,15 @@ THRESHOLDS = [
     ("jastrow-parameters", "dressed\n/jastrow/inner/powers = [[1, 1, 2], [0, 0, 0]]", "error"),
     ("jastrow-parameters", "dressed\n/jastrow/inner/powers = [[1, 1, 2], [1, 1, 2]]", "error"),
     ("jastrow-parameters", "dressed\n/jastrow/inner/powers = [[1, 1, 2], [1, 0, 0]]", "none"),
+    ("jastrow-parameters", "dressed\n/jastrow/inner/powers = [[1, 1, 2], [2, 0, 3]]", "none"),
+    ("length-unit", "integrals_only\n/system/atomic_numbers = [1, 1, 0]\n/system/positions = [[0, 0, 0], [0, 0, 0.75], "
+     "[0, 0, 1.9]]\ndelete /energies", "warning"),
+    ("length-unit", "integrals_only\n/system/positions = [[0, 0, 0], [0, 0, 0.75], [0, 0, 1.9]]\n"
+     "delete /energies", "none"),
+    ("length-unit", "integrals_only\n/system/atomic_numbers = [1, 8, 1]\n/system/effective_charges = [1, 8, 1]\n"
+     "/system/positions = [[0, 0, 0], [0, 0, 3.4], [0, 3.4, 3.4]]\ndelete /energies", "warning"),
+    ("length-unit", "integrals_only\n/system/atomic_numbers = [1, 1, 1]\n"
+     "/system/positions = [[0, 0, 0], [0, 0, 2.4], [0, 2.4, 2.4]]\ndelete /energies", "none"),
     ("density-orbitals", "hydrogen\n/hamiltonian@n_orbitals = 3\n/hamiltonian/one_body/both = "
      "[[1, 0, 0], [0, 1, 0], [0, 0, 1]]\n/hamiltonian/two_body/both/values = [1]\n"
      "/hamiltonian/two_body/both/index : uint64 = [0]\n/hamiltonian/orbital_symmetry = [0, 1, 2]\n"
