@@ -182,7 +182,7 @@ def _beyond(one: Any, two: Any, absolute: float, relative: float) -> tuple[NDArr
         allowed = absolute + relative * np.maximum(np.abs(one), np.abs(two))
         both_nan = np.isnan(one) & np.isnan(two)
         equal = (one == two) | both_nan
-        # An infinite pair has distance NaN; the comparison with <= is then False, so it counts as different.
-        bad = np.asarray(~(equal | (distance <= allowed)))
+        # No tolerance makes an infinity agree with anything but itself.
+        bad = np.asarray(~(equal | ((distance <= allowed) & np.isfinite(distance))))
     finite = distance[np.isfinite(distance)]
     return bad, float(finite.max()) if finite.size else 0.0, bool(equal.all())
