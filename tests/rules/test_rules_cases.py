@@ -31,6 +31,25 @@ def place(z: str) -> str:
     return f"integrals_only\n/system/positions[2,2] = {z}\n{NO_ENERGIES}"
 
 
+def three_body(gamma: str, channel: str) -> str:
+    """A three-body cutoff polynomial of one row."""
+    return (
+        f'dressed\n/jastrow/inner@form = "cutoff-polynomial"\n/jastrow/inner@smoothness : int64 = 3\n'
+        f"/jastrow/inner/channel = [{channel}]\n/jastrow/inner/cutoff : float64 = [4.0]\n"
+        f"/jastrow/inner/coefficients = [{gamma}]\ndelete /jastrow/inner/scale\n"
+        "delete /jastrow/inner/scale_electron\ndelete /jastrow/inner/powers"
+    )
+
+
+CORE = "".join(
+    f"\n/potentials/{name} : {kind} = [{value}]"
+    for name, kind, value in (
+        ("center", "int32", 0), ("channel", "int32", -1), ("power", "int32", 0), ("exponent", "float64", 1),
+        ("coefficient", "float64", 1),
+    )
+)  # fmt: skip
+
+
 THRESHOLDS = [
     ("coincident-nuclei", place("1.7008"), "error"),
     ("coincident-nuclei", place("1.7012"), "warning"),
@@ -147,6 +166,11 @@ THRESHOLDS = [
      "/system/positions = [[0, 0, 0], [0, 0, 3.4], [0, 3.4, 3.4]]\ndelete /energies", "warning"),
     ("length-unit", "integrals_only\n/system/atomic_numbers = [1, 1, 1]\n"
      "/system/positions = [[0, 0, 0], [0, 0, 2.4], [0, 2.4, 2.4]]\ndelete /energies", "none"),
+    ("jastrow-channels", 'dressed\n/system@n_up = 0\n/system@n_down = 4\n'
+     '/jastrow/pairs/channel = ["up_up", "down_down"]', "none"),
+    ("jastrow-parameters", three_body("[[[1, 2], [3, 4]], [[5, 6], [7, 8]]]", '"up_down"'), "none"),
+    ("jastrow-parameters", three_body("[[[1, 2], [3, 4]], [[5, 6], [7, 8]]]", '"up_up"'), "error"),
+    ("jastrow-parameters", three_body("[[[1, 2], [3, 4]], [[3, 4], [7, 8]]]", '"up_up"'), "none"),
     ("density-orbitals", "hydrogen\n/hamiltonian@n_orbitals = 3\n/hamiltonian/one_body/both = "
      "[[1, 0, 0], [0, 1, 0], [0, 0, 1]]\n/hamiltonian/two_body/both/values = [1]\n"
      "/hamiltonian/two_body/both/index : uint64 = [0]\n/hamiltonian/orbital_symmetry = [0, 1, 2]\n"
@@ -166,6 +190,8 @@ THRESHOLDS = [
     ("string-roles", 'radical\n/orbitals/down/roles : string = ["core", "core", "virtual"]', "warning"),
     ("witness-configurations", "watched\n/witness/configurations/potential[0,1] = 0.5", "error"),
     ("witness-configurations", "watched\n/witness/configurations/local_energy[1,2] = 0.5", "error"),
+    ("witness-configurations", f"watched\n/witness/configurations/potential[0,1] = 0.5{CORE}\n"
+     "delete /witness/configurations/local_energy", "none"),
     ("witness-configurations", "watched\n/witness/configurations/sign[1,2] = 0.5", "error"),
     ("witness-configurations", "watched\n/witness/configurations/gradients[0,0,3,2] = 7", "error"),
     ("cell-volume", "crystal\n/system/cell/vectors = [[0, 12, 0], [4, 0, 0], [0, 0, 12]]", "note"),
@@ -238,6 +264,31 @@ def test_count_and_first_index_of_grouped_places(tmp_path: Path) -> None:
         "finite-numbers", "hydrogen\n/witness/points[2,1] = NaN\n/witness/points[4,0] = NaN", tmp_path
     )
     assert (finding.where, finding.count) == ("/witness/points[2,1]", 2)
+
+
+@pytest.mark.parametrize(
+    ("rule", "text", "where"),
+    [
+        ("primitive-offsets", "hydrogen\n/basis/primitive_start = [0, 6, 6]", "/basis/primitive_start[2]"),
+        ("row-offsets", "square\n/expansion/row_start = [0, 2, 4, 3, 8]", "/expansion/row_start[3]"),
+        ("column-order", "square\n/expansion/columns = [0, 3, 1, 2, 2, 1, 0, 3]", "/expansion/columns[5]"),
+        ("string-order", "square\n/expansion/up_strings = [[3], [5], [12], [10]]", "/expansion/up_strings[3]"),
+        ("sparse-index", "lattice\n/hamiltonian/two_body/both/index = [5, 5]", "/hamiltonian/two_body/both/index[1]"),
+        ("jastrow-atoms", "dressed\n/jastrow/inner/atoms = [1, 0]", "/jastrow/inner/atoms[1]"),
+        ("element-labels", 'water\n/system/labels[2] = "N2"', "/system/labels[2]"),
+        ("atom-indices", "water\n/basis/shell_center[6] = 3", "/basis/shell_center[6]"),
+        ("role-words", 'hydrogen\n/orbitals/main/roles[1] = "none"', "/orbitals/main/roles[1]"),
+        (
+            "coulomb-bounds",
+            "hydrogen\n/hamiltonian/two_body/both/values[4] = 3",
+            "/hamiltonian/two_body/both/values[4]",
+        ),
+        ("hermitian-one-body", "lattice\n/hamiltonian/one_body/both[1,0] = 1", "/hamiltonian/one_body/both[0,1]"),
+        ("witness-orbitals", "radical\n/witness/orbitals/down/values[3,1] = 9", "/witness/orbitals/down/values[0,1]"),
+    ],
+)
+def test_the_place_is_named_exactly(rule: str, text: str, where: str, tmp_path: Path) -> None:
+    assert [f.where for f in findings(rule, text, tmp_path)] == [where]
 
 
 def test_columns_that_fit_shells_of_the_other_kind_are_named(tmp_path: Path) -> None:
