@@ -1,0 +1,133 @@
+"""The namelist at the top of an FCIDUMP file, in the spellings met in practice."""
+
+from __future__ import annotations
+
+import re
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+
+from qwfx.errors import ConversionError
+
+__all__ = ["Header", "read_header"]
+
+OPENING = re.compile(rb"\s*[&$]FCI\b", re.IGNORECASE)
+CLOSING = re.compile(rb"[&$]END\b|/|^\s*[&$]\s*$", re.IGNORECASE | re.MULTILINE)
+COMMENT = re.compile(rb"![^\n]*")
+KEY = re.compile(r"([A-Za-z_]\w*)\s*(?:\(\s*\d+\s*\))?\s*=")
+KNOWN = {"NORB", "NELEC", "MS2", "ORBSYM", "ISYM", "UHF", "IUHF"}
+TRUE, FALSE = re.compile(r"\.?T(RUE)?\.?$", re.IGNORECASE), re.compile(r"\.?F(ALSE)?\.?$", re.IGNORECASE)
+LONGEST = 1 << 22
+"""A namelist of more bytes than this is none (a thousand orbitals take a few kilobytes)."""
+
+
+@dataclass(frozen=True)
+class Header:
+    """What the namelist says."""
+
+    n_orbitals: int
+    n_electrons: int
+    ms2: int | None
+    orbital_symmetry: tuple[int, ...]
+    """As written; empty if there is none."""
+    state_symmetry: int | None
+    """As written."""
+    spin_resolved: bool
+    extra: Mapping[str, str] = field(default_factory=dict)
+    """Other keys, as text."""
+    end: int = 0
+    """Offset of the first byte behind the namelist."""
+    lines: int = 0
+    """Lines that the namelist takes up."""
+
+
+def _error(where: str, found: str, expected: str, remedy: str = "") -> ConversionError:
+    return ConversionError(found, where=where, expected=expected, remedy=remedy or "mend the namelist")
+
+
+def read_header(text: bytes, name: str) -> Header:
+    """Parse the namelist at the start of `text`. Raises ConversionError with file and line."""
+    opening = OPENING.match(text)
+    if opening is None:
+        raise _error(f"{name}:1", "the file does not begin with &FCI", "a namelist &FCI ... &END", "check the file")
+    bare = COMMENT.sub(lambda m: b" " * len(m.group()), text[:LONGEST])  # offsets stay as they are
+    closing = CLOSING.search(bare, opening.end())
+    first_line = text.count(b"\n", 0, opening.end()) + 1
+    if closing is None:
+        raise _error(f"{name}:{first_line}", "the namelist &FCI is not closed", "&END, $END or / after the last key")
+    body = bare[opening.end() : closing.start()].decode("latin-1")
+    keys = _keys(body, name, first_line)
+
+    def line_of(key: str) -> str:
+        return f"{name}:{first_line + body[: keys[key][1]].count(chr(10))}"
+
+    def integer(key: str, default: int | None = None) -> int | None:
+        if key not in keys:
+            return default
+        values = _integers(keys[key][0], key, line_of(key))
+        if len(values) != 1:
+            raise _error(line_of(key), f"{key} has {len(values)} values", "one")
+        return values[0]
+
+    counts = {}
+    for key in ("NORB", "NELEC"):
+        value = integer(key)
+        if value is None:
+            raise _error(f"{name}:{first_line}", f"the namelist has no {key}", "NORB and NELEC")
+        if value < (1 if key == "NORB" else 0):
+            raise _error(line_of(key), f"{key} is {value}", "a positive number")
+        counts[key] = value
+    flags = [_flag(keys[key][0], key, line_of(key)) for key in ("UHF", "IUHF") if key in keys]
+    symmetry = tuple(_integers(keys["ORBSYM"][0], "ORBSYM", line_of("ORBSYM"))) if "ORBSYM" in keys else ()
+    return Header(
+        counts["NORB"],
+        counts["NELEC"],
+        integer("MS2"),
+        symmetry,
+        integer("ISYM"),
+        any(flags),
+        {key: value.strip().strip(",") for key, (value, _) in keys.items() if key not in KNOWN},
+        closing.end(),
+        text.count(b"\n", 0, closing.end()) + 1,
+    )
+
+
+def _keys(body: str, name: str, first_line: int) -> dict[str, tuple[str, int]]:
+    """Key in capitals -> (text of its values, offset)."""
+    found = list(KEY.finditer(body))
+    before = body[: found[0].start()] if found else body
+    if before.strip(" \t\r\n,"):
+        line = first_line + before.count("\n")
+        raise _error(f"{name}:{line}", f"{before.strip()[:40]!r} stands before the first key", "KEY=value, ...")
+    keys: dict[str, tuple[str, int]] = {}
+    for match, following in zip(found, [*found[1:], None], strict=True):
+        key = match.group(1).upper()
+        if key in keys:
+            line = first_line + body.count("\n", 0, match.start())
+            raise _error(f"{name}:{line}", f"{key} is given twice", "each key once")
+        keys[key] = body[match.end() : following.start() if following else len(body)], match.start()
+    return keys
+
+
+def _integers(text: str, key: str, where: str) -> list[int]:
+    """Integers separated by commas or blanks, with repeat counts such as ``8*1``."""
+    values: list[int] = []
+    for token in re.split(r"[,\s]+", text.strip(" \t\r\n,")):
+        count, star, value = token.partition("*")
+        try:
+            number = int(value if star else count)
+            times = int(count) if star else 1
+        except ValueError:
+            raise _error(where, f"{key} has the value {token!r}", "whole numbers") from None
+        if not 0 < times <= 100_000:
+            raise _error(where, f"{key} repeats a value {times} times", "1 to 100000 times")
+        values += [number] * times
+    return values
+
+
+def _flag(text: str, key: str, where: str) -> bool:
+    word = text.strip(" \t\r\n,")
+    if TRUE.match(word) or word == "1":
+        return True
+    if FALSE.match(word) or word == "0":
+        return False
+    raise _error(where, f"{key} is {word!r}", ".TRUE. or .FALSE.")

@@ -1,0 +1,77 @@
+"""Positions of two-electron integrals in the packed vectors, many at once; see `qwfx.reference.packing`."""
+
+from __future__ import annotations
+
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from qwfx.reference.packing import packed_length
+
+__all__ = ["dense", "indices", "positions", "unpack"]
+
+Ints = NDArray[np.int64]
+
+
+def _triangle(p: Ints, q: Ints) -> Ints:
+    high, low = np.maximum(p, q), np.minimum(p, q)
+    return np.asarray(high * (high + 1) // 2 + low)
+
+
+def positions(packing: str, n: int, index: NDArray[Any], like_spins: bool = True) -> Ints:
+    """Positions of the integrals whose indices are the rows of `index` (m, 4), from 0."""
+    p, q, r, s = np.asarray(index, dtype=np.int64).T
+    if packing == "eightfold":
+        return _triangle(_triangle(p, q), _triangle(r, s))
+    if packing == "fourfold":
+        return np.asarray(_triangle(p, q) * (n * (n + 1) // 2) + _triangle(r, s))
+    first, second = p * n + q, r * n + s
+    return _triangle(first, second) if like_spins else np.asarray(first * n * n + second)
+
+
+def _split_triangle(position: Ints) -> tuple[Ints, Ints]:
+    """The pair (high, low) at a position of a lower triangle."""
+    high = ((np.sqrt(8.0 * position + 1.0) - 1.0) / 2.0).astype(np.int64)
+    # The square root is rounded, and off by one near perfect squares of big numbers.
+    high += (high + 1) * (high + 2) // 2 <= position
+    high -= high * (high + 1) // 2 > position
+    return high, position - high * (high + 1) // 2
+
+
+def indices(packing: str, n: int, position: NDArray[Any], like_spins: bool = True) -> Ints:
+    """(m, 4) indices from 0 of the integrals at these positions: p >= q and r >= s for real orbitals."""
+    place = np.asarray(position, dtype=np.int64)
+    pairs = n * n if packing == "pairs" else n * (n + 1) // 2
+    if packing == "eightfold" or (packing == "pairs" and like_spins):
+        first, second = _split_triangle(place)
+    else:
+        first, second = np.divmod(place, max(pairs, 1))
+    if packing == "pairs":
+        return np.stack([*np.divmod(first, n), *np.divmod(second, n)], axis=1)
+    return np.stack([*_split_triangle(first), *_split_triangle(second)], axis=1)
+
+
+def dense(values: Any, index: Any, packing: str, n: int, like_spins: bool = True) -> NDArray[Any]:
+    """The packed vector in full: what `index` (or None) leaves out is zero."""
+    stored = np.asarray(values)
+    if index is None:
+        return stored
+    full = np.zeros(packed_length(packing, n, like_spins), dtype=stored.dtype)
+    full[np.asarray(index).astype(np.int64)] = stored
+    return full
+
+
+def unpack(values: Any, packing: str, n: int, like_spins: bool = True) -> NDArray[Any]:
+    """The packed vector as ``(n, n, n, n)``, ``(pq|rs)`` at [p, q, r, s]."""
+    orbital = np.arange(n)
+    if packing == "pairs":
+        pair = orbital[:, None] * n + orbital
+    else:
+        pair = _triangle(orbital[:, None], orbital[None, :])
+    flat = pair.reshape(-1)
+    if packing == "eightfold" or (packing == "pairs" and like_spins):
+        place = _triangle(flat[:, None], flat[None, :])
+    else:
+        place = flat[:, None] * (n * n if packing == "pairs" else n * (n + 1) // 2) + flat
+    return np.asarray(values)[place].reshape(n, n, n, n)
