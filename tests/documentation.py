@@ -49,14 +49,23 @@ def run_block(block: Block, folder: Path) -> None:
     environment = dict(os.environ, PATH=f"{Path(sys.executable).parent}{os.pathsep}{os.environ['PATH']}", COLUMNS="100")
     if block.kind == "python":
         done = subprocess.run(
-            [sys.executable, "-W", "error", "-c", block.text], cwd=folder, env=environment, capture_output=True, text=True
+            [sys.executable, "-W", "error", "-c", block.text],
+            cwd=folder,
+            env=environment,
+            capture_output=True,
+            text=True,
         )
         assert done.returncode == 0, f"line {block.line}:\n{block.text}\n{done.stderr}"
         return
     checker = doctest.OutputChecker()
     for command, expected in block.commands:
         done = subprocess.run(
-            ["bash", "-c", command], cwd=folder, env=environment, capture_output=True, text=True, stdin=subprocess.DEVNULL
+            ["bash", "-c", command],
+            cwd=folder,
+            env=environment,
+            capture_output=True,
+            text=True,
+            stdin=subprocess.DEVNULL,
         )
         found = done.stdout + done.stderr
         options = doctest.ELLIPSIS | doctest.NORMALIZE_WHITESPACE

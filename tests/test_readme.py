@@ -21,7 +21,8 @@ def test_readme_blocks(tmp_path: Path) -> None:
 
 def test_the_runner_notices_a_difference(tmp_path: Path) -> None:
     page = tmp_path / "page.md"
-    page.write_text("```console\n$ echo one two\none ...\n$ echo three\nfour\n```\n\n```python\nassert 1 + 1 == 3\n```\n")
+    text = "```console\n$ echo one two\none ...\n$ echo three\nfour\n```\n\n```python\nassert 1 + 1 == 3\n```\n"
+    page.write_text(text)
     console, python = blocks(page)
     with pytest.raises(AssertionError, match="four"):
         run_block(console, tmp_path)

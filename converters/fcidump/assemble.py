@@ -146,13 +146,13 @@ class _Assembler:
             return
         ends = np.flatnonzero(zero)
         begin = 0
-        for end in [*ends, len(index)]:
+        for end in [*ends.tolist(), len(index)]:
             own = np.zeros(len(index), dtype=bool)
             own[begin:end] = True
             self.sort(batch, own)
             if end < len(index):
-                self.separator(batch, int(end))
-            begin = int(end) + 1
+                self.separator(batch, end)
+            begin = end + 1
 
     def separator(self, batch: Records, row: int) -> None:
         value = float(batch.real[row])

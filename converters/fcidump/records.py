@@ -2,9 +2,9 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Generator, Iterator
 from dataclasses import dataclass
-from typing import Any
+from typing import Any, NoReturn
 
 import numpy as np
 from numba import njit
@@ -97,7 +97,7 @@ def _line(text: NDArray[np.uint8], position: int) -> tuple[int, int]:
     return begin, end
 
 
-def _slowly(text: NDArray[np.uint8], position: int, name: str, first: int) -> Iterator[Records]:
+def _slowly(text: NDArray[np.uint8], position: int, name: str, first: int) -> Generator[Records, None, int]:
     """One record whose value only Python's own parser can round; the position behind it is returned."""
     _, end = _line(text, position)
     line = bytes(text[position:end])
@@ -118,7 +118,7 @@ def _slowly(text: NDArray[np.uint8], position: int, name: str, first: int) -> It
     return end
 
 
-def _complain(text: NDArray[np.uint8], position: int, status: int, name: str) -> None:
+def _complain(text: NDArray[np.uint8], position: int, status: int, name: str) -> NoReturn:
     begin, end = _line(text, min(position, len(text) - 1))
     shown = bytes(text[begin:end]).decode("latin-1").strip()
     found, expected = PROBLEMS[status]
@@ -209,7 +209,7 @@ def survey(text: NDArray[np.uint8], start: int, name: str) -> Survey:
         any_imaginary = any_imaginary or bool(batch.imaginary.any())
         if not any_mixed:
             odd = (index % 2).astype(bool)
-            mixed = (two | index[:, :2].all(axis=1)) & (odd[:, 0] != odd[:, 1])
+            mixed = np.asarray((two | index[:, :2].all(axis=1)) & (odd[:, 0] != odd[:, 1]))
             mixed |= two & (odd[:, 2] != odd[:, 3])
             any_mixed = bool((mixed & (batch.real != 0.0)).any())
         if batch.first == 0:

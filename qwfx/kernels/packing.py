@@ -65,10 +65,7 @@ def dense(values: Any, index: Any, packing: str, n: int, like_spins: bool = True
 def unpack(values: Any, packing: str, n: int, like_spins: bool = True) -> NDArray[Any]:
     """The packed vector as ``(n, n, n, n)``, ``(pq|rs)`` at [p, q, r, s]."""
     orbital = np.arange(n)
-    if packing == "pairs":
-        pair = orbital[:, None] * n + orbital
-    else:
-        pair = _triangle(orbital[:, None], orbital[None, :])
+    pair = orbital[:, None] * n + orbital if packing == "pairs" else _triangle(orbital[:, None], orbital[None, :])
     flat = pair.reshape(-1)
     if packing == "eightfold" or (packing == "pairs" and like_spins):
         place = _triangle(flat[:, None], flat[None, :])
