@@ -8,13 +8,16 @@ decide the rounding, the caller is told to parse the token with Python's own ``f
 
 from __future__ import annotations
 
+from functools import lru_cache
 from typing import Any
 
 import numpy as np
 from numba import njit
 from numpy.typing import NDArray
 
-__all__ = ["NOT_A_NUMBER", "OK", "UNDECIDED", "number_at", "power_table", "text_to_float"]
+__all__ = [
+    "JIT", "NOT_A_NUMBER", "OK", "UNDECIDED", "number_and_unit", "number_at", "power_table", "text_to_float",
+]  # fmt: skip
 
 JIT: dict[str, Any] = {"cache": True, "nogil": True, "boundscheck": False}
 OK, NOT_A_NUMBER, UNDECIDED = 0, 1, 2
@@ -24,6 +27,7 @@ MOST_DIGITS = 19
 """Decimal digits that always fit 64 bits."""
 
 
+@lru_cache(maxsize=1)
 def power_table() -> NDArray[np.uint64]:
     """(651, 2) high and low halves of the leading 128 bits of 5^q, q = -342..308 (Lemire's construction)."""
     rows = []
@@ -34,8 +38,7 @@ def power_table() -> NDArray[np.uint64]:
             c = 2 ** (z + 127 if q >= -27 else 2 * z + 128) // power + 1
         else:
             c = power << max(128 - power.bit_length(), 0)
-        while c >= 1 << 128:
-            c //= 2
+        c >>= max(c.bit_length() - 128, 0)
         rows.append((c >> 64, c & (2**64 - 1)))
     return np.array(rows, dtype=np.uint64)
 
@@ -56,9 +59,10 @@ def _bits(w: Any, q: int, table: Any) -> tuple[bool, Any]:
     if q < LOWEST or q > HIGHEST:
         return False, U(0)
     lead = 0
-    while not (w >> U(63)):
-        w = w << U(1)
-        lead += 1
+    for step in (32, 16, 8, 4, 2, 1):
+        if not (w >> U(64 - step)):
+            w = w << U(step)
+            lead += step
     high, low = _product(w, table[q - LOWEST, 0])
     if (high & U(0x1FF)) == U(0x1FF):
         more, _ = _product(w, table[q - LOWEST, 1])
@@ -82,10 +86,10 @@ def _bits(w: Any, q: int, table: Any) -> tuple[bool, Any]:
 
 
 @njit(**JIT)  # type: ignore[untyped-decorator]
-def number_at(text: Any, start: int, end: int, table: Any, bits: Any) -> tuple[int, int]:
+def number_and_unit(text: Any, start: int, end: int, table: Any, bits: Any) -> tuple[int, int, int]:
     """Parse the number that begins at `start`; its bits go to ``bits[0]``.
 
-    Returns the position behind it and OK, NOT_A_NUMBER or UNDECIDED.
+    Returns the position behind it; OK, NOT_A_NUMBER or UNDECIDED; and the power of ten of its last printed digit.
     """
     i = start
     negative = False
@@ -93,28 +97,27 @@ def number_at(text: Any, start: int, end: int, table: Any, bits: Any) -> tuple[i
         negative = text[i] == 45
         i += 1
     w = U(0)
-    digits = kept = 0
-    exponent = 0
-    point = False
+    kept = exponent = unit = 0
+    digit = point = tail = False
     while i < end:
         c = text[i]
         if 48 <= c <= 57:
-            digits += 1
+            digit = True
+            unit -= 1 if point else 0
             if kept < MOST_DIGITS:
                 w = w * U(10) + U(c - 48)
                 kept += 1 if w else 0
                 exponent -= 1 if point else 0
             else:
-                if c != 48:
-                    kept = MOST_DIGITS + 1  # digits that do not fit: not decided here
+                tail = tail or c != 48
                 exponent += 0 if point else 1
         elif c == 46 and not point:
             point = True
         else:
             break
         i += 1
-    if digits == 0:
-        return i, NOT_A_NUMBER
+    if not digit:
+        return i, NOT_A_NUMBER, 0
     lettered = i < end and (text[i] == 69 or text[i] == 101 or text[i] == 68 or text[i] == 100)
     if lettered or (i < end and (text[i] == 43 or text[i] == 45)):
         if lettered:
@@ -129,19 +132,28 @@ def number_at(text: Any, start: int, end: int, table: Any, bits: Any) -> tuple[i
             any_digit = True
             i += 1
         if not any_digit:
-            return i, NOT_A_NUMBER
+            return i, NOT_A_NUMBER, 0
         exponent += sign * written
+        unit += sign * written
     if i < end and not (text[i] <= 32 or text[i] == 44 or text[i] == 41):  # blank, comma, closing bracket
-        return i, NOT_A_NUMBER
+        return i, NOT_A_NUMBER, 0
     top = U(1 << 63) if negative else U(0)
     if w == U(0):
         bits[0] = top
-        return i, OK
-    if kept > MOST_DIGITS:
-        return i, UNDECIDED
+        return i, OK, unit
     decided, found = _bits(w, exponent, table)
+    if tail:  # more digits than fit: decided if the next greater significand rounds to the same double
+        also, other = _bits(w + U(1), exponent, table)
+        decided = decided and also and found == other
     bits[0] = found | top
-    return i, OK if decided else UNDECIDED
+    return i, OK if decided else UNDECIDED, unit
+
+
+@njit(**JIT)  # type: ignore[untyped-decorator]
+def number_at(text: Any, start: int, end: int, table: Any, bits: Any) -> tuple[int, int]:
+    """`number_and_unit` without the unit."""
+    i, status, _ = number_and_unit(text, start, end, table, bits)
+    return i, status
 
 
 def text_to_float(token: bytes) -> float:

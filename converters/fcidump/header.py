@@ -6,14 +6,18 @@ import re
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 
-from qwfx.errors import ConversionError
+from qwfx.errors import ConversionError, UnsupportedError
 
-__all__ = ["Header", "read_header"]
+__all__ = ["LARGEST", "LONGEST", "OPENING", "Header", "read_header"]
 
-OPENING = re.compile(rb"\s*[&$]FCI\b", re.IGNORECASE)
+OPENING = re.compile(rb"(?:\s|[!#][^\n]*\n)*[&$]FCI\b", re.IGNORECASE)
+"""Blank lines and comments, then the name of the namelist."""
 CLOSING = re.compile(rb"[&$]END\b|/|^\s*[&$]\s*$", re.IGNORECASE | re.MULTILINE)
 COMMENT = re.compile(rb"![^\n]*")
 KEY = re.compile(r"([A-Za-z_]\w*)\s*(?:\(\s*\d+\s*\))?\s*=")
+WHOLE = re.compile(r"(?:(\d{1,6})\*)?([+-]?\d{1,9})")
+LARGEST = 4096
+"""Most orbitals: one-electron matrices are stored in full, and positions of integrals must fit 64 bits."""
 KNOWN = {"NORB", "NELEC", "MS2", "ORBSYM", "ISYM", "UHF", "IUHF"}
 TRUE, FALSE = re.compile(r"\.?T(RUE)?\.?$", re.IGNORECASE), re.compile(r"\.?F(ALSE)?\.?$", re.IGNORECASE)
 LONGEST = 1 << 22
@@ -36,8 +40,16 @@ class Header:
     """Other keys, as text."""
     end: int = 0
     """Offset of the first byte behind the namelist."""
-    lines: int = 0
-    """Lines that the namelist takes up."""
+    lines: Mapping[str, int] = field(default_factory=dict)
+    """Line of the file on which each key stands."""
+
+    def flag(self, key: str) -> bool:
+        """Whether a logical key is there and true."""
+        return TRUE.match(self.extra.get(key, "")) is not None
+
+    def line_of(self, key: str) -> int:
+        """The line of a key, or of the beginning of the namelist."""
+        return self.lines.get(key, self.lines[""])
 
 
 def _error(where: str, found: str, expected: str, remedy: str = "") -> ConversionError:
@@ -76,6 +88,13 @@ def read_header(text: bytes, name: str) -> Header:
         if value < (1 if key == "NORB" else 0):
             raise _error(line_of(key), f"{key} is {value}", "a positive number")
         counts[key] = value
+    if counts["NORB"] > 2 * LARGEST:
+        raise UnsupportedError(
+            f"NORB is {counts['NORB']}",
+            where=line_of("NORB"),
+            expected=f"at most {LARGEST} orbitals",
+            remedy="mend NORB, or leave out orbitals",
+        )
     flags = [_flag(keys[key][0], key, line_of(key)) for key in ("UHF", "IUHF") if key in keys]
     symmetry = tuple(_integers(keys["ORBSYM"][0], "ORBSYM", line_of("ORBSYM"))) if "ORBSYM" in keys else ()
     return Header(
@@ -85,10 +104,17 @@ def read_header(text: bytes, name: str) -> Header:
         symmetry,
         integer("ISYM"),
         any(flags),
-        {key: value.strip().strip(",") for key, (value, _) in keys.items() if key not in KNOWN},
-        closing.end(),
-        text.count(b"\n", 0, closing.end()) + 1,
+        {key: " ".join(value.strip(" \t\r\n,").split()) for key, (value, _) in keys.items() if key not in KNOWN},
+        _behind(bare, closing.end()),
+        {"": first_line} | {key: first_line + body.count("\n", 0, offset) for key, (_, offset) in keys.items()},
     )
+
+
+def _behind(bare: bytes, position: int) -> int:
+    """The end of the line on which the namelist is closed, if nothing but blanks follow there."""
+    end = bare.find(b"\n", position)
+    rest = bare[position : end if end >= 0 else len(bare)]
+    return position + len(rest) if not rest.strip() else position
 
 
 def _keys(body: str, name: str, first_line: int) -> dict[str, tuple[str, int]]:
@@ -112,15 +138,12 @@ def _integers(text: str, key: str, where: str) -> list[int]:
     """Integers separated by commas or blanks, with repeat counts such as ``8*1``."""
     values: list[int] = []
     for token in re.split(r"[,\s]+", text.strip(" \t\r\n,")):
-        count, star, value = token.partition("*")
-        try:
-            number = int(value if star else count)
-            times = int(count) if star else 1
-        except ValueError:
-            raise _error(where, f"{key} has the value {token!r}", "whole numbers") from None
-        if not 0 < times <= 100_000:
-            raise _error(where, f"{key} repeats a value {times} times", "1 to 100000 times")
-        values += [number] * times
+        parts = WHOLE.fullmatch(token)
+        if parts is None:
+            raise _error(where, f"{key} has the value {token[:40]!r}", "whole numbers")
+        values += [int(parts.group(2))] * int(parts.group(1) or 1)
+        if len(values) > 2 * LARGEST:
+            raise _error(where, f"{key} has more than {2 * LARGEST} values", "one for each orbital")
     return values
 
 

@@ -4,96 +4,172 @@ from __future__ import annotations
 
 import hashlib
 from collections.abc import Mapping
+from dataclasses import replace
 from datetime import datetime, timezone
 from pathlib import Path
 
 import numpy as np
-from numpy.typing import NDArray
 
 from qwfx._version import __version__
-from qwfx.converters.fcidump.assemble import Integrals, Layout, assemble, choose_layout
-from qwfx.converters.fcidump.header import Header, read_header
-from qwfx.converters.fcidump.records import Survey, line_at, survey
+from qwfx.converters.fcidump import integrals
+from qwfx.converters.fcidump.fill import Filled, fill
+from qwfx.converters.fcidump.header import LARGEST, LONGEST, Header, read_header
+from qwfx.converters.fcidump.layout import Layout, choose_layout, survey
+from qwfx.converters.fcidump.records import PIECE, Source, compiled
+from qwfx.converters.fcidump.store import BLOCK_CORE, BLOCKS, RESTRICTED, Places
+from qwfx.converters.fcidump.symmetry import symmetry_of
 from qwfx.converters.plugin import Progress, Reading
-from qwfx.errors import ConversionError, FileError
+from qwfx.errors import ConversionError, UnsupportedError
 from qwfx.model import Hamiltonian, Provenance, System, Wavefunction
 
 __all__ = ["read"]
 
-MOST_IRREPS = 8
-"""Irreps of D2h and its subgroups, the groups whose products are bitwise exclusive-or."""
+MOSTLY = 1 << 16  # bytes; few namelists are longer
 
 
 def read(path: Path, options: Mapping[str, str], progress: Progress | None = None) -> Reading:
-    """Read `path`. Raises FileError, ConversionError."""
-    name = str(path)
-    text = _bytes(path)
-    head = bytes(text[: 1 << 22])
-    header = read_header(head, name)
-    if progress:
-        progress("reading records (the parser is compiled on first use)", 0.0)
-    seen = survey(text, header.end, name)
-    _check_complete(text, seen, name, options.get("accept-incomplete", "no") == "yes")
-    layout = choose_layout(header, seen, name)
-    integrals = assemble(text, header.end, name, layout, seen, progress)
-    n_up, n_down, spin_notes = _electrons(header, layout, name)
-    symmetry, state, symmetry_notes = _symmetry(header, layout, options.get("isym", "like-orbsym"), name)
-    notes = [note for note in (layout.note, *spin_notes, *symmetry_notes) if note]
-    notes += _notes(header, seen, integrals)
+    """Read `path`. Raises FileError, ConversionError for what is wrong, UnsupportedError for spinors."""
+    source = Source(path)
+    header = _header(source)
+    n_electrons_notes = _check_header(header, source)
+    if progress and not compiled():
+        progress("compiling the parser of records (once)", 0.0)
+    layout, filled = _integrals(source, header, progress)
+    _check_complete(source, layout, filled, options.get("accept-incomplete", "no") == "yes")
+    places = layout.places
+    n_up, n_down, spin_notes = _electrons(header, layout, source.name)
+    two_body, storage_notes = integrals.two_body(filled, places)
     hamiltonian = Hamiltonian(
-        n_orbitals=layout.n_orbitals,
-        core_energy=integrals.core_energy or 0.0,
-        one_body=integrals.one_body,
-        two_body=integrals.two_body,
-        complex_orbitals=layout.is_complex,
-        orbital_energies=integrals.orbital_energies,
-        orbital_symmetry=symmetry,
-        state_symmetry=state,
+        n_orbitals=places.n,
+        core_energy=float(filled.part(0, 1)[0].real),
+        one_body=integrals.one_body(filled, places),
+        two_body=two_body,
+        complex_orbitals=places.is_complex,
+        orbital_energies=integrals.orbital_energies(filled, places),
     )
+    symmetry = symmetry_of(header, hamiltonian, options.get("isym", "like-orbsym"), source.name)
+    hamiltonian = replace(hamiltonian, orbital_symmetry=symmetry.orbitals, state_symmetry=symmetry.state)
+    notes = [*layout.notes, *n_electrons_notes, *spin_notes, *symmetry.notes, *_notes(filled), *storage_notes]
     nothing = np.zeros(0)
     system = System(n_up, n_down, (), nothing.astype(np.int32), nothing, nothing.reshape(0, 3))
     step = {
         "activity": "read from an FCIDUMP file",
         "agent": f"qwfx {__version__}",
         "time": datetime.now(timezone.utc).isoformat(timespec="seconds"),
-        "used": [{"entity": path.name, "sha256": hashlib.sha256(text.data).hexdigest()}],
+        "used": [{"entity": path.name, "sha256": _sha256(source)}],
+        "generated": [],
         "notes": notes,
     }
     return Reading(Wavefunction(system, hamiltonian=hamiltonian, provenance=Provenance((step,))), tuple(notes))
 
 
-def _bytes(path: Path) -> NDArray[np.uint8]:
-    """The bytes of a file, mapped and not read."""
+def _header(source: Source) -> Header:
+    head = source.head(MOSTLY)
     try:
-        if path.stat().st_size == 0:
-            return np.zeros(0, dtype=np.uint8)
-        return np.memmap(path, dtype=np.uint8, mode="r")
-    except (OSError, ValueError) as error:
-        raise FileError(
-            f"cannot be read ({getattr(error, 'strerror', None) or error})",
-            where=str(path),
-            expected="a readable file",
-            remedy="check the path and the permissions",
-        ) from None
+        header = read_header(head, source.name)
+    except ConversionError:
+        if len(head) < MOSTLY:
+            raise
+        header = read_header(source.head(LONGEST), source.name)
+    source.start = header.end
+    return header
 
 
-def _check_complete(text: NDArray[np.uint8], seen: Survey, name: str, accept: bool) -> None:
+def _check_header(header: Header, source: Source) -> list[str]:
+    """Notes on keys that were not used. Raises UnsupportedError for spinors."""
+    if header.flag("TREL"):
+        raise UnsupportedError(
+            "TREL = .TRUE.: the integrals are over spinors",
+            where=f"{source.name}:{header.line_of('TREL')}",
+            expected="orbitals of one spin each, or common to both",
+            remedy="write the file without spin-orbit coupling",
+        )
+    if not header.extra:
+        return []
+    return ["keys of the namelist that were not used: " + ", ".join(f"{k}={v}" for k, v in header.extra.items())]
+
+
+def _integrals(source: Source, header: Header, progress: Progress | None) -> tuple[Layout, Filled]:
+    """Read on the spot what is plain; look at all records first where the layout or the kind of numbers needs it."""
+    first = next(source.records(), None)
+    if first is None:
+        raise ConversionError(
+            "there are no records behind the namelist",
+            where=source.where(source.size),
+            expected="value i j k l, line by line",
+            remedy="the file is cut off: write it again",
+        )
+    place = int(first.place[0])
+    bracketed = source.head(place + 1)[-1:] == b"("
+    # A record of zero indices that is not the last may close a block.
+    closes = np.flatnonzero(first.index[:-1, 0] == 0)
+    if header.spin_resolved or bracketed or len(closes) or first.imaginary.any():
+        return _with_survey(source, header, progress)
+    layout = Layout(Places(_spatial(header, source), RESTRICTED, False))
+    filled = fill(source, layout, progress, restart_if_unclear=True)
+    return (layout, filled) if filled else _with_survey(source, header, progress)
+
+
+def _with_survey(source: Source, header: Header, progress: Progress | None) -> tuple[Layout, Filled]:
+    if progress:
+        progress("looking at all records", 0.0)
+    layout = choose_layout(header, survey(source), source)
+    if layout.places.n > LARGEST:
+        _spatial(header, source)
+    filled = fill(source, layout, progress)
+    assert filled is not None
+    return layout, filled
+
+
+def _spatial(header: Header, source: Source) -> int:
+    if header.n_orbitals > LARGEST:
+        raise UnsupportedError(
+            f"NORB is {header.n_orbitals}",
+            where=f"{source.name}:{header.line_of('NORB')}",
+            expected=f"at most {LARGEST} spatial orbitals",
+            remedy="mend NORB, or leave out orbitals",
+        )
+    return header.n_orbitals
+
+
+def _check_complete(source: Source, layout: Layout, filled: Filled, accept: bool) -> None:
     """A file that was cut off between two lines has no mark of it, but it lacks what comes last."""
-    where = f"{name}:{line_at(text, len(text))}"
+    blocked = layout.places.kind == BLOCKS
     found = ""
-    if not seen.n_records:
-        found = "there are no records behind the namelist"
-    elif seen.n_two_body and not seen.n_one_body:
-        found = "the file ends without one-electron integrals"
-    elif text[-1] != 10 and not seen.zero_last and not seen.n_zero:
+    if blocked and filled.block < BLOCK_CORE:
+        found = f"the file ends in block {filled.block + 1} of five"
+    elif not filled.seen_one_body and (filled.seen_two_body or not filled.seen_core):
+        found = "there are no one-electron integrals"
+    elif not filled.seen_core and not source.ends_with_newline():
         found = "the last line is not ended and there is no core energy"
-    if found and not accept:
+    if found and (blocked or not accept):
+        remedy = "the file is cut off: write it again"
         raise ConversionError(
             found,
-            where=where,
+            where=source.where(source.size - 1),
             expected="two-electron integrals, one-electron integrals and the core energy",
-            remedy="the file is cut off: write it again; if it is meant so, use --set accept-incomplete=yes",
+            remedy=remedy if blocked else f"{remedy}; if it is meant so, --set accept-incomplete=yes",
         )
+
+
+def _notes(filled: Filled) -> list[str]:
+    notes = []
+    if not filled.seen_core:
+        notes.append("no core energy in the file: taken as 0")
+    if filled.n_repeated:
+        notes.append(f"{filled.n_repeated} records repeat a number that an earlier one gives, and agree with it")
+    return notes
+
+
+def _sha256(source: Source) -> str:
+    digest = hashlib.sha256()
+    try:
+        with open(source.path, "rb") as stream:
+            while piece := stream.read(PIECE):
+                digest.update(piece)
+    except OSError as error:
+        raise source.unreadable(error) from None
+    return digest.hexdigest()
 
 
 def _electrons(header: Header, layout: Layout, name: str) -> tuple[int, int, list[str]]:
@@ -105,73 +181,16 @@ def _electrons(header: Header, layout: Layout, name: str) -> tuple[int, int, lis
     if (header.n_electrons + ms2) % 2 or abs(ms2) > header.n_electrons:
         raise ConversionError(
             f"NELEC = {header.n_electrons} and MS2 = {ms2} do not go together",
-            where=f"{name}:1",
+            where=f"{name}:{header.line_of('NELEC')}",
             expected="both even or both odd, and MS2 at most NELEC",
             remedy="mend the namelist",
         )
     n_up, n_down = (header.n_electrons + ms2) // 2, (header.n_electrons - ms2) // 2
-    if max(n_up, n_down) > layout.n_orbitals:
+    if max(n_up, n_down) > layout.places.n:
         raise ConversionError(
-            f"{n_up} up and {n_down} down electrons do not fit into {layout.n_orbitals} orbitals",
-            where=f"{name}:1",
+            f"{n_up} up and {n_down} down electrons do not fit into {layout.places.n} orbitals",
+            where=f"{name}:{header.line_of('NELEC')}",
             expected="at most one electron of each spin in an orbital",
             remedy="mend NELEC, MS2 or NORB",
         )
     return n_up, n_down, notes
-
-
-def _symmetry(
-    header: Header, layout: Layout, state_from: str, name: str
-) -> tuple[NDArray[np.int32] | None, int | None, list[str]]:
-    """Irreps of orbitals and state from 0, and what was taken for granted."""
-    written = np.array(header.orbital_symmetry, dtype=np.int64)
-    notes: list[str] = []
-    if not len(written):
-        return None, None, notes
-    n = layout.n_orbitals
-    if len(written) == 2 * n:
-        if not np.array_equal(written[0::2], written[1::2]):
-            return None, None, ["ORBSYM differs between up and down orbitals: left out"]
-        written = written[0::2]
-    if len(written) != n:
-        raise ConversionError(
-            f"ORBSYM has {len(header.orbital_symmetry)} values",
-            where=f"{name}:1",
-            expected=f"{header.n_orbitals}, one for each orbital",
-            remedy="mend the namelist",
-        )
-    base = 0 if written.min() == 0 else 1
-    symmetry = written - base
-    if symmetry.min() < 0 or symmetry.max() >= MOST_IRREPS:
-        return None, None, [f"ORBSYM has values up to {int(written.max())}, more than eight irreps: left out"]
-    if base == 0 and written.any():
-        notes.append("ORBSYM counts from 0")
-    state = header.state_symmetry
-    if state is not None:
-        state_base = {"from-0": 0, "from-1": 1}.get(state_from, 0 if state == 0 else base)
-        if symmetry.any():
-            notes.append(
-                f"ISYM = {state} counts from {state_base}: irrep {state - state_base} of 0..7"
-                " (--set isym=from-0 or isym=from-1 decides)"
-            )
-        state -= state_base
-        if not 0 <= state < MOST_IRREPS:
-            state = None
-        elif not symmetry.any():
-            state = 0
-    return symmetry.astype(np.int32), state, notes
-
-
-def _notes(header: Header, seen: Survey, integrals: Integrals) -> list[str]:
-    notes = []
-    if integrals.core_energy is None:
-        notes.append("no core energy in the file: taken as 0")
-    if integrals.n_repeated:
-        notes.append(f"{integrals.n_repeated} records repeat an integral with the same value")
-    if header.extra:
-        listed = ", ".join(f"{key}={value}" for key, value in header.extra.items())
-        notes.append(f"keys of the namelist that were not used: {listed}")
-    for pair, table in integrals.two_body.items():
-        if table.index is not None:
-            notes.append(f"two-electron integrals {pair} stored sparsely: {len(table.index)} of the packed vector")
-    return notes

@@ -1,230 +1,258 @@
-"""The records of an FCIDUMP file, ``value i j k l`` line by line, parsed from bytes."""
+"""The records of an FCIDUMP file, ``value i j k l`` line by line, parsed from bytes, a piece of the file at a time."""
 
 from __future__ import annotations
 
-from collections.abc import Generator, Iterator
+from collections.abc import Iterator
 from dataclasses import dataclass
+from pathlib import Path
 from typing import Any, NoReturn
 
 import numpy as np
 from numba import njit
 from numpy.typing import NDArray
 
-from qwfx.converters.numbers import JIT, NOT_A_NUMBER, UNDECIDED, number_at, power_table, text_to_float
-from qwfx.errors import ConversionError
+from qwfx.converters.numbers import JIT, NOT_A_NUMBER, UNDECIDED, number_and_unit, power_table, text_to_float
+from qwfx.errors import ConversionError, FileError
 
-__all__ = ["Records", "Survey", "batches", "line_at", "survey"]
+__all__ = ["COARSEST", "LARGEST_INDEX", "Records", "Source", "compiled"]
 
-BATCH = 1 << 16
+PIECE = 1 << 20
+SHORTEST = 10  # bytes of a record: "1 1 1 1 1\n"
 FINE, BAD_VALUE, FEW, BAD_INDEX, MORE, SLOW = range(6)
 PROBLEMS = {
-    BAD_VALUE: ("the value is not a number", "a number such as 1.5E-03, or (re,im)"),
+    BAD_VALUE: ("the value is not a finite number", "a number such as 1.5E-03, or (re,im)"),
     FEW: ("the line ends before four indices", "value i j k l"),
     BAD_INDEX: ("an index is not a whole number", "four whole numbers from 0"),
     MORE: ("there is more behind the four indices", "value i j k l"),
 }
 LARGEST_INDEX = 1_000_000
-
-
-@dataclass(frozen=True)
-class Survey:
-    """What a first look at all records shows."""
-
-    n_records: int
-    largest_index: int
-    is_complex: bool
-    any_imaginary: bool
-    n_zero: int
-    """Records whose indices are all zero."""
-    zero_last: bool
-    """Whether the last record is one of them."""
-    any_mixed: bool
-    """Whether a pair (ij| or |kl) joins an odd and an even index with a value that is not zero."""
-    n_two_body: int
-    n_one_body: int
-    digits: int
-    """Most significant digits of the values looked at."""
+COARSEST = -6
+"""A last digit coarser than 1e-6 belongs to a number like 0.5, which was printed in full."""
 
 
 @dataclass(frozen=True)
 class Records:
-    """A batch of records."""
+    """The records of one piece of the file. The arrays are used again for the next piece."""
 
     first: int
     """Number of the first one, from 0."""
     real: NDArray[np.float64]
     imaginary: NDArray[np.float64]
+    unit: NDArray[np.int8]
+    """Power of ten of the last printed digit, -126..COARSEST."""
     index: NDArray[np.int32]
     """(n, 4), from 1 as written."""
     place: NDArray[np.int64]
-    """(n) byte at which each record begins."""
+    """(n) byte of the file at which each record begins."""
+    done: float
+    """Fraction of the file that is behind us."""
 
 
-def line_at(text: Any, position: int) -> int:
-    """Number of the line, from 1, in which a byte lies."""
-    return int(np.count_nonzero(np.asarray(text[:position]) == 10)) + 1
+class Source:
+    """A file whose records are read, again if need be, without ever holding the whole of it."""
 
+    def __init__(self, path: Path) -> None:
+        self.path, self.name = path, str(path)
+        self.start = 0
+        """Byte behind the namelist."""
+        try:
+            self.size = path.stat().st_size
+        except OSError as error:
+            raise self.unreadable(error) from None
 
-def batches(text: NDArray[np.uint8], start: int, name: str) -> Iterator[Records]:
-    """All records in order, in batches. Raises ConversionError with the line of the first bad one."""
-    table = power_table()
-    real, imaginary = np.empty(BATCH), np.empty(BATCH)
-    bits = np.zeros(1, dtype=np.uint64)
-    index, place = np.empty((BATCH, 4), dtype=np.int32), np.empty(BATCH, dtype=np.int64)
-    position, first = start, 0
-    while position < len(text):
-        position, n, status = _parse(
-            text, position, len(text), table, bits, real.view(np.uint64), imaginary.view(np.uint64), index, place
+    def unreadable(self, error: OSError) -> FileError:
+        """The error to raise for one of the operating system."""
+        return FileError(
+            f"cannot be read ({error.strerror or error})",
+            where=self.name,
+            expected="a readable file",
+            remedy="check the path and the permissions",
         )
-        if n:
-            yield Records(first, real[:n], imaginary[:n], index[:n], place[:n])
-            first += n
-        if status == SLOW:
-            position = yield from _slowly(text, position, name, first)
-            first += 1
-        elif status != FINE:
-            _complain(text, position, status, name)
 
+    def head(self, length: int) -> bytes:
+        """The first bytes of the file."""
+        try:
+            with open(self.path, "rb") as stream:
+                return stream.read(length)
+        except OSError as error:
+            raise self.unreadable(error) from None
 
-def _line(text: NDArray[np.uint8], position: int) -> tuple[int, int]:
-    """First byte of and first byte behind the line in which a byte lies."""
-    begin = position
-    while begin > 0 and text[begin - 1] != 10:
-        begin -= 1
-    end = position
-    while end < len(text) and text[end] != 10:
-        end += 1
-    return begin, end
+    def line(self, place: int) -> int:
+        """Number, from 1, of the line that holds a byte."""
+        count, left = 1, place
+        with open(self.path, "rb") as stream:
+            while left > 0 and (piece := stream.read(min(left, PIECE))):
+                count += piece.count(b"\n")
+                left -= len(piece)
+        return count
 
+    def where(self, place: int) -> str:
+        """File and line of a byte, for messages."""
+        return f"{self.name}:{self.line(place)}"
 
-def _slowly(text: NDArray[np.uint8], position: int, name: str, first: int) -> Generator[Records, None, int]:
-    """One record whose value only Python's own parser can round; the position behind it is returned."""
-    _, end = _line(text, position)
-    line = bytes(text[position:end])
-    value, _, rest = line.partition(b")") if line.lstrip().startswith(b"(") else (*line.split(None, 1), b"")[:3]
-    try:
-        if line.lstrip().startswith(b"("):
-            parts = [text_to_float(part) for part in value.strip().lstrip(b"(").split(b",")]
-        else:
-            rest = line.split(None, 1)[1]
-            parts = [text_to_float(value), 0.0]
-        index = np.array([[int(word) for word in rest.split()]], dtype=np.int32)
-        numbers = np.array(parts)
-        if index.shape != (1, 4) or len(parts) != 2 or not np.isfinite(numbers).all():
-            raise ValueError
-    except (ValueError, IndexError, OverflowError):
-        _complain(text, position, BAD_VALUE, name)
-    yield Records(first, numbers[:1], numbers[1:], index, np.array([position]))
-    return end
+    def ends_with_newline(self) -> bool:
+        """Whether the last line is complete."""
+        try:
+            with open(self.path, "rb") as stream:
+                stream.seek(max(0, self.size - 1))
+                return stream.read(1) == b"\n"
+        except OSError as error:
+            raise self.unreadable(error) from None
 
+    def pieces(self) -> Iterator[tuple[int, bytes]]:
+        """Offset and bytes of pieces of whole lines behind the namelist; each ends with a line feed."""
+        try:
+            with open(self.path, "rb") as stream:
+                stream.seek(self.start)
+                offset, rest = self.start, b""
+                while piece := stream.read(PIECE):
+                    end = piece.rfind(b"\n") + 1
+                    if end:
+                        whole = rest + piece[:end]
+                        yield offset, whole
+                        offset, rest = offset + len(whole), piece[end:]
+                    elif len(rest) > PIECE:
+                        self.complain(rest[:80] + b"\n", offset, 0, BAD_VALUE)
+                    else:
+                        rest += piece
+                if rest.strip():
+                    yield offset, rest + b"\n"
+        except OSError as error:
+            raise self.unreadable(error) from None
 
-def _complain(text: NDArray[np.uint8], position: int, status: int, name: str) -> NoReturn:
-    begin, end = _line(text, min(position, len(text) - 1))
-    shown = bytes(text[begin:end]).decode("latin-1").strip()
-    found, expected = PROBLEMS[status]
-    last = not (np.asarray(text[end:]) > 32).any()
-    raise ConversionError(
-        f"{found}: {shown[:60]!r}",
-        where=f"{name}:{line_at(text, begin)}",
-        expected=expected,
-        remedy="the file is cut off here: write it again" if last and status == FEW else "mend the line",
-    )
+    def records(self) -> Iterator[Records]:
+        """All records in order. Raises ConversionError with the line of the first that is none."""
+        table, bits = power_table(), np.zeros(1, dtype=np.uint64)
+        first, room = 0, 0
+        for offset, piece in self.pieces():
+            if len(piece) // SHORTEST + 1 > room:
+                room = len(piece) // SHORTEST + 1
+                real, imaginary = np.empty(room), np.empty(room)
+                unit = np.empty(room, dtype=np.int8)
+                index, place = np.empty((room, 4), dtype=np.int32), np.empty(room, dtype=np.int64)
+            text = np.frombuffer(piece, dtype=np.uint8)
+            n, position, status = 0, 0, SLOW
+            while status == SLOW:
+                n, position, status = _parse(
+                    text, position, n, table, bits, real.view(np.uint64), imaginary.view(np.uint64), unit, index, place
+                )
+                if status == SLOW:
+                    values, unit[n], index[n], position, place[n] = self.slowly(piece, offset, position)
+                    real[n], imaginary[n] = values
+                    n += 1
+            if status != FINE:
+                self.complain(piece, offset, position, status)
+            if n:
+                place[:n] += offset
+                done = (offset + len(piece)) / max(self.size, 1)
+                yield Records(first, real[:n], imaginary[:n], unit[:n], index[:n], place[:n], done)
+                first += n
+
+    def slowly(self, piece: bytes, offset: int, position: int) -> tuple[list[float], int, list[int], int, int]:
+        """One record whose value only Python's own parser can round: values, unit, indices, end, begin."""
+        end = piece.index(b"\n", position)
+        line = piece[position:end]
+        try:
+            if line.startswith(b"("):
+                inside, _, rest = line[1:].partition(b")")
+                tokens = inside.split(b",")
+            else:
+                token, _, rest = line.replace(b",", b" ").replace(b"\t", b" ").partition(b" ")
+                tokens = [token, b"0"]
+            values = [text_to_float(token) for token in tokens]
+            words = rest.replace(b",", b" ").split()
+            if not all(word.isdigit() for word in words):
+                raise ValueError
+            index = [min(int(word), LARGEST_INDEX) for word in words]
+            if len(values) != 2 or not np.isfinite(values).all():
+                raise ValueError
+        except (ValueError, UnicodeDecodeError):
+            self.complain(piece, offset, position, BAD_VALUE)
+        if len(index) != 4:
+            self.complain(piece, offset, position, FEW if len(index) < 4 else MORE)
+        return values, -126 if abs(values[0]) < 1e-100 else COARSEST, index, end, position
+
+    def complain(self, piece: bytes, offset: int, position: int, status: int) -> NoReturn:
+        """Raise the error for a line that is no record."""
+        begin = piece.rfind(b"\n", 0, position) + 1
+        end = piece.find(b"\n", position)
+        shown = piece[begin:end].decode("latin-1").strip()
+        found, expected = PROBLEMS[status]
+        last = offset + end >= self.size - 1 and not piece[end:].strip()
+        raise ConversionError(
+            f"{found}: {shown[:60]!r}",
+            where=self.where(offset + begin),
+            expected=expected,
+            remedy="the file is cut off here: write it again" if last else "mend the line, or write the file again",
+        )
 
 
 @njit(**JIT)  # type: ignore[untyped-decorator]
 def _parse(
-    text: Any, start: int, end: int, table: Any, bits: Any, real: Any, imaginary: Any, index: Any, place: Any
+    text: Any, start: int, n: int, table: Any, bits: Any, real: Any, imaginary: Any, unit: Any, index: Any, place: Any
 ) -> tuple[int, int, int]:
-    """Fill the batch; the position reached, the number of records, and what stopped it."""
-    n, i = 0, start
-    while n < len(place):
+    """Parse records from `start` on; the number of records, the position reached, and what stopped it."""
+    i, end = start, len(text)
+    while True:
         while i < end and text[i] <= 32:
             i += 1
         if i >= end:
-            return end, n, FINE
+            return n, end, FINE
         begin = i
         imaginary[n] = np.uint64(0)
+        parts = 1
         if text[i] == 40:  # (re,im)
+            parts = 2
             i += 1
-            for part in range(2):
-                while i < end and (text[i] == 32 or text[i] == 9):
-                    i += 1
-                i, status = number_at(text, i, end, table, bits)
-                if status == UNDECIDED:
-                    return begin, n, SLOW
-                if status == NOT_A_NUMBER:
-                    return begin, n, BAD_VALUE
-                if part == 0:
-                    real[n] = bits[0]
-                else:
-                    imaginary[n] = bits[0]
-                while i < end and (text[i] == 32 or text[i] == 9):
-                    i += 1
-                if i >= end or text[i] != (44 if part == 0 else 41):
-                    return begin, n, BAD_VALUE
+        last = -126
+        for part in range(parts):
+            while parts == 2 and (text[i] == 32 or text[i] == 9):
                 i += 1
-        else:
-            i, status = number_at(text, i, end, table, bits)
+            i, status, printed = number_and_unit(text, i, end, table, bits)
             if status == UNDECIDED:
-                return begin, n, SLOW
+                return n, begin, SLOW
             if status == NOT_A_NUMBER:
-                return begin, n, BAD_VALUE
-            real[n] = bits[0]
-        for column in range(4):
-            while i < end and (text[i] == 32 or text[i] == 9 or text[i] == 44):
+                return n, begin, BAD_VALUE
+            last = max(last, min(printed, COARSEST))
+            if part == 0:
+                real[n] = bits[0]
+            else:
+                imaginary[n] = bits[0]
+            if parts == 2:
+                while text[i] == 32 or text[i] == 9:
+                    i += 1
+                if text[i] != (44 if part == 0 else 41):
+                    return n, begin, BAD_VALUE
                 i += 1
-            if i >= end or text[i] == 10 or text[i] == 13:
-                return begin, n, FEW
+        unit[n] = last
+        for column in range(4):
+            while text[i] == 32 or text[i] == 9 or text[i] == 44:
+                i += 1
+            if text[i] == 10 or text[i] == 13:
+                return n, begin, FEW
+            if text[i] == 43:
+                i += 1
             value, digits = 0, 0
-            while i < end and 48 <= text[i] <= 57:
+            while 48 <= text[i] <= 57:
                 value = min(value * 10 + (text[i] - 48), LARGEST_INDEX)
                 digits += 1
                 i += 1
-            if digits == 0 or (i < end and not (text[i] <= 32 or text[i] == 44)):
-                return begin, n, BAD_INDEX
+            if digits == 0 or not (text[i] <= 32 or text[i] == 44):
+                return n, begin, BAD_INDEX
             index[n, column] = value
-        while i < end and (text[i] == 32 or text[i] == 9 or text[i] == 13):
+        while text[i] == 32 or text[i] == 9 or text[i] == 13:
             i += 1
-        if i < end and text[i] != 10:
-            return begin, n, MORE
+        if text[i] != 10:
+            return n, begin, MORE
         place[n] = begin
         n += 1
-    return i, n, FINE
 
 
-def survey(text: NDArray[np.uint8], start: int, name: str) -> Survey:
-    """A first look at all records. Raises ConversionError with the line of the first bad one."""
-    n = largest = n_zero = n_two = n_one = 0
-    is_complex = any_imaginary = any_mixed = zero_last = False
-    for batch in batches(text, start, name):
-        index = batch.index
-        n += len(index)
-        largest = max(largest, int(index.max()))
-        zero = ~index.any(axis=1)
-        n_zero += int(zero.sum())
-        zero_last = bool(zero[-1])
-        two = index.all(axis=1)
-        n_two += int(two.sum())
-        n_one += int((index[:, :2].all(axis=1) & ~index[:, 2:].any(axis=1)).sum())
-        any_imaginary = any_imaginary or bool(batch.imaginary.any())
-        if not any_mixed:
-            odd = (index % 2).astype(bool)
-            mixed = np.asarray((two | index[:, :2].all(axis=1)) & (odd[:, 0] != odd[:, 1]))
-            mixed |= two & (odd[:, 2] != odd[:, 3])
-            any_mixed = bool((mixed & (batch.real != 0.0)).any())
-        if batch.first == 0:
-            is_complex = bytes(text[batch.place[0] : batch.place[0] + 1]) == b"("
-    head = bytes(text[start : start + 20_000]).decode("latin-1")
-    return Survey(
-        n, largest, is_complex, any_imaginary, n_zero, zero_last, any_mixed, n_two, n_one, _significant(head)
-    )
-
-
-def _significant(text: str) -> int:
-    """Most significant digits that a value in the text has."""
-    most = 1
-    for line in text.splitlines()[:-1]:
-        token = line.split()[0] if line.split() else ""
-        digits = "".join(c for c in token.upper().replace("D", "E").split("E")[0].lstrip("(") if c.isdigit())
-        most = max(most, len(digits.lstrip("0")))
-    return min(most, 17)
+def compiled() -> bool:
+    """Whether the parser is compiled already, here or in the cache on the disk."""
+    if _parse.signatures:
+        return True
+    try:
+        return bool(_parse._cache._cache_file._load_index())
+    except AttributeError:  # another version of Numba keeps it elsewhere
+        return True
