@@ -134,9 +134,9 @@ def locate(
                     return m, SPINS, block
                 i, j, k, l = (i + 1) // 2, (j + 1) // 2, (k + 1) // 2, (l + 1) // 2
             if two:
-                part = block if kind == BLOCKS else 0
+                part = np.int64(block if kind == BLOCKS else 0)
                 if kind == INTERLEAVED:
-                    part = 2 if one_spin != other_spin else one_spin
+                    part = np.int64(2) if one_spin != other_spin else one_spin
                     if part == 2 and one_spin == 1:
                         i, j, k, l = k, l, i, j
                 position, turned = _two_body(i - 1, j - 1, k - 1, l - 1, n, part != 2, is_complex)

@@ -44,10 +44,20 @@ class _Writer:
         self.stream, self.h, self.threshold = stream, hamiltonian, threshold
         self.n_dropped, self.largest_dropped = 0, 0.0
 
-    def lines(self, index: NDArray[np.int64], value: NDArray[Any]) -> None:
-        """Records of one batch; `index` from 1."""
+    def lines(self, index: NDArray[np.int64], value: NDArray[Any], always: NDArray[np.bool_] | None = None) -> None:
+        """Records of one batch; `index` from 1. Those marked by `always` are written whatever their value."""
         size = np.abs(value)
+        if not np.isfinite(size).all():
+            bad = int(np.argmax(~np.isfinite(size)))
+            raise ConversionError(
+                f"the integral {' '.join(map(str, index[bad]))} is {value[bad]}",
+                where="Hamiltonian",
+                expected="finite numbers",
+                remedy="mend the source of the integrals; nothing was written",
+            )
         keep = size > self.threshold
+        if always is not None:
+            keep |= always
         if not keep.all():
             dropped = size[~keep]
             dropped = dropped[dropped > 0]
@@ -89,7 +99,8 @@ class _Writer:
         p, q = np.tril_indices(self.h.n_orbitals)
         index = np.stack([p, q], axis=1)
         numbered = np.concatenate([relabel(index), np.zeros_like(index)], axis=1)
-        self.lines(numbered, np.asarray(matrix)[p, q])
+        # The diagonal tells a reader how many orbitals there are, and that the file is whole.
+        self.lines(numbered, np.asarray(matrix)[p, q], always=p == q)
 
     def energies(self, energies: Any, relabel: Callable[[NDArray[np.int64]], NDArray[np.int64]]) -> None:
         index = relabel(np.arange(self.h.n_orbitals)[:, None])[:, 0]
@@ -97,6 +108,10 @@ class _Writer:
             self.stream.write(self.number(e) + f" {i:4d}    0    0    0\n")
 
     def number(self, value: float) -> str:
+        if not np.isfinite(value):
+            raise ConversionError(
+                f"an energy is {value}", where="Hamiltonian", expected="finite numbers", remedy="mend the source"
+            )
         return f"({value: .16E},{0.0: .16E})" if self.h.complex_orbitals else f"{value: .16E}"
 
     def core(self) -> None:
@@ -192,6 +207,10 @@ def write(
     finally:
         Path(name).unlink(missing_ok=True)
     notes = []
+    if h.orbital_symmetry is None:
+        notes.append("no irreps are known: ORBSYM and ISYM are written as 1, which is no symmetry")
+    elif h.state_symmetry is None:
+        notes.append("the irrep of the state is not known: ISYM is written as 1, the totally symmetric one")
     if writer.n_dropped:
         notes.append(
             f"{writer.n_dropped} integrals of at most {writer.largest_dropped:.1e} hartree left out "

@@ -9,7 +9,7 @@ from numpy.typing import NDArray
 
 from qwfx.reference.packing import packed_length
 
-__all__ = ["dense", "indices", "positions", "unpack"]
+__all__ = ["dense", "indices", "pack", "positions", "unpack"]
 
 Ints = NDArray[np.int64]
 
@@ -72,3 +72,16 @@ def unpack(values: Any, packing: str, n: int, like_spins: bool = True) -> NDArra
     else:
         place = flat[:, None] * (n * n if packing == "pairs" else n * (n + 1) // 2) + flat
     return np.asarray(values)[place].reshape(n, n, n, n)
+
+
+def pack(full: NDArray[Any], packing: str, like_spins: bool = True) -> NDArray[Any]:
+    """The packed vector of integrals ``(n, n, n, n)`` that have the symmetry of the packing.
+
+    Of elements that share a place the one whose indices `indices` returns is taken.
+    """
+    n = len(full)
+    p, q = (x.ravel() for x in np.indices((n, n))) if packing == "pairs" else np.tril_indices(n)
+    square = full[p, q][:, p, q]
+    if packing == "eightfold" or (packing == "pairs" and like_spins):
+        return np.asarray(square[np.tril_indices(len(square))])
+    return np.ascontiguousarray(square).reshape(-1)

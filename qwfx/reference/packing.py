@@ -8,7 +8,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-__all__ = ["packed_length", "position", "unpack"]
+__all__ = ["pack", "packed_length", "position", "unpack"]
 
 
 def triangle(p: int, q: int) -> int:
@@ -43,3 +43,12 @@ def unpack(values: NDArray[Any], packing: str, n: int, like_spins: bool = True) 
     for p, q, r, s in product(range(n), repeat=4):
         full[p, q, r, s] = values[position(packing, n, p, q, r, s, like_spins)]
     return full
+
+
+def pack(full: NDArray[Any], packing: str, like_spins: bool = True) -> NDArray[Any]:
+    """The packed vector of integrals ``(n, n, n, n)`` that have the symmetry of the packing."""
+    n = len(full)
+    values = np.empty(packed_length(packing, n, like_spins), dtype=full.dtype)
+    for p, q, r, s in product(range(n), repeat=4):
+        values[position(packing, n, p, q, r, s, like_spins)] = full[p, q, r, s]
+    return values
