@@ -11,6 +11,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from qwfx._version import __version__
+from qwfx.converters.determinant import bit_string, single_determinant
 from qwfx.converters.pyscf.from_mole import basis_of, check_molecule, function_order, potentials_of, system_of
 from qwfx.converters.witness import orbitals_by_pyscf, witness_points
 from qwfx.errors import ConversionError
@@ -18,7 +19,6 @@ from qwfx.model import Energies, Expansion, OrbitalSet, Provenance, Spin, Wavefu
 
 __all__ = ["Parts", "assemble", "bit_string", "energies_table", "per_spin", "provenance_step", "single_determinant"]
 
-INTEGER_WITHIN = 1e-8  # electrons; PySCF's own integer occupations are exact
 
 
 @dataclass
@@ -121,32 +121,6 @@ def provenance_step(
     }
 
 
-def single_determinant(orbitals: dict[str, OrbitalSet], n_up: int, n_down: int) -> Expansion | None:
-    """The 1x1 expansion of integer occupations; None if they are absent, fractional or of another count."""
-    up_name, down_name = ("spatial", "spatial") if "spatial" in orbitals else ("up", "down")
-    up, down = orbitals[up_name].occupations, orbitals[down_name].occupations
-    if up is None or down is None:
-        return None
-    rounded = np.rint(up), np.rint(down)
-    if max(np.abs(up - rounded[0]).max(initial=0), np.abs(down - rounded[1]).max(initial=0)) > INTEGER_WITHIN:
-        return None
-    if up_name == down_name:
-        occupied = np.flatnonzero(rounded[0] >= 1), np.flatnonzero(rounded[0] >= 2)
-    else:
-        occupied = np.flatnonzero(rounded[0] >= 1), np.flatnonzero(rounded[1] >= 1)
-    if (len(occupied[0]), len(occupied[1])) != (n_up, n_down):
-        return None
-    return Expansion(
-        up_set=up_name,
-        down_set=down_name,
-        up_strings=bit_string(occupied[0], len(up)),
-        down_strings=bit_string(occupied[1], len(down)),
-        row_start=np.array([0, 1], dtype=np.int64),
-        columns=np.zeros(1, dtype=np.int64),
-        coefficients=np.ones((1, 1)),
-    )
-
-
 def energies_table(method: str | None, totals: Sequence[float], repulsion: float) -> Energies:
     """The total energy of each state and the repulsion of the nuclei (hartree)."""
     rows = [(state, method or "unknown", total, "total") for state, total in enumerate(totals)]
@@ -159,14 +133,6 @@ def energies_table(method: str | None, totals: Sequence[float], repulsion: float
         uncertainty=np.zeros(len(rows)),
         quantity=quantities,
     )
-
-
-def bit_string(occupied: NDArray[np.int64], n_orbitals: int) -> NDArray[np.uint64]:
-    """(1, W) occupation bit string."""
-    words = np.zeros(max(1, -(-n_orbitals // 64)), dtype=np.uint64)
-    for p in occupied:
-        words[p // 64] |= np.uint64(1 << (int(p) % 64))
-    return words[np.newaxis]
 
 
 def _real(values: list[NDArray[Any]] | None, index: int) -> NDArray[np.float64] | None:

@@ -4,17 +4,13 @@ from __future__ import annotations
 
 import re
 
+from qwfx.elements import BOHR
+from qwfx.elements import SYMBOLS as _SYMBOLS
+
 __all__ = ["BOHR", "COVALENT_RADII", "SYMBOLS", "element_readings"]
 
-BOHR = 0.529177210903
-"""Angstrom per bohr (CODATA 2018)."""
-
-SYMBOLS = tuple(
-    "H He Li Be B C N O F Ne Na Mg Al Si P S Cl Ar K Ca Sc Ti V Cr Mn Fe Co Ni Cu Zn Ga Ge As Se Br Kr "
-    "Rb Sr Y Zr Nb Mo Tc Ru Rh Pd Ag Cd In Sn Sb Te I Xe Cs Ba La Ce Pr Nd Pm Sm Eu Gd Tb Dy Ho Er Tm Yb Lu "
-    "Hf Ta W Re Os Ir Pt Au Hg Tl Pb Bi Po At Rn Fr Ra Ac Th Pa U Np Pu Am Cm Bk Cf Es Fm Md No Lr "
-    "Rf Db Sg Bh Hs Mt Ds Rg Cn Nh Fl Mc Lv Ts Og".split()
-)
+SYMBOLS = _SYMBOLS[1:]
+"""Element symbols, Z = 1 first."""
 
 COVALENT_RADII = tuple(
     float(x)

@@ -1,0 +1,361 @@
+"""The sections of a Molden file as they are written: atoms, shells, orbitals. Nothing is interpreted here."""
+
+from __future__ import annotations
+
+import re
+from dataclasses import dataclass, field
+from pathlib import Path
+
+import numpy as np
+from numpy.typing import NDArray
+
+from qwfx.converters.molden.orbital_lines import read_orbitals
+from qwfx.elements import BOHR
+from qwfx.errors import ConversionError, FileError
+
+__all__ = ["Atom", "GaussianShell", "Molden", "SlaterFunction", "WrittenOrbitals", "parse"]
+
+HEADING = re.compile(r"^[ \t]*\[([^\]\n]+)\][ \t]*(.*)$", re.MULTILINE)
+LETTERS = {letter: l for l, letter in enumerate("spdfghi")}
+FLAGS = {
+    "5d": {2: False, 3: False}, "5d7f": {2: False, 3: False}, "5d10f": {2: False, 3: True}, "7f": {3: False},
+    "9g": {4: False}, "11h": {5: False}, "13i": {6: False}, "6d": {2: True}, "6d10f": {2: True, 3: True},
+    "6d7f": {2: True, 3: False}, "10f": {3: True}, "15g": {4: True}, "21h": {5: True},
+}  # fmt: skip
+USED = {"molden format", "title", "atoms", "gto", "sto", "mo", "core", "pseudo", "n_atoms", "charge", *FLAGS}
+
+
+
+
+@dataclass(frozen=True)
+class Atom:
+    """One line of [Atoms]."""
+
+    label: str
+    number: int
+    """The file's own number of the atom."""
+    charge: float
+    position: NDArray[np.float64]
+    """bohr."""
+    line: int
+
+
+@dataclass(frozen=True)
+class GaussianShell:
+    """One shell of [GTO], coefficients as printed."""
+
+    atom: int
+    """Index into the atoms, from 0."""
+    l: int
+    exponents: NDArray[np.float64]
+    coefficients: NDArray[np.float64]
+    line: int
+
+
+@dataclass(frozen=True)
+class SlaterFunction:
+    """One line of [STO]: ``norm x^i y^j z^k r^n exp(-a r)``."""
+
+    atom: int
+    powers: tuple[int, int, int]
+    n: int
+    exponent: float
+    norm: float
+    line: int
+
+
+@dataclass
+class WrittenOrbitals:
+    """[MO] as it is written, in the file's order of functions."""
+
+    coefficients: NDArray[np.float64]
+    """(M, F)."""
+    energies: list[float | None]
+    occupations: list[float | None]
+    spins: list[str]
+    """``alpha`` or ``beta``."""
+    symmetries: list[str | None]
+    decimals: int
+    """Decimal places (or significant digits less one, with exponents) of the coefficients."""
+    lines: list[int] = field(default_factory=list)
+    """Line at which each orbital begins."""
+
+
+@dataclass
+class Molden:
+    """A whole file."""
+
+    name: str
+    title: str
+    atoms: list[Atom]
+    shells: list[GaussianShell]
+    slater: list[SlaterFunction]
+    cartesian: dict[int, bool]
+    """l from 2 -> whether its shells are Cartesian."""
+    orbitals: WrittenOrbitals
+    core: dict[int, int]
+    """Atom index -> core electrons, from [Core]."""
+    valence: dict[int, int]
+    """Atom index -> valence charge, from [Pseudo]."""
+    skipped: list[str]
+    """Sections that were not used, with their numbers of lines."""
+    unit: str
+
+    @property
+    def n_functions(self) -> int:
+        """Functions, by the shells and flags."""
+        return len(self.slater) + sum(_size(shell.l, self.cartesian) for shell in self.shells)
+
+
+@dataclass(frozen=True)
+class _Section:
+    name: str
+    argument: str
+    start: int
+    end: int
+    line: int
+    """Line of the heading, from 1."""
+
+
+def bad(name: str, line: int, found: str, expected: str, remedy: str = "mend the line") -> ConversionError:
+    """An error at a line of a file."""
+    return ConversionError(found, where=f"{name}:{line}", expected=expected, remedy=remedy)
+
+
+def number(token: str, name: str, line: int, what: str) -> float:
+    """A number, with D or E or no letter before the exponent; finite."""
+    from math import isfinite
+
+    text = token.upper().replace("D", "E")
+    try:
+        value = float(text)
+    except ValueError:
+        match = re.fullmatch(r"([+-]?[\d.]+)([+-]\d+)", text)
+        if match is None:
+            raise bad(name, line, f"{what} is {token!r}", "a number") from None
+        value = float(f"{match.group(1)}E{match.group(2)}")
+    if not isfinite(value):
+        raise bad(name, line, f"{what} is {token!r}", "a finite number")
+    return value
+
+
+def integer(token: str, name: str, line: int, what: str) -> int:
+    """A whole number."""
+    try:
+        return int(token)
+    except ValueError:
+        raise bad(name, line, f"{what} is {token!r}", "a whole number") from None
+
+
+def parse(path: Path) -> Molden:
+    """Read `path`. Raises FileError, ConversionError with the line."""
+    try:
+        raw = path.read_bytes()
+    except OSError as error:
+        raise FileError(
+            f"cannot be read ({error.strerror or error})",
+            where=str(path),
+            expected="a readable file",
+            remedy="check the path and the permissions",
+        ) from None
+    name = str(path)
+    text = raw.decode("latin-1")  # one character a byte: offsets in text and bytes agree
+    sections = _sections(text)
+    by_name: dict[str, _Section] = {}
+    for section in sections:
+        if section.name in by_name and section.name in ("atoms", "gto", "sto", "mo"):
+            raise bad(name, section.line, f"[{section.name}] is there twice", "one such section")
+        by_name.setdefault(section.name, section)
+    for needed in ("atoms", "mo"):
+        if needed not in by_name:
+            raise bad(name, 1, f"there is no section [{needed}]", "[Atoms], [GTO] or [STO], and [MO]", "check the file")
+    if ("gto" in by_name) == ("sto" in by_name):
+        found = "both [GTO] and [STO]" if "gto" in by_name else "neither [GTO] nor [STO]"
+        raise bad(name, 1, f"there is {found}", "one of the two", "check the file")
+    atoms, unit = _atoms(text, by_name["atoms"], name)
+    index = {atom.number: i for i, atom in enumerate(atoms)}
+    shells = _gto(text, by_name["gto"], name, index) if "gto" in by_name else []
+    slater = _sto(text, by_name["sto"], name, index) if "sto" in by_name else []
+    cartesian = _flags(sections, shells, name)
+    n_functions = len(slater) + sum(_size(shell.l, cartesian) for shell in shells)
+    mo = by_name["mo"]
+    orbitals = read_orbitals(np.frombuffer(raw, np.uint8), mo.start, mo.end, mo.line, n_functions, name)
+    return Molden(
+        name, _title(text, by_name), atoms, shells, slater, cartesian, orbitals, _core(text, by_name, name, index),
+        _pseudo(text, by_name, name, index), _skipped(text, sections), unit,
+    )  # fmt: skip
+
+
+def _size(l: int, cartesian: dict[int, bool]) -> int:
+    return (l + 1) * (l + 2) // 2 if cartesian.get(l, False) else 2 * l + 1
+
+
+def _sections(text: str) -> list[_Section]:
+    found = list(HEADING.finditer(text))
+    ends = [m.start() for m in found[1:]] + [len(text)]
+    sections, line, seen = [], 1, 0
+    for match, end in zip(found, ends, strict=True):
+        line += text.count("\n", seen, match.start(1))
+        seen = match.start(1)
+        heading = " ".join(match.group(1).lower().split())
+        sections.append(_Section(heading, match.group(2).strip(), match.end(), end, line))
+    return sections
+
+
+def _lines(text: str, section: _Section) -> list[tuple[int, list[str]]]:
+    """(line number, tokens) of the lines of a section that are not blank."""
+    rows = text[section.start : section.end].split("\n")
+    # The text begins behind the heading: its rest of the line is row 0.
+    return [(section.line + k, row.split()) for k, row in enumerate(rows) if k and row.strip()]
+
+
+def _title(text: str, by_name: dict[str, _Section]) -> str:
+    section = by_name.get("title")
+    return "" if section is None else " ".join(text[section.start : section.end].split())[:200]
+
+
+def _atoms(text: str, section: _Section, name: str) -> tuple[list[Atom], str]:
+    word = section.argument.strip("() \t\r").lower()
+    if word.startswith("ang"):
+        scale, unit = 1.0 / BOHR, "angstrom"
+    elif word in ("au", "a.u.", "a.u", "bohr", "bohrs"):
+        scale, unit = 1.0, "bohr"
+    else:
+        raise bad(name, section.line, f"the unit of [Atoms] is {section.argument!r}", "AU or Angs", "add the unit")
+    atoms = []
+    for line, tokens in _lines(text, section):
+        if len(tokens) < 6:
+            raise bad(name, line, f"the line has {len(tokens)} entries", "label number charge x y z")
+        position = np.array([number(t, name, line, "a coordinate") for t in tokens[3:6]]) * scale
+        charge = number(tokens[2], name, line, "the charge")
+        atoms.append(Atom(tokens[0], integer(tokens[1], name, line, "the number of the atom"), charge, position, line))
+    if not atoms:
+        raise bad(name, section.line, "[Atoms] is empty", "one line for each atom", "check the file")
+    numbers = [atom.number for atom in atoms]
+    if len(set(numbers)) != len(numbers):
+        twice = next(a for a in atoms if numbers.count(a.number) > 1)
+        raise bad(name, twice.line, f"two atoms have the number {twice.number}", "a number of its own for each atom")
+    return atoms, unit
+
+
+def _atom_of(token: str, index: dict[int, int], name: str, line: int) -> int:
+    wanted = integer(token, name, line, "the number of an atom")
+    if wanted not in index:
+        raise bad(name, line, f"there is no atom {wanted}", f"one of the {len(index)} numbers in [Atoms]")
+    return index[wanted]
+
+
+def _gto(text: str, section: _Section, name: str, index: dict[int, int]) -> list[GaussianShell]:
+    shells: list[GaussianShell] = []
+    rows = _lines(text, section)
+    atom: int | None = None
+    k = 0
+    while k < len(rows):
+        line, tokens = rows[k]
+        k += 1
+        kind = tokens[0].lower()
+        if kind.isdigit():
+            atom = _atom_of(kind, index, name, line)
+            continue
+        if atom is None:
+            raise bad(name, line, f"{tokens[0]!r} stands before the first atom", "the number of an atom")
+        if not (kind in LETTERS or kind == "sp") or len(tokens) < 2:
+            expected = "a shell: s, p, sp, d, f, g, h or i, and its number of primitives"
+            raise bad(name, line, f"{' '.join(tokens)[:40]!r}", expected)
+        n = integer(tokens[1], name, line, "the number of primitives")
+        scale = number(tokens[2], name, line, "the scale factor") if len(tokens) > 2 else 1.0
+        if n < 1 or k + n > len(rows):
+            found = f"the shell announces {n} primitives, {len(rows) - k} lines follow"
+            raise bad(name, line, found, "that many lines", "the file is cut off or the number is wrong")
+        columns = 3 if kind == "sp" else 2
+        table = np.empty((n, columns))
+        for p in range(n):
+            at, numbers = rows[k + p]
+            if len(numbers) < columns or not numbers[0].lstrip("+-.")[:1].isdigit():
+                expected = f"primitive {p + 1} of {n}: exponent and coefficient"
+                raise bad(name, at, f"{' '.join(numbers)[:40]!r}", expected)
+            table[p] = [number(t, name, at, "an exponent or coefficient") for t in numbers[:columns]]
+            if table[p, 0] <= 0:
+                raise bad(name, at, f"an exponent is {numbers[0]}", "a positive number")
+        k += n
+        exponents = table[:, 0] * (scale**2 if scale not in (0.0, 1.0) else 1.0)
+        for column, l in enumerate([0, 1] if kind == "sp" else [LETTERS[kind]]):
+            shells.append(GaussianShell(atom, l, exponents, table[:, 1 + column].copy(), line))
+    if not shells:
+        raise bad(name, section.line, "[GTO] is empty", "the shells of each atom", "check the file")
+    return shells
+
+
+def _sto(text: str, section: _Section, name: str, index: dict[int, int]) -> list[SlaterFunction]:
+    functions = []
+    for line, tokens in _lines(text, section):
+        if len(tokens) < 7:
+            raise bad(name, line, f"the line has {len(tokens)} entries", "atom kx ky kz kr exponent factor")
+        powers = [integer(t, name, line, "a power") for t in tokens[1:5]]
+        exponent, norm = (number(t, name, line, "a number") for t in tokens[5:7])
+        if exponent <= 0:
+            raise bad(name, line, f"an exponent is {tokens[5]}", "a positive number")
+        if min(powers[:3]) < 0 or sum(powers[:3]) > 6 or powers[3] < 0:
+            raise bad(
+                name, line, f"the powers are {powers}", "powers of x, y, z from 0 with a sum of at most 6, of r from 0",
+                "qwfx does not support other powers, such as the d functions written with negative ones",
+            )  # fmt: skip
+        atom = _atom_of(tokens[0], index, name, line)
+        functions.append(
+            SlaterFunction(atom, (powers[0], powers[1], powers[2]), powers[3], exponent, norm, line)
+        )
+    if not functions:
+        raise bad(name, section.line, "[STO] is empty", "the functions of each atom", "check the file")
+    return functions
+
+
+def _flags(sections: list[_Section], shells: list[GaussianShell], name: str) -> dict[int, bool]:
+    """Which shells are Cartesian: all without a flag, as the format has it; h and i go with the rest of the file."""
+    told: dict[int, bool] = {}
+    for section in sections:
+        for l, cartesian in FLAGS.get(section.name.replace(" ", ""), {}).items():
+            if told.get(l, cartesian) != cartesian:
+                found = f"[{section.name}] contradicts an earlier flag"
+                raise bad(name, section.line, found, "one kind of shell per l")
+            told[l] = cartesian
+    any_spherical = any(not cartesian for cartesian in told.values())
+    flags = {}
+    for l in range(2, 7):
+        # The format has no flag beyond g: such shells are spherical where others of the file are.
+        flags[l] = told.get(l, not any_spherical if l > 4 else True)
+    for shell in shells:
+        if shell.l > 4 and flags[shell.l]:
+            raise bad(
+                name, shell.line, "a Cartesian shell beyond g, for which the format defines no order",
+                "spherical functions ([5D], [7F], [9G])", "write the file with spherical functions",
+            )  # fmt: skip
+    return flags
+
+
+def _core(text: str, by_name: dict[str, _Section], name: str, index: dict[int, int]) -> dict[int, int]:
+    """Core electrons by atom: lines ``number : electrons`` of [Core]."""
+    core: dict[int, int] = {}
+    for line, tokens in _lines(text, by_name["core"]) if "core" in by_name else ():
+        parts = " ".join(tokens).replace(":", " ").split()
+        if len(parts) < 2:
+            raise bad(name, line, f"{' '.join(tokens)!r}", "number : core electrons")
+        core[_atom_of(parts[0], index, name, line)] = integer(parts[1], name, line, "the number of core electrons")
+    return core
+
+
+def _pseudo(text: str, by_name: dict[str, _Section], name: str, index: dict[int, int]) -> dict[int, int]:
+    """Valence charges by atom: lines ``label number charge`` of [Pseudo]."""
+    valence: dict[int, int] = {}
+    for line, tokens in _lines(text, by_name["pseudo"]) if "pseudo" in by_name else ():
+        if len(tokens) < 3:
+            raise bad(name, line, f"{' '.join(tokens)!r}", "label number valence-charge")
+        valence[_atom_of(tokens[1], index, name, line)] = integer(tokens[2], name, line, "the valence charge")
+    return valence
+
+
+def _skipped(text: str, sections: list[_Section]) -> list[str]:
+    return [
+        f"[{s.name}] ({sum(1 for row in text[s.start : s.end].split(chr(10)) if row.strip())} lines)"
+        for s in sections
+        if s.name not in USED and s.name.replace(" ", "") not in FLAGS
+    ]
