@@ -75,7 +75,7 @@ def choose_layout(header: Header, seen: Survey, source: Source) -> Layout:
         if zeros not in (BLOCK_CORE, BLOCK_CORE + 1):
             raise ConversionError(
                 f"{zeros} records have only zero indices",
-                where=source.where(source.size),
+                where=source.end(),
                 expected="6 for spin-resolved blocks: one behind each of five blocks, and the core energy",
                 remedy="the file is cut off or a block is missing: write it again",
             )

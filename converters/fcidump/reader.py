@@ -95,7 +95,7 @@ def _integrals(source: Source, header: Header, progress: Progress | None) -> tup
     if first is None:
         raise ConversionError(
             "there are no records behind the namelist",
-            where=source.where(source.size),
+            where=source.end(),
             expected="value i j k l, line by line",
             remedy="the file is cut off: write it again",
         )
@@ -146,7 +146,7 @@ def _check_complete(source: Source, layout: Layout, filled: Filled, accept: bool
         remedy = "the file is cut off: write it again"
         raise ConversionError(
             found,
-            where=source.where(source.size - 1),
+            where=source.end(),
             expected="two-electron integrals, one-electron integrals and the core energy",
             remedy=remedy if blocked else f"{remedy}; if it is meant so, --set accept-incomplete=yes",
         )

@@ -90,6 +90,10 @@ class Source:
         """File and line of a byte, for messages."""
         return f"{self.name}:{self.line(place)}"
 
+    def end(self) -> str:
+        """File and last line, for messages."""
+        return self.where(max(0, self.size - 1))
+
     def ends_with_newline(self) -> bool:
         """Whether the last line is complete."""
         try:
