@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import re
+from collections.abc import Iterator
 from dataclasses import dataclass, field
 from pathlib import Path
 
@@ -190,8 +191,19 @@ def _size(l: int, cartesian: dict[int, bool]) -> int:
     return (l + 1) * (l + 2) // 2 if cartesian.get(l, False) else 2 * l + 1
 
 
+def _find_headings(text: str) -> Iterator[re.Match[str]]:
+    """Headings in order: every bracket that begins a line (looked for first, since files are long and these are few)."""
+    at = text.find("[")
+    while at >= 0:
+        start = text.rfind("\n", 0, at) + 1
+        match = HEADING.match(text, start)
+        if match is not None and match.start(1) == at + 1:
+            yield match
+        at = text.find("[", at + 1)
+
+
 def _sections(text: str) -> list[_Section]:
-    found = list(HEADING.finditer(text))
+    found = list(_find_headings(text))
     ends = [m.start() for m in found[1:]] + [len(text)]
     sections, line, seen = [], 1, 0
     for match, end in zip(found, ends, strict=True):
