@@ -39,8 +39,11 @@ class Layout:
     notes: tuple[str, ...] = ()
 
 
-def survey(source: Source) -> Survey:
-    """Look at all records. Raises ConversionError with the line of the first that is none."""
+def survey(source: Source, bracketed: bool) -> Survey:
+    """Look at all records; `bracketed`: the first value is written ``(re,im)``.
+
+    Raises ConversionError with the line of the first that is none.
+    """
     n = largest = 0
     any_imaginary = False
     zeros: list[int] = []
@@ -53,7 +56,7 @@ def survey(source: Source) -> Survey:
         rows = rows[~batch.index[rows].any(axis=1)][: 16 - len(zeros)]  # more than seven are refused anyhow
         zeros += (rows + batch.first).tolist()
         values += batch.real[rows].tolist()
-    return Survey(n, largest, False, any_imaginary, tuple(zeros), tuple(values))
+    return Survey(n, largest, bracketed, any_imaginary, tuple(zeros), tuple(values))
 
 
 def choose_layout(header: Header, seen: Survey, source: Source) -> Layout:
@@ -68,9 +71,9 @@ def choose_layout(header: Header, seen: Survey, source: Source) -> Layout:
             "complex orbitals: an integral that the file leaves out counts as zero unless (ij|kl) = (kl|ij) = (ji|lk)* "
             "gives it"
         )
-    separated = seen.zero_values[:BLOCK_CORE - 1]
-    looks_blocked = zeros >= BLOCK_CORE and not any(separated)
-    if looks_blocked or (header.spin_resolved and zeros >= 2):
+    looks_blocked = zeros >= BLOCK_CORE and not any(seen.zero_values[: BLOCK_CORE - 1])
+    # Two zero records of which the first has a value are the core energy given twice.
+    if looks_blocked or (header.spin_resolved and zeros >= 2 and seen.zero_values[0] == 0.0):
         last_is_core = zeros == BLOCK_CORE and seen.zero_values[-1] != 0.0
         if zeros not in (BLOCK_CORE, BLOCK_CORE + 1):
             raise ConversionError(

@@ -104,16 +104,18 @@ def _integrals(source: Source, header: Header, progress: Progress | None) -> tup
     # A record of zero indices that is not the last may close a block.
     closes = np.flatnonzero(first.index[:-1, 0] == 0)
     if header.spin_resolved or bracketed or len(closes) or first.imaginary.any():
-        return _with_survey(source, header, progress)
+        return _with_survey(source, header, bracketed, progress)
     layout = Layout(Places(_spatial(header, source), RESTRICTED, False))
     filled = fill(source, layout, progress, restart_if_unclear=True)
-    return (layout, filled) if filled else _with_survey(source, header, progress)
+    return (layout, filled) if filled else _with_survey(source, header, bracketed, progress)
 
 
-def _with_survey(source: Source, header: Header, progress: Progress | None) -> tuple[Layout, Filled]:
+def _with_survey(
+    source: Source, header: Header, bracketed: bool, progress: Progress | None
+) -> tuple[Layout, Filled]:
     if progress:
         progress("looking at all records", 0.0)
-    layout = choose_layout(header, survey(source), source)
+    layout = choose_layout(header, survey(source, bracketed), source)
     if layout.places.n > LARGEST:
         _spatial(header, source)
     filled = fill(source, layout, progress)

@@ -96,3 +96,11 @@ def test_notes_and_provenance() -> None:
     assert step["used"][0]["entity"] == "case.fcidump"
     assert len(step["used"][0]["sha256"]) == 64
     assert list(step["notes"]) == list(reading.notes)
+
+
+def test_complex_records_without_imaginary_parts() -> None:
+    reading = converter.read(CORPUS / "z_z18_complex_zero_imag" / "case.fcidump", {})
+    assert any("imaginary parts are all zero: stored as real" in note for note in reading.notes)
+    h = reading.wavefunction.hamiltonian
+    assert h is not None
+    assert not h.complex_orbitals

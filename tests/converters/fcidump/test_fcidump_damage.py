@@ -139,13 +139,16 @@ def test_mutated_bytes(tmp_path: Path, data: st.DataObject) -> None:
         else:
             del content[at + 1 :]
         content = content or bytearray(b" ")
+    error, h = None, None
     try:
         h = read(tmp_path, bytes(content))
-    except QwfxError as error:
+    except QwfxError as caught:
+        error = caught
+    if h is None:
+        assert error is not None
         assert error.where
         assert error.expected
         assert error.remedy
         return
-    assert np.isfinite(np.asarray(h.one_body["both" if not h.spin_resolved else "up"])).all()
-    for table in h.two_body.values():
-        assert np.isfinite(np.asarray(table.values)).all()
+    for array in (*h.one_body.values(), *(table.values for table in h.two_body.values())):
+        assert np.isfinite(np.asarray(array)).all()

@@ -50,7 +50,8 @@ def test_half_way_between_two_doubles(odd: int, shift: int, aside: int) -> None:
     ("text", "value", "unit"),
     [
         ("1.5D-03", 1.5e-3, -4), ("-.25d+2", -25.0, 0), ("+7", 7.0, 0), ("1.25-105", 1.25e-105, -107),
-        ("5.e1", 50.0, 1), ("1.0+002", 100.0, 1), ("0.000", 0.0, -3), ("3.50160672098974190547E+00", 3.501606720989742, -20),
+        ("5.e1", 50.0, 1), ("1.0+002", 100.0, 1), ("0.000", 0.0, -3),
+        ("3.50160672098974190547E+00", 3.501606720989742, -20),
     ],
 )  # fmt: skip
 def test_spellings(text: str, value: float, unit: int) -> None:
@@ -58,7 +59,7 @@ def test_spellings(text: str, value: float, unit: int) -> None:
     assert text_to_float(text.encode()) == value
 
 
-@pytest.mark.parametrize("text", ["", ".", "-", "e5", "1e", "1.2.3", "nan", "inf", "1x", "1e5x", "--1", "1.5DD3", "***"])
+@pytest.mark.parametrize("text", ["", ".", "-", "e5", "1e", "1.2.3", "nan", "inf", "1x", "1e5x", "--1", "1.DD3", "**"])
 def test_no_numbers(text: str) -> None:
     assert parse(text)[1] == NOT_A_NUMBER
 
