@@ -41,7 +41,7 @@ def read(path: Path, options: Mapping[str, str], progress: Progress | None = Non
     n = electrons.n_up + electrons.n_down
     numbers, effective, charge_notes = charges(molden, n, _core_option(options.get("core-electrons")))
     notes += charge_notes
-    labels = tuple(_unique([atom.label for atom in molden.atoms]))
+    labels = tuple(atom.label for atom in molden.atoms)
     potentials, effective = _potentials(options.get("core-potential"), labels, numbers, effective, notes)
     if progress:
         progress("trying readings", 0.4)
@@ -73,13 +73,6 @@ def read(path: Path, options: Mapping[str, str], progress: Progress | None = Non
     if expansion is None:
         notes.append("the occupations are not those of one determinant: no expansion is written")
     return Reading(replace(found, expansion=expansion), tuple(notes))
-
-
-def _unique(labels: list[str]) -> list[str]:
-    """Labels made different by a running number where the file repeats them."""
-    if len(set(labels)) == len(labels):
-        return labels
-    return [f"{label}{i + 1}" for i, label in enumerate(labels)]
 
 
 def _core_option(text: str | None) -> dict[str, int]:

@@ -157,13 +157,13 @@ def _orbitals(s: OrbitalSet, matrix: NDArray[np.float64], spin: str, electrons: 
     """One set of orbitals; `matrix` (M, F) in the order and values of the file."""
     form = "".join(f"{k + 1} %.17e\n" for k in range(matrix.shape[1]))
     for p, row in enumerate(matrix.tolist()):
-        irrep = "".join(s.irreps[p].split()) if s.irreps is not None else "A"
+        irrep = f" Sym= {''.join(s.irreps[p].split())}\n" if s.irreps is not None else ""
         energy = 0.0 if s.energies is None else float(s.energies[p])
         if s.occupations is not None:
             occupation = float(s.occupations[p])
         else:
             occupation = float(electrons is not None and p < electrons)
-        yield f" Sym= {irrep}\n Ene= {energy:.17e}\n Spin= {spin}\n Occup= {occupation:.17g}\n" + form % tuple(row)
+        yield f"{irrep} Ene= {energy:.17e}\n Spin= {spin}\n Occup= {occupation:.17g}\n" + form % tuple(row)
 
 
 def _text(wavefunction: Wavefunction, basis: Basis) -> Iterator[str]:
