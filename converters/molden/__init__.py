@@ -12,8 +12,9 @@ from qwfx.model import Wavefunction
 __all__ = ["MoldenConverter", "converter"]
 
 READING_NAMES = (
-    "as-printed", "as-printed-shared", "normalised", "normalised-shared", "with-factors", "with-factors-shared",
-    "with-factors-normalised", "with-factors-normalised-shared",
+    "as-printed", "contraction-normalised", "as-printed-shared", "contraction-normalised-shared",
+    "primitive-factors-included", "primitive-factors-normalised", "primitive-factors-included-shared",
+    "primitive-factors-normalised-shared",
 )  # fmt: skip
 
 
@@ -26,6 +27,8 @@ class MoldenConverter:
     options = (
         Option("reading", "how the file normalises its functions; by default the reading under which the orbitals are "
                "orthonormal", READING_NAMES),
+        Option("signs", "signs of spherical functions of l >= 3 with m = 3, -3, 4, -4; by default those with which "
+               "the orbitals are orthonormal", ("standard", "reversed-3-4")),
         Option("electrons", "numbers of up and down electrons, such as 5,4; by default from the occupations"),
         Option("core-electrons", "electrons that core potentials replace, such as I=46; by default from the charges "
                "and the electron count"),

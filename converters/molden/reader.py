@@ -15,14 +15,14 @@ from numpy.typing import NDArray
 from qwfx._version import __version__
 from qwfx.converters.determinant import single_determinant
 from qwfx.converters.molden.electrons import OrbitalGroup, charges, count_electrons, group_orbitals
-from qwfx.converters.molden.readings import Choice, choose, file_order
+from qwfx.converters.molden.functions import in_our_order
+from qwfx.converters.molden.readings import Choice, choose
 from qwfx.converters.molden.sections import Molden, parse
-from qwfx.converters.molden.slater import slater_basis
 from qwfx.converters.molden.witness import slater_orbitals, witness_orbitals
 from qwfx.converters.plugin import Progress, Reading
 from qwfx.converters.witness import witness_points
 from qwfx.errors import ConversionError
-from qwfx.model import Basis, OrbitalSet, Potentials, Provenance, Spin, System, Wavefunction, Witness
+from qwfx.model import OrbitalSet, Potentials, Provenance, Spin, System, Wavefunction, Witness
 
 __all__ = ["read"]
 
@@ -45,9 +45,8 @@ def read(path: Path, options: Mapping[str, str], progress: Progress | None = Non
     potentials, effective = _potentials(options.get("core-potential"), labels, numbers, effective, notes)
     if progress:
         progress("trying readings", 0.4)
-    basis, sets, choice = _functions(molden, positions, groups, options.get("reading"))
-    if choice is not None:
-        notes.append(choice.note)
+    sets, choice = _functions(molden, positions, groups, options)
+    notes.append(choice.note)
     if molden.skipped:
         notes.append("sections that were not used: " + ", ".join(molden.skipped))
     orbitals = {g.name: _orbital_set(molden, g, matrix) for g, matrix in zip(groups, sets, strict=True)}
@@ -64,7 +63,7 @@ def read(path: Path, options: Mapping[str, str], progress: Progress | None = Non
     found = Wavefunction(
         System(electrons.n_up, electrons.n_down, labels, numbers, effective, positions),
         potentials=potentials,
-        basis=basis,
+        basis=choice.basis,
         orbitals=orbitals,
         witness=witness,
         provenance=Provenance((step,)),
@@ -134,22 +133,15 @@ def _potentials(
 
 
 def _functions(
-    molden: Molden, positions: NDArray[np.float64], groups: list[OrbitalGroup], named: str | None
-) -> tuple[Basis, list[NDArray[np.float64]], Choice | None]:
-    """The basis, and the orbitals of each group over it."""
-    written = molden.orbitals.coefficients
-    if molden.slater:
-        basis, place = slater_basis(molden)
-        sets = []
-        for group in groups:
-            matrix = np.zeros((len(group.rows), basis.n_functions))
-            matrix[:, place] = written[group.rows]
-            sets.append(matrix)
-        return basis, sets, None
-    order = file_order(molden)
-    sets = [written[group.rows][:, order] for group in groups]
-    choice = choose(molden, positions, sets, named)
-    return choice.basis, [matrix * choice.factors for matrix in sets], choice
+    molden: Molden, positions: NDArray[np.float64], groups: list[OrbitalGroup], options: Mapping[str, str]
+) -> tuple[list[NDArray[np.float64]], Choice]:
+    """The orbitals of each group over the basis of the chosen reading."""
+    sets = [in_our_order(molden, molden.orbitals.coefficients[group.rows]) for group in groups]
+    choice = choose(molden, positions, sets, options.get("reading"), options.get("signs"))
+    if not np.all(choice.factors == 1.0):
+        for matrix in sets:
+            matrix *= choice.factors
+    return sets, choice
 
 
 def _orbital_set(molden: Molden, group: OrbitalGroup, matrix: NDArray[np.float64]) -> OrbitalSet:
@@ -170,11 +162,12 @@ def _orbital_set(molden: Molden, group: OrbitalGroup, matrix: NDArray[np.float64
 
 
 def _witness(
-    molden: Molden, positions: NDArray[np.float64], groups: list[OrbitalGroup], choice: Choice | None
+    molden: Molden, positions: NDArray[np.float64], groups: list[OrbitalGroup], choice: Choice
 ) -> Witness:
     points = witness_points(positions)
-    if choice is None:
-        told = {group.name: slater_orbitals(molden, group.rows, points) for group in groups}
+    if molden.slater:
+        normalised = choice.reading.normalised
+        told = {group.name: slater_orbitals(molden, normalised, group.rows, points) for group in groups}
         # These formulas are qwfx's own, if of another room than the evaluator's.
         return Witness("qwfx.converters.molden.witness", __version__, False, points, told)
     import pyscf

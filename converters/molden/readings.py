@@ -2,27 +2,23 @@
 
 The description of the format says that coefficients refer to normalised primitives, and no more. Programs differ in
 whether the contraction is then normalised, whether Cartesian components share one factor, and whether the printed
-coefficients contain the primitives' factors already. A wrong reading spoils orthonormality by 1e-3 to 100; the printed
-digits by their own size.
+coefficients contain the primitives' factors already. A few reverse the signs of spherical functions with m = 3, 4 (from
+memory). A wrong reading spoils orthonormality by 1e-3 to 100; the printed digits by their own size.
 """
 
 from __future__ import annotations
 
-from dataclasses import dataclass
-from math import prod
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
-from qwfx.converters.molden.order import shell_order
+from qwfx.converters.molden.functions import Trial
 from qwfx.converters.molden.sections import Molden
 from qwfx.errors import ConversionError
-from qwfx.kernels import overlap
 from qwfx.model import Basis
-from qwfx.reference.harmonics import monomial_powers
-from qwfx.reference.norms import gaussian_norm, monomial_norm
 
-__all__ = ["READINGS", "Choice", "Reading", "choose", "file_order"]
+__all__ = ["READINGS", "SIGNS", "Choice", "Reading", "choose"]
 
 
 @dataclass(frozen=True)
@@ -37,31 +33,40 @@ class Reading:
     shared: bool
     """Cartesian components share the factor of xx..x; otherwise each has unit norm."""
     meaning: str
+    reversed_signs: bool = False
+    """Spherical functions of l >= 3 with m = 3, -3, 4, -4 have the opposite sign."""
 
+
+_SHARED = ", Cartesian components sharing the factor of xx..x"
+_PRINTED = "contractions as printed over normalised primitives"
+_FACTORS = "coefficients that contain the factors of the primitives"
 
 READINGS = {
     r.name: r
     for r in (
-        Reading("as-printed", False, False, False, "contractions as printed over normalised primitives"),
-        Reading("as-printed-shared", False, False, True,
-                "contractions as printed over normalised primitives, Cartesian components sharing the factor of xx..x"),
-        Reading("normalised", False, True, False, "printed contractions over normalised primitives, then normalised"),
-        Reading("normalised-shared", False, True, True,
-                "the same, Cartesian components sharing the factor of xx..x"),
-        Reading("with-factors", True, False, False, "coefficients that contain the factors of the primitives"),
-        Reading("with-factors-shared", True, False, True,
-                "coefficients that contain the factors of the primitives, Cartesian components sharing one"),
-        Reading("with-factors-normalised", True, True, False,
-                "coefficients that contain the factors of the primitives, contractions then normalised"),
-        Reading("with-factors-normalised-shared", True, True, True,
-                "the same, Cartesian components sharing the factor of xx..x"),
+        Reading("as-printed", False, False, False, _PRINTED),
+        Reading("contraction-normalised", False, True, False, _PRINTED + ", then normalised"),
+        Reading("as-printed-shared", False, False, True, _PRINTED + _SHARED),
+        Reading("contraction-normalised-shared", False, True, True, _PRINTED + ", then normalised" + _SHARED),
+        Reading("primitive-factors-included", True, False, False, _FACTORS),
+        Reading("primitive-factors-normalised", True, True, False, _FACTORS + ", contractions then normalised"),
+        Reading("primitive-factors-included-shared", True, False, True, _FACTORS + _SHARED),
+        Reading("primitive-factors-normalised-shared", True, True, True,
+                _FACTORS + ", contractions then normalised" + _SHARED),
     )
 }  # fmt: skip
+"""In order of preference, where several give the same functions."""
 
-SAMPLE = 48
-"""Orbitals that every reading is tried on; the one that is chosen is tried on all."""
+SIGNS = ("standard", "reversed-3-4")
+
+SAMPLE = 16
+"""Orbitals that every reading is tried on; those that fit are tried on all."""
 CLEARLY = 0.02
-"""A reading is chosen over others that fit within the printed digits only if it fits this much better."""
+"""A reading that fits this much better than another is no rival of it, though both fit within the printed digits."""
+FLOOR = 1e-6
+"""Deviation that is always allowed: thresholds of the programs, and the digits of their length of an angstrom."""
+SAFETY = 4.0
+LARGEST_TOLERANCE = 0.02
 
 
 @dataclass(frozen=True)
@@ -71,107 +76,38 @@ class Choice:
     reading: Reading
     basis: Basis
     factors: NDArray[np.float64]
-    """(F) factor of each function, in our order: the orbital coefficients are divided into file order by it."""
+    """(F) in our order: the orbital coefficients of the file are multiplied with it."""
     residual: float
     """Largest deviation of C S C+ from 1, over all orbitals of one spin."""
     note: str
 
 
-def file_order(molden: Molden) -> NDArray[np.int64]:
-    """``order[k]``: place in the file's list of functions of our function k."""
-    parts, start = [], 0
-    for shell in molden.shells:
-        own = shell_order(shell.l, _monomial(molden, shell.l))
-        parts.append(start + own)
-        start += len(own)
-    return np.concatenate(parts)
+class _Candidate:
+    """A reading with the factors of its functions; its residuals are computed once, on the sample or on all."""
 
+    def __init__(self, reading: Reading, trial: Trial, sets: list[NDArray[np.float64]]) -> None:
+        self.reading, self.trial, self.sets = reading, trial, sets
+        self.scale = trial.function_scale(reading.normalised, reading.shared, reading.reversed_signs)
+        self.residual = np.inf
 
-def _monomial(molden: Molden, l: int) -> bool:
-    """s and p functions are the same either way; they go with the rest of the file."""
-    if l < 2:
-        return all(molden.cartesian.get(shell.l, True) for shell in molden.shells if shell.l > 1) and any(
-            shell.l > 1 for shell in molden.shells
-        )
-    return molden.cartesian[l]
-
-
-def _basis(molden: Molden, factors_included: bool) -> Basis:
-    """The shells with the primitives' factors, as printed otherwise."""
-    coefficients = []
-    for shell in molden.shells:
-        if factors_included:
-            # The factor of the primitive x^l is inside; a solid function has another angular constant.
-            monomial = _monomial(molden, shell.l)
-            angular = 1.0 if monomial else float(gaussian_norm(shell.l, 1.0) / monomial_norm(shell.l, 0, 0, 1.0))
-            coefficients.append(shell.coefficients * angular)
-        elif _monomial(molden, shell.l):
-            norms = np.array([monomial_norm(shell.l, 0, 0, float(a)) for a in shell.exponents])
-            coefficients.append(shell.coefficients * norms)
-        else:
-            norms = np.array([gaussian_norm(shell.l, float(a)) for a in shell.exponents])
-            coefficients.append(shell.coefficients * norms)
-    sizes = [len(shell.exponents) for shell in molden.shells]
-    return Basis(
-        "gaussian",
-        np.array([shell.atom for shell in molden.shells], dtype=np.int32),
-        np.array([shell.l for shell in molden.shells], dtype=np.int32),
-        np.array([_monomial(molden, shell.l) for shell in molden.shells], dtype=np.int8),
-        np.concatenate([[0], np.cumsum(sizes)]).astype(np.int64),
-        np.concatenate([shell.exponents for shell in molden.shells]),
-        np.concatenate(coefficients),
-    )
-
-
-def _component_factors(basis: Basis) -> NDArray[np.float64]:
-    """(F) what makes each Cartesian component as long as xx..x: sqrt((2l-1)!! / ((2i-1)!! (2j-1)!! (2k-1)!!))."""
-
-    def odd(n: int) -> int:
-        return prod(range(2 * n - 1, 0, -2))
-
-    parts = []
-    for l, monomial in zip(basis.shell_l.tolist(), basis.shell_monomial.tolist(), strict=True):
-        powers = monomial_powers(l) if monomial else ()
-        own = [np.sqrt(odd(l) / (odd(i) * odd(j) * odd(k))) for i, j, k in powers]
-        parts.append(np.array(own) if monomial else np.ones(2 * l + 1))
-    return np.concatenate(parts)
-
-
-def _scaled(basis: Basis, per_shell: NDArray[np.float64]) -> Basis:
-    from dataclasses import replace
-
-    lengths = np.diff(basis.primitive_start)
-    return replace(basis, coefficients=basis.coefficients * np.repeat(per_shell, lengths))
-
-
-class _Trial:
-    """One way of forming primitives, with its overlap matrix; the readings scale rows and columns of it."""
-
-    def __init__(self, molden: Molden, positions: NDArray[np.float64], factors_included: bool) -> None:
-        self.basis = _basis(molden, factors_included)
-        self.overlap = overlap(self.basis, positions)
-        first = self.basis.function_start[:-1]
-        diagonal = np.diag(self.overlap)[first]
-        # The first function of a monomial shell is x^l; all functions of a solid shell have the same norm.
-        self.shell_scale = 1.0 / np.sqrt(np.where(diagonal > 0, diagonal, 1.0))
-        self.components = _component_factors(self.basis)
-
-    def function_scale(self, reading: Reading) -> NDArray[np.float64]:
-        """(F) factor of every function under a reading, relative to the primitives as they are in `basis`."""
-        per_shell = self.shell_scale if reading.normalised else np.ones_like(self.shell_scale)
-        scale = np.repeat(per_shell, self.basis.shell_size)
-        return scale if reading.shared else scale * self.components
-
-
-def _residual(matrix: NDArray[np.float64], s: NDArray[np.float64], rows: NDArray[np.int64]) -> float:
-    """Largest deviation of some rows of C S C+ from 1."""
-    gram = (matrix[rows] @ s) @ matrix.T
-    gram[np.arange(len(rows)), rows] -= 1.0
-    return float(np.abs(gram).max(initial=0.0))
+    def measure(self, rows: list[NDArray[np.int64]]) -> float:
+        """Largest deviation of some rows of C S C+ from 1, S over the functions of this reading."""
+        self.residual = 0.0
+        for matrix, own in zip(self.sets, rows, strict=True):
+            for part in np.array_split(own, max(1, len(own) // 256)):
+                gram = ((matrix[part] * self.scale) @ self.trial.overlap * self.scale) @ matrix.T
+                gram[np.arange(len(part)), part] -= 1.0
+                deviation = float(np.abs(gram).max(initial=0.0))
+                self.residual = max(self.residual, deviation if np.isfinite(deviation) else np.inf)
+        return self.residual
 
 
 def choose(
-    molden: Molden, positions: NDArray[np.float64], sets: list[NDArray[np.float64]], named: str | None
+    molden: Molden,
+    positions: NDArray[np.float64],
+    sets: list[NDArray[np.float64]],
+    named: str | None = None,
+    signs: str | None = None,
 ) -> Choice:
     """Choose the reading under which the orbitals are orthonormal.
 
@@ -179,73 +115,130 @@ def choose(
     ----------
     positions : (A, 3) bohr.
     sets : orbitals of one spin each, (M, F) in the file's values and our order of functions.
-    named : a reading that the user named, or None.
+    named, signs : a reading and signs (`SIGNS`) that the user named, or None.
 
     Raises ConversionError if none fits, or several that are not the same to the printed digits.
     """
-    trials = {False: _Trial(molden, positions, False)}
-    tolerance = _tolerance(molden)
+    trials: dict[bool, Trial] = {}
     rng = np.random.default_rng(0)
     samples = [np.sort(rng.permutation(len(c))[:SAMPLE]) for c in sets]
-    residuals: dict[str, float] = {}
-    scales: dict[str, NDArray[np.float64]] = {}
     wanted = [READINGS[named]] if named else list(READINGS.values())
-    for reading in wanted:
-        included = reading.factors_included
-        if included not in trials:
-            if not named and min(residuals.values()) <= tolerance * CLEARLY:
-                continue  # a reading over normalised primitives fits far within the digits already
-            trials[included] = _Trial(molden, positions, included)
-        scale = trials[included].function_scale(reading)
-        scales[reading.name] = scale
-        residuals[reading.name] = max(
-            _residual(c * scale, trials[included].overlap, rows) for c, rows in zip(sets, samples, strict=True)
+    if molden.slater:
+        wanted = [r for r in wanted if not r.factors_included and not r.shared] or wanted
+    tried: list[_Candidate] = []
+    with np.errstate(all="ignore"):
+        for reversed_signs in [signs == SIGNS[1]] if signs else [False, True]:
+            if reversed_signs and not any(s.l > 2 and not molden.cartesian[s.l] for s in molden.shells):
+                continue
+            for reading in wanted:
+                if reading.factors_included not in trials:
+                    trials[reading.factors_included] = Trial(molden, positions, reading.factors_included)
+                trial = trials[reading.factors_included]
+                candidate = _Candidate(replace(reading, reversed_signs=reversed_signs), trial, sets)
+                twin = next((c for c in tried if c.trial is trial and np.array_equal(c.scale, candidate.scale)), None)
+                if twin is None or named:
+                    candidate.measure(samples)
+                    tried.append(candidate)
+            tolerance = _tolerance(molden, tried[0], samples) if tried else FLOOR
+            if any(c.residual <= tolerance for c in tried):
+                break  # unusual signs are tried only where usual ones do not fit
+        every = [np.arange(len(c)) for c in sets]
+        for candidate in tried:
+            if candidate.residual <= tolerance or named:
+                candidate.measure(every)
+        return _decide(molden, tried, tolerance, bool(named))
+
+
+def _decide(molden: Molden, tried: list[_Candidate], tolerance: float, named: bool) -> Choice:
+    if not tried:
+        raise ConversionError(
+            "the file has no spherical functions beyond d, whose signs could be reversed",
+            where="--set signs",
+            expected="such functions",
+            remedy="leave the option out",
         )
-    least = min(residuals.values())
-    # Readings that fit equally well are the same functions to the printed digits (checked below): the first will do.
-    best = next(READINGS[name] for name, size in residuals.items() if least >= CLEARLY * size or size == least)
+    least = min(c.residual for c in tried)
+    best = next(c for c in tried if c.residual <= 10.0 * least or c.residual == least)
     if not named:
-        _check_choice(molden, best, residuals, scales, tolerance)
-    trial, scale = trials[best.factors_included], scales[best.name]
-    s = trial.overlap * scale[:, None] * scale
-    residual = max(_residual(c, s, np.arange(len(c))) for c in sets)
-    per_shell = trial.shell_scale if best.normalised else np.ones_like(trial.shell_scale)
-    components = np.ones_like(scale) if best.shared else trial.components
-    note = f"reading {best.name} ({best.meaning}): orbitals orthonormal to {residual:.1e}"
+        _check(molden, best, tried, tolerance)
+    reading = best.reading
+    basis, factors = best.trial.final(reading.normalised, reading.shared, reading.reversed_signs)
+    signs = ", signs of m = 3, 4 reversed" if reading.reversed_signs else ""
+    note = f"reading {reading.name} ({reading.meaning}{signs}): orbitals orthonormal to {best.residual:.1e}"
+    note += f", where the printed digits allow {tolerance:.0e}"
     if named:
-        note += ", chosen by the user"
-        if residual > tolerance:
-            note += f"; the printed digits would allow {tolerance:.0e}, so this reading does not fit"
-    return Choice(best, _scaled(trial.basis, per_shell), components, residual, note)
+        note += "; chosen by the user" + ("" if best.residual <= tolerance else ", though it does not fit")
+    return Choice(reading, basis, factors, best.residual, note)
 
 
-def _tolerance(molden: Molden) -> float:
-    """What the rounding of the printed digits explains, with room for coordinates of as many digits."""
-    return max(200.0 * 10.0 ** -molden.orbitals.decimals, 1e-6)
+def _tolerance(molden: Molden, candidate: _Candidate, samples: list[NDArray[np.int64]]) -> float:
+    """What the rounding of the printed digits explains of C S C+ - 1.
+
+    With every orbital coefficient wrong by at most e, an element is wrong by at most ``2 e sum_m |(S C+)_mq|``; with
+    every contraction wrong by the fraction f, by at most ``2 f |C_p| |S C+_q|`` (Cauchy and Schwarz). Both are to be
+    had from any reading that is near enough, so the first will do.
+    """
+    error = 0.5 * 10.0**-molden.orbitals.decimals
+    fraction = 0.5 * 10.0 ** (1 - _contraction_digits(molden))
+    size = 0.0
+    for matrix, rows in zip(candidate.sets, samples, strict=True):
+        own = matrix[rows] * candidate.scale
+        image = own @ candidate.trial.overlap
+        lengths = [np.linalg.norm(x, axis=1).max(initial=0.0) for x in (own, image)]
+        size = max(size, 2 * error * float(np.abs(image).sum(axis=1).max(initial=0.0)) * max(1.0, np.abs(own).max()))
+        size = max(size, 2 * fraction * float(lengths[0] * lengths[1]))
+    size = size if np.isfinite(size) else 0.0
+    return min(FLOOR + SAFETY * size, LARGEST_TOLERANCE)
 
 
-def _check_choice(
-    molden: Molden, best: Reading, residuals: dict[str, float], scales: dict[str, NDArray[np.float64]], tolerance: float
-) -> None:
-    listed = ", ".join(f"{name} {size:.1e}" for name, size in sorted(residuals.items(), key=lambda item: item[1]))
-    if not residuals[best.name] <= tolerance:
+def _contraction_digits(molden: Molden) -> int:
+    """Significant digits of the contraction coefficients, as many as the longest of them needs."""
+    most = 0
+    for shell in molden.shells:
+        for value in shell.coefficients.tolist() if len(shell.coefficients) > 1 else ():
+            digits = repr(abs(value)).split("e")[0].replace(".", "").strip("0")
+            most = max(most, len(digits))
+    return most or 16
+
+
+def _distance(one: _Candidate, other: _Candidate) -> float:
+    """Largest change of an orbital, as a fraction of its functions' size, if one reading replaces another."""
+    lengths = np.diff(one.trial.basis.primitive_start)
+    weight = np.max([np.abs(c).max(axis=0, initial=0.0) for c in one.sets], axis=0)
+    weight = weight * np.abs(one.scale) * np.sqrt(np.abs(np.diag(one.trial.overlap)))
+    first = one.trial.basis.primitive_start[:-1].astype(np.intp)
+    a, b = one.trial.basis.coefficients, other.trial.basis.coefficients
+    worst = 0.0
+    for component in range(int(one.trial.basis.shell_size.max())):
+        # All shells at once, each with its function of this number where it has so many.
+        there = one.trial.basis.shell_size > component
+        function = np.where(there, one.trial.basis.function_start[:-1] + component, 0)
+        ours, theirs = (
+            c.scale[function].repeat(lengths) * values for c, values in ((one, a), (other, b))
+        )
+        change = np.maximum.reduceat(np.abs(ours - theirs), first) / np.maximum.reduceat(np.abs(ours), first)
+        worst = max(worst, float(np.where(there, change * weight[function], 0.0).max()))
+    return worst
+
+
+def _check(molden: Molden, best: _Candidate, tried: list[_Candidate], tolerance: float) -> None:
+    """Raise ConversionError where no reading fits, or another one too and gives other functions."""
+    listed = ", ".join(
+        f"{c.reading.name}{' with signs reversed' if c.reading.reversed_signs else ''} {c.residual:.1e}"
+        for c in sorted(tried, key=lambda c: c.residual)
+    )
+    if not best.residual <= tolerance:
         raise ConversionError(
             f"the orbitals are orthonormal under no reading (deviations: {listed})",
             where=molden.name,
-            expected=f"a deviation below {tolerance:.0e}, which the {molden.orbitals.decimals} printed decimals allow",
-            remedy="check units, flags and completeness of the file, or decide with --reading NAME",
+            expected=f"a deviation below {tolerance:.0e}, which the printed digits allow",
+            remedy="check the unit, the flags and the completeness of the file, or decide with --reading NAME",
         )
-    for name, size in residuals.items():
-        other = READINGS[name]
-        if name == best.name or size > tolerance or residuals[best.name] <= CLEARLY * size:
-            continue
-        same = other.factors_included == best.factors_included and np.allclose(
-            scales[name], scales[best.name], rtol=tolerance, atol=0.0
+    rivals = [c for c in tried if c is not best and c.residual <= tolerance and best.residual > CLEARLY * c.residual]
+    if any(_distance(best, c) > tolerance for c in rivals):
+        raise ConversionError(
+            f"more than one reading fits (deviations: {listed})",
+            where=molden.name,
+            expected="one that fits clearly better than the others",
+            remedy="decide with --reading NAME",
         )
-        if not same:
-            raise ConversionError(
-                f"more than one reading fits (deviations: {listed})",
-                where=molden.name,
-                expected="one that fits clearly better than the others",
-                remedy="decide with --reading NAME",
-            )

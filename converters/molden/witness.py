@@ -142,12 +142,25 @@ def _matrix(
                 scale = 1.0 if reading.shared or not cartesian or l < 2 else norms[at] / norms[at + f]
                 # PySCF's Cartesian functions beyond p lack the angular constant of x^l.
                 constant = np.sqrt((2 * l + 1) / (4 * np.pi)) if cartesian and l > 1 else 1.0
+                if reading.reversed_signs and l > 2 and not cartesian and abs(label) in (3, 4):
+                    constant = -constant
                 matrix[at + f] = column * scale * constant
         at += len(theirs)
     return matrix
 
 
-def slater_orbitals(molden: Molden, rows: NDArray[np.int64], points: NDArray[np.float64]) -> WitnessOrbitals:
+def _slater_norm(powers: tuple[int, int, int], n: int, exponent: float) -> float:
+    """Factor of unit norm, by ``int x^2i y^2j z^2k dOmega = 2 G(i+1/2) G(j+1/2) G(k+1/2) / G(i+j+k+3/2)``."""
+    from scipy.special import gamma
+
+    degree = 2 * (sum(powers) + n) + 3
+    angular = 2 * np.prod(gamma(np.array(powers) + 0.5)) / gamma(sum(powers) + 1.5)
+    return float((angular * gamma(degree) / (2 * exponent) ** degree) ** -0.5)
+
+
+def slater_orbitals(
+    molden: Molden, normalised: bool, rows: NDArray[np.int64], points: NDArray[np.float64]
+) -> WitnessOrbitals:
     """Orbitals over ``norm x^i y^j z^k r^n exp(-a r)`` at `points`, line by line as the file has them.
 
     With u = x^i y^j z^k r^n exp(-a r): ``d/dx ln u = i/x + (n/r - a) x/r`` and
@@ -160,7 +173,8 @@ def slater_orbitals(molden: Molden, rows: NDArray[np.int64], points: NDArray[np.
         x = points - molden.atoms[function.atom].position
         r = np.sqrt((x**2).sum(axis=1))
         powers = np.array(function.powers)
-        u = function.norm * np.prod(x**powers, axis=1) * r**function.n * np.exp(-function.exponent * r)
+        norm = _slater_norm(function.powers, function.n, function.exponent) if normalised else function.norm
+        u = norm * np.prod(x**powers, axis=1) * r**function.n * np.exp(-function.exponent * r)
         slope = powers / x + ((function.n / r - function.exponent) / r)[:, None] * x
         curvature = -(powers / x**2).sum(axis=1) + function.n / r**2 - 2 * function.exponent / r
         values[f, 0] = u
