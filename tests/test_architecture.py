@@ -22,6 +22,7 @@ FLOORS = [
     {"compare"},
     {"demo"},
     {"cli"},
+    {"__main__"},
 ]
 FLOOR_OF = {room: level for level, rooms in enumerate(FLOORS) for room in rooms}
 PEERS_ALLOWED = {
