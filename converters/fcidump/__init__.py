@@ -6,7 +6,6 @@ come into use since.
 
 from __future__ import annotations
 
-import re
 from collections.abc import Mapping
 from pathlib import Path
 
@@ -31,8 +30,10 @@ class FcidumpConverter:
     )  # fmt: skip
 
     def recognises(self, path: Path, head: bytes) -> bool:
-        """Whether a file begins with the namelist FCI."""
-        return re.match(rb"\s*[&$]FCI\b", head, re.IGNORECASE) is not None
+        """Whether a file begins with the namelist FCI, comments and blank lines aside."""
+        from qwfx.converters.fcidump.header import OPENING
+
+        return OPENING.match(head) is not None
 
     def read(self, path: Path, options: Mapping[str, str], progress: Progress | None = None) -> Reading:
         """Read `path`; see `qwfx.converters.fcidump.reader`."""

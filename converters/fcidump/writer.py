@@ -11,6 +11,7 @@ from typing import IO, Any
 import numpy as np
 from numpy.typing import NDArray
 
+from qwfx.converters.fcidump.lines import format_records
 from qwfx.converters.plugin import Progress, Writing
 from qwfx.errors import ConversionError, FileError, UnsupportedError
 from qwfx.kernels.packing import indices
@@ -40,8 +41,9 @@ def _threshold(options: Mapping[str, str]) -> float:
 
 
 class _Writer:
-    def __init__(self, stream: IO[str], hamiltonian: Hamiltonian, threshold: float) -> None:
+    def __init__(self, stream: IO[bytes], hamiltonian: Hamiltonian, threshold: float) -> None:
         self.stream, self.h, self.threshold = stream, hamiltonian, threshold
+        self.dtype = np.complex128 if hamiltonian.complex_orbitals else np.float64
         self.n_dropped, self.largest_dropped = 0, 0.0
 
     def lines(self, index: NDArray[np.int64], value: NDArray[Any], always: NDArray[np.bool_] | None = None) -> None:
@@ -66,14 +68,17 @@ class _Writer:
             index, value = index[keep], value[keep]
         if not len(value):
             return
-        if self.h.complex_orbitals:
-            form = "(% .16E,% .16E) %4d %4d %4d %4d\n"
-            columns = [value.real.tolist(), value.imag.tolist(), *index.T.tolist()]
-        else:
-            form = "% .16E %4d %4d %4d %4d\n"
-            columns = [value.tolist(), *index.T.tolist()]
-        flat = tuple(x for row in zip(*columns, strict=True) for x in row)
-        self.stream.write(form * len(value) % flat)
+        if index.shape[1] < 4:
+            index = np.pad(index, ((0, 0), (0, 4 - index.shape[1])))
+        self.stream.write(format_records(index, value.astype(self.dtype, copy=False)))
+
+    def record(self, value: float, index: int = 0) -> None:
+        """An energy: of an orbital, of the core, or the zero that closes a block."""
+        if not np.isfinite(value):
+            raise ConversionError(
+                f"an energy is {value}", where="Hamiltonian", expected="finite numbers", remedy="mend the source"
+            )
+        self.stream.write(format_records(np.array([[index, 0, 0, 0]]), np.array([value], dtype=self.dtype)))
 
     def two_body(self, key: str, table: TwoBody, relabel: Callable[[NDArray[np.int64]], NDArray[np.int64]]) -> None:
         """All integrals of one pair of spins, in the order of the packed vector."""
@@ -98,24 +103,13 @@ class _Writer:
     def one_body(self, matrix: Any, relabel: Callable[[NDArray[np.int64]], NDArray[np.int64]]) -> None:
         p, q = np.tril_indices(self.h.n_orbitals)
         index = np.stack([p, q], axis=1)
-        numbered = np.concatenate([relabel(index), np.zeros_like(index)], axis=1)
         # The diagonal tells a reader how many orbitals there are, and that the file is whole.
-        self.lines(numbered, np.asarray(matrix)[p, q], always=p == q)
+        self.lines(relabel(index), np.asarray(matrix)[p, q], always=p == q)
 
     def energies(self, energies: Any, relabel: Callable[[NDArray[np.int64]], NDArray[np.int64]]) -> None:
         index = relabel(np.arange(self.h.n_orbitals)[:, None])[:, 0]
         for i, e in zip(index.tolist(), np.asarray(energies).tolist(), strict=True):
-            self.stream.write(self.number(e) + f" {i:4d}    0    0    0\n")
-
-    def number(self, value: float) -> str:
-        if not np.isfinite(value):
-            raise ConversionError(
-                f"an energy is {value}", where="Hamiltonian", expected="finite numbers", remedy="mend the source"
-            )
-        return f"({value: .16E},{0.0: .16E})" if self.h.complex_orbitals else f"{value: .16E}"
-
-    def core(self) -> None:
-        self.stream.write(self.number(self.h.core_energy) + "    0    0    0    0\n")
+            self.record(e, i)
 
 
 def _header(wavefunction: Wavefunction, interleaved: bool) -> Iterator[str]:
@@ -149,7 +143,7 @@ def _records(writer: _Writer, h: Hamiltonian, layout: str) -> None:
         writer.one_body(h.one_body["both"], _spatial)
         if "both" in h.orbital_energies:
             writer.energies(h.orbital_energies["both"], _spatial)
-        writer.core()
+        writer.record(h.core_energy)
         return
     pairs = {"up_up": (0, 0, 0, 0), "down_down": (1, 1, 1, 1), "up_down": (0, 0, 1, 1)}
     spins = {"up": (0,) * 4, "down": (1,) * 4}
@@ -157,18 +151,18 @@ def _records(writer: _Writer, h: Hamiltonian, layout: str) -> None:
     for pair, columns in pairs.items():
         writer.two_body(pair, h.two_body[pair], _spatial if blocks else _spin(columns))
         if blocks:
-            writer.stream.write(writer.number(0.0) + "    0    0    0    0\n")
+            writer.record(0.0)
     for spin, columns in spins.items():
         writer.one_body(h.one_body[spin], _spatial if blocks else _spin(columns))
         if blocks:
             if spin in h.orbital_energies:
                 writer.energies(h.orbital_energies[spin], _spatial)
-            writer.stream.write(writer.number(0.0) + "    0    0    0    0\n")
+            writer.record(0.0)
     if not blocks:
         for spin, columns in spins.items():
             if spin in h.orbital_energies:
                 writer.energies(h.orbital_energies[spin], _spin(columns))
-    writer.core()
+    writer.record(h.core_energy)
 
 
 def write(
@@ -190,10 +184,10 @@ def write(
     except OSError as error:
         raise _cannot(path, error) from None
     try:
-        with os.fdopen(handle, "w", encoding="ascii", newline="\n") as stream:
+        with os.fdopen(handle, "wb") as stream:
             if progress:
                 progress("writing integrals", 0.0)
-            stream.writelines(_header(wavefunction, h.spin_resolved and layout == "interleaved"))
+            stream.write("".join(_header(wavefunction, h.spin_resolved and layout == "interleaved")).encode())
             writer = _Writer(stream, h, threshold)
             _records(writer, h, layout)
             stream.flush()
