@@ -1,28 +1,22 @@
-"""Electrons and charges: what occupations, atom lines and core electrons of a Molden file say together."""
+"""Orbitals by spin, and numbers of electrons: what the occupations of a Molden file say, and where they do not."""
 
 from __future__ import annotations
 
 import re
-from collections.abc import Mapping
-from dataclasses import dataclass
-from itertools import product
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
 from qwfx.converters.molden.sections import Molden
-from qwfx.elements import SYMBOLS
 from qwfx.errors import ConversionError
 
-__all__ = ["Electrons", "OrbitalGroup", "charges", "count_electrons", "group_orbitals"]
+__all__ = ["Electrons", "OrbitalGroup", "count_electrons", "group_orbitals"]
 
-WHOLE_WITHIN = 2e-3
-"""Occupations are printed to four or five places, and there may be dozens of them."""
-CORES = (2, 10, 18, 28, 36, 46, 54, 60, 68, 78)
-"""Closed shells that core potentials replace (common practice)."""
-LARGEST_CHARGE = 4
-"""A molecule with a larger charge than this is taken for one with core potentials."""
-GHOST = re.compile(r"^(x|bq|gh|q|ghost)", re.IGNORECASE)
+LEAST_TOLERANCE = 1e-4
+"""Electrons; programs leave out the smallest natural occupations."""
+SNAP = 1e-9
+"""Occupations this near to a whole number are it: 17 printed digits of a computed 2 may end in anything."""
 
 
 @dataclass(frozen=True)
@@ -33,22 +27,30 @@ class OrbitalGroup:
     """``spatial``, ``up`` or ``down``."""
     rows: NDArray[np.int64]
     occupations: NDArray[np.float64] | None
+    sums: tuple[float, float] | None = None
+    """Up and down electrons, where the file has the same orbitals for both spins with occupations of their own."""
+    has_energies: bool = True
+    """False where up and down energies of the same orbitals differ, so that the one set has none."""
 
 
 @dataclass(frozen=True)
 class Electrons:
-    """Numbers of electrons and how they were found."""
+    """Numbers of electrons, the groups with occupations to match, and how both were found."""
 
     n_up: int
     n_down: int
+    groups: list[OrbitalGroup]
     notes: tuple[str, ...]
 
 
 def _occupations(molden: Molden, rows: NDArray[np.int64]) -> NDArray[np.float64] | None:
+    """None where the file has none, or nothing but zeros, which is how programs write that they do not know."""
     told = [molden.orbitals.occupations[int(r)] for r in rows]
-    if all(value is None for value in told):
+    values = np.array([0.0 if value is None else value for value in told])
+    if not values.any():
         return None
-    return np.array([0.0 if value is None else value for value in told])
+    nearest = np.rint(values)
+    return np.where(np.abs(values - nearest) < SNAP, nearest + 0.0, values)
 
 
 def group_orbitals(molden: Molden) -> tuple[list[OrbitalGroup], list[str]]:
@@ -60,29 +62,31 @@ def group_orbitals(molden: Molden) -> tuple[list[OrbitalGroup], list[str]]:
         return [OrbitalGroup("spatial", rows, _occupations(molden, rows))], []
     a, b = _occupations(molden, up), _occupations(molden, down)
     matrix = molden.orbitals.coefficients
-    if len(up) == len(down) and np.array_equal(matrix[up], matrix[down]):
-        both = None if a is None or b is None else a + b
-        note = "the up and down orbitals are the same: one spin-restricted set with the sum of the occupations"
-        return [OrbitalGroup("spatial", up, both)], [note]
-    return [OrbitalGroup("up", up, a), OrbitalGroup("down", down, b)], []
+    if len(up) != len(down) or not np.array_equal(matrix[up], matrix[down]):
+        return [OrbitalGroup("up", up, a), OrbitalGroup("down", down, b)], []
+    notes = ["the up and down orbitals are the same: one spin-restricted set with the sum of the occupations"]
+    energies = molden.orbitals.energies
+    same = [energies[int(r)] for r in up] == [energies[int(r)] for r in down]
+    if not same:
+        notes.append("the energies of the up and down orbitals differ: the one set has none")
+    if a is None and b is None:
+        return [OrbitalGroup("spatial", up, None, has_energies=same)], notes
+    a, b = (np.zeros(len(up)) if x is None else x for x in (a, b))
+    return [OrbitalGroup("spatial", up, a + b, (float(a.sum()), float(b.sum())), same)], notes
 
 
-def _atomic_number(label: str, charge: float) -> int:
-    """The element that a label such as ``O1`` or ``cl`` names; by the charge where it names none."""
-    letters = re.match(r"[A-Za-z]*", label)
-    word = letters.group() if letters else ""
-    for length in (2, 1):
-        symbol = word[:length].capitalize()
-        if len(symbol) == length and symbol in SYMBOLS[1:]:
-            return SYMBOLS.index(symbol)
-    return round(charge) if 0 < charge < len(SYMBOLS) else 0
+def _tolerance(molden: Molden) -> float:
+    """Electrons by which a sum of occupations may miss a whole number: a unit of the last digit of each fraction."""
+    fractions = [o for o in molden.orbitals.occupations if o is not None and abs(o - round(o)) > SNAP]
+    decimals = max((len(repr(o).partition("e")[0].partition(".")[2]) for o in fractions), default=16)
+    return min(max(LEAST_TOLERANCE, len(fractions) * 10.0**-decimals), 0.02)
 
 
 def _parse_electrons(text: str) -> tuple[int, int]:
-    match = re.fullmatch(r"\s*(\d+)\s*,\s*(\d+)\s*", text)
+    match = re.fullmatch(r"\s*(\d{1,6})\s*,\s*(\d{1,6})\s*", text)
     if match is None:
         raise ConversionError(
-            f"{text!r}",
+            f"the option is {text!r}",
             where="--set electrons",
             expected="UP,DOWN, such as 5,5",
             remedy="give two whole numbers",
@@ -100,33 +104,85 @@ def count_electrons(
     nuclear : sum of the charges of the atom lines, to recognise occupations per spin.
     named : the option ``electrons``.
     """
+    tolerance = _tolerance(molden)
     if named is not None:
-        n_up, n_down = _parse_electrons(named)
-        return Electrons(n_up, n_down, (f"{n_up} up and {n_down} down electrons, as the user says",))
-    sums = [0.0 if g.occupations is None else float(g.occupations.sum()) for g in groups]
-    if not any(sums):
+        return _named(molden, groups, _parse_electrons(named), tolerance)
+    if all(g.occupations is None for g in groups):
         raise _undecided(molden, "the occupations are all zero or missing")
-    if len(groups) == 2:
-        if any(abs(s - round(s)) > WHOLE_WITHIN for s in sums):
-            raise _undecided(molden, f"the occupations add up to {sums[0]:.5f} up and {sums[1]:.5f} down electrons")
-        return Electrons(round(sums[0]), round(sums[1]), ())
-    total, occupations = sums[0], groups[0].occupations
+    largest = 2.0 if groups[0].name == "spatial" else 1.0
+    for group in groups:
+        if group.occupations is not None and group.occupations.max() > largest + 0.1:
+            found = f"an orbital of the spin {group.name} has the occupation {group.occupations.max():g}"
+            raise _undecided(molden, found)
+    if len(groups) == 2 or groups[0].sums is not None:
+        sums = groups[0].sums or [0.0 if g.occupations is None else float(g.occupations.sum()) for g in groups]
+        if any(abs(s - round(s)) > tolerance for s in sums):
+            raise _undecided(molden, f"the occupations add up to {sums[0]:.6g} up and {sums[1]:.6g} down electrons")
+        return Electrons(round(sums[0]), round(sums[1]), groups, ())
+    occupations = groups[0].occupations
     assert occupations is not None
-    notes = []
-    if abs(total - round(total)) > WHOLE_WITHIN:
-        raise _undecided(molden, f"the occupations add up to {total:.5f} electrons")
+    total = float(occupations.sum())
+    if abs(total - round(total)) > tolerance:
+        raise _undecided(molden, f"the occupations add up to {total:.6g} electrons")
     n = round(total)
-    whole = np.abs(occupations - np.round(occupations)) < WHOLE_WITHIN
-    if occupations.max() < 1 + WHOLE_WITHIN and whole.all() and abs(2 * n - nuclear) <= 1 and abs(n - nuclear) > 1:
-        notes.append("the occupations are those of one spin: doubled")
-        return Electrons(n, n, tuple(notes))
-    single = int(np.count_nonzero(np.abs(occupations - 1.0) < WHOLE_WITHIN)) if whole.all() else n % 2
-    if not whole.all():
-        notes.append(
-            f"fractional occupations do not tell the spin: taken as {single} unpaired electron{'s' * (single != 1)} "
-            "(--set electrons=UP,DOWN decides)"
-        )
-    return Electrons((n + single) // 2, (n - single) // 2, tuple(notes))
+    whole = bool(np.all(np.abs(occupations - np.rint(occupations)) < SNAP))
+    if whole and occupations.max() == 1.0 and abs(2 * n - nuclear) <= 1 and abs(n - nuclear) > 1:
+        doubled = replace(groups[0], occupations=2.0 * occupations)
+        return Electrons(n, n, [doubled], ("the occupations are those of one spin, as the charges show: doubled",))
+    single = int(np.count_nonzero(occupations == 1.0)) if whole else n % 2
+    notes = () if whole else (
+        f"fractional occupations do not tell the spin: taken as {single} unpaired electron{'s' * (single != 1)} "
+        "(--set electrons=UP,DOWN decides)",
+    )  # fmt: skip
+    return Electrons((n + single) // 2, (n - single) // 2, groups, notes)
+
+
+def _named(molden: Molden, groups: list[OrbitalGroup], counts: tuple[int, int], tolerance: float) -> Electrons:
+    """The numbers that the user gave, and occupations that add up to them where the file's do not."""
+    notes = [f"{counts[0]} up and {counts[1]} down electrons, as the user says"]
+    found = []
+    for index, group in enumerate(groups):
+        wanted = counts if group.name == "spatial" else (counts[index], 0)
+        if max(wanted) > len(group.rows):
+            raise ConversionError(
+                f"{max(wanted)} electrons of one spin in {len(group.rows)} orbitals",
+                where="--set electrons",
+                expected="at most as many electrons of each spin as there are orbitals",
+                remedy="correct the option",
+            )
+        occupations, note = _to_match(molden, group, wanted, tolerance)
+        notes += [note] if note else []
+        found.append(replace(group, occupations=occupations))
+    return Electrons(counts[0], counts[1], found, tuple(notes))
+
+
+def _to_match(
+    molden: Molden, group: OrbitalGroup, wanted: tuple[int, int], tolerance: float
+) -> tuple[NDArray[np.float64] | None, str]:
+    """Occupations of one group that add up to the electrons, and what was done to have them."""
+    given, n = group.occupations, sum(wanted)
+    if given is None:
+        order = _filling_order(molden, group)
+        filled = np.zeros(len(group.rows))
+        for count in wanted:
+            filled[order[:count]] += 1.0
+        how = "of the file" if np.array_equal(order, np.arange(len(order))) else "of the energies"
+        return filled, f"the {group.name} orbitals are filled in the order {how}, since it has no occupations"
+    if abs(given.sum() - n) <= tolerance:
+        return given, ""
+    squares = np.where((given > 0.0) & (given < 1.0), 2.0 * given**2, given)
+    if group.name == "spatial" and abs(squares.sum() - n) <= 10 * tolerance:
+        return squares, "occupations below 1 are read as the square root of half the number of electrons, which fits"
+    return None, f"the occupations of the {group.name} orbitals add up to {given.sum():.6g} and are left out"
+
+
+def _filling_order(molden: Molden, group: OrbitalGroup) -> NDArray[np.int64]:
+    """By energy where the file has energies of all, else in the order of the file."""
+    told = [molden.orbitals.energies[int(r)] for r in group.rows]
+    energies = np.array([0.0 if e is None else e for e in told])
+    if any(e is None for e in told) or not energies.any():
+        return np.arange(len(told))
+    return np.argsort(energies, kind="stable")
 
 
 def _undecided(molden: Molden, found: str) -> ConversionError:
@@ -134,94 +190,6 @@ def _undecided(molden: Molden, found: str) -> ConversionError:
     return ConversionError(
         f"{found}, so the numbers of electrons cannot be told",
         where=f"{molden.name}:{line}",
-        expected="occupations that add up to whole numbers",
+        expected="occupations that add up to whole numbers, at most 2 in an orbital and 1 for each spin",
         remedy="say them with --set electrons=UP,DOWN",
     )
-
-
-def charges(
-    molden: Molden, n_electrons: int, options: Mapping[str, int]
-) -> tuple[NDArray[np.int32], NDArray[np.float64], list[str]]:
-    """Atomic numbers and effective charges.
-
-    The charge on an atom line may be that of the nucleus or that of the valence electrons. What decides, in this order:
-    the user (`options`: label or element -> core electrons), [Core] and [Pseudo], a line whose charge is below the
-    element's number, and the count of the electrons.
-    """
-    numbers = np.array([_atomic_number(a.label, a.charge) for a in molden.atoms], dtype=np.int32)
-    written = np.array([a.charge for a in molden.atoms])
-    effective = written.copy()
-    notes: list[str] = []
-    ghosts = (written == 0) | np.array([bool(GHOST.match(a.label)) and a.charge == 0 for a in molden.atoms])
-    numbers = np.where(ghosts & (numbers == 0), 0, numbers).astype(np.int32)
-    if options:
-        _apply_options(molden, numbers, effective, ghosts, options, notes)
-    elif molden.core or molden.valence:
-        for atom, electrons in molden.core.items():
-            effective[atom] = numbers[atom] - electrons
-        for atom, charge in molden.valence.items():
-            effective[atom] = charge
-        notes.append("effective charges by the file's own section on core potentials")
-    else:
-        low = np.flatnonzero((written < numbers) & ~ghosts)
-        if len(low):
-            listed = ", ".join(f"{molden.atoms[i].label} {written[i]:g} of {numbers[i]}" for i in low[:4])
-            notes.append(f"atom lines carry valence charges ({listed}): a core potential replaces the other electrons")
-        else:
-            _cores_by_count(molden, numbers, effective, ghosts, n_electrons, notes)
-    return numbers, effective, notes
-
-
-def _apply_options(
-    molden: Molden, numbers: NDArray[np.int32], effective: NDArray[np.float64], ghosts: NDArray[np.bool_],
-    options: Mapping[str, int], notes: list[str],
-) -> None:  # fmt: skip
-    for key, core in options.items():
-        found = [
-            i
-            for i, atom in enumerate(molden.atoms)
-            if not ghosts[i] and key.lower() in (atom.label.lower(), SYMBOLS[numbers[i]].lower())
-        ]
-        if not found or any(core >= numbers[i] for i in found):
-            raise ConversionError(
-                f"{key}={core}" + (" names no atom" if not found else " leaves no charge"),
-                where="--set core-electrons",
-                expected="an element or label of the file, and fewer electrons than the element has",
-                remedy="correct the option",
-            )
-        for i in found:
-            effective[i] = numbers[i] - core
-        notes.append(f"{core} core electrons on {key}, as the user says")
-
-
-def _cores_by_count(
-    molden: Molden, numbers: NDArray[np.int32], effective: NDArray[np.float64], ghosts: NDArray[np.bool_],
-    n_electrons: int, notes: list[str],
-) -> None:  # fmt: skip
-    """Nuclear charges everywhere: too few electrons for them mean core potentials that the lines do not tell of."""
-    missing = float(effective.sum()) - n_electrons
-    if missing <= LARGEST_CHARGE:
-        return
-    heavy = sorted({int(z) for z, ghost in zip(numbers, ghosts, strict=True) if z > 2 and not ghost})
-    counts = {z: int(np.count_nonzero((numbers == z) & ~ghosts)) for z in heavy}
-    fits: dict[int, list[dict[int, int]]] = {}
-    for cores in product(*[(0, *[c for c in CORES if c < z]) for z in heavy]) if len(heavy) < 6 else ():
-        left = missing - sum(core * counts[z] for z, core in zip(heavy, cores, strict=True))
-        if abs(left) <= 1 and any(cores):
-            fits.setdefault(abs(round(left)), []).append(dict(zip(heavy, cores, strict=True)))
-    best = fits[min(fits)] if fits else []
-    if len(best) != 1:
-        raise ConversionError(
-            f"the nuclear charges exceed the {n_electrons} electrons by {missing:g}, and "
-            + (f"{len(best)} sets of core electrons explain it" if best else "no core potentials explain it"),
-            where=f"{molden.name}:{molden.atoms[0].line}",
-            expected="a molecule of small charge, or core electrons that the count determines",
-            remedy="say them with --set core-electrons=ELEMENT=NUMBER, or the electrons with --set electrons=UP,DOWN",
-        )
-    for z, core in best[0].items():
-        if core:
-            effective[(numbers == z) & ~ghosts] = z - core
-            notes.append(
-                f"the electron count tells that a core potential replaces {core} electrons of {SYMBOLS[z]} "
-                "(--set core-electrons=... decides otherwise)"
-            )

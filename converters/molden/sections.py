@@ -2,10 +2,13 @@
 
 from __future__ import annotations
 
+import hashlib
+import mmap
 import re
 from collections.abc import Iterator
 from dataclasses import dataclass, field
 from pathlib import Path
+from typing import TypeAlias
 
 import numpy as np
 from numpy.typing import NDArray
@@ -16,7 +19,7 @@ from qwfx.errors import ConversionError, FileError
 
 __all__ = ["Atom", "GaussianShell", "Molden", "SlaterFunction", "WrittenOrbitals", "parse"]
 
-HEADING = re.compile(r"^[ \t]*\[([^\]\n]+)\][ \t]*(.*)$", re.MULTILINE)
+HEADING = re.compile(rb"[ \t]*\[([^\]\n]+)\][ \t]*([^\n]*)")
 LETTERS = {letter: l for l, letter in enumerate("spdfghi")}
 FLAGS = {
     "5d": {2: False, 3: False}, "5d7f": {2: False, 3: False}, "5d10f": {2: False, 3: True}, "7f": {3: False},
@@ -25,7 +28,8 @@ FLAGS = {
 }  # fmt: skip
 USED = {"molden format", "title", "atoms", "gto", "sto", "mo", "core", "pseudo", "n_atoms", "charge", *FLAGS}
 
-
+Text: TypeAlias = bytes | mmap.mmap
+MAPPED_ABOVE = PIECE = 1 << 20
 
 
 @dataclass(frozen=True)
@@ -101,6 +105,8 @@ class Molden:
     skipped: list[str]
     """Sections that were not used, with their numbers of lines."""
     unit: str
+    sha256: str
+    """Of the bytes of the file."""
 
     @property
     def n_functions(self) -> int:
@@ -150,17 +156,8 @@ def integer(token: str, name: str, line: int, what: str) -> int:
 
 def parse(path: Path) -> Molden:
     """Read `path`. Raises FileError, ConversionError with the line."""
-    try:
-        raw = path.read_bytes()
-    except OSError as error:
-        raise FileError(
-            f"cannot be read ({error.strerror or error})",
-            where=str(path),
-            expected="a readable file",
-            remedy="check the path and the permissions",
-        ) from None
     name = str(path)
-    text = raw.decode("latin-1")  # one character a byte: offsets in text and bytes agree
+    text = _open(path)
     sections = _sections(text)
     by_name: dict[str, _Section] = {}
     for section in sections:
@@ -180,10 +177,10 @@ def parse(path: Path) -> Molden:
     cartesian = _flags(sections, shells, name)
     n_functions = len(slater) + sum(_size(shell.l, cartesian) for shell in shells)
     mo = by_name["mo"]
-    orbitals = read_orbitals(np.frombuffer(raw, np.uint8), mo.start, mo.end, mo.line, n_functions, name)
+    orbitals = read_orbitals(np.frombuffer(text, np.uint8), mo.start, mo.end, mo.line, n_functions, name)
     return Molden(
         name, _title(text, by_name), atoms, shells, slater, cartesian, orbitals, _core(text, by_name, name, index),
-        _pseudo(text, by_name, name, index), _skipped(text, sections), unit,
+        _pseudo(text, by_name, name, index), _skipped(text, sections), unit, _sha256(text),
     )  # fmt: skip
 
 
@@ -191,42 +188,76 @@ def _size(l: int, cartesian: dict[int, bool]) -> int:
     return (l + 1) * (l + 2) // 2 if cartesian.get(l, False) else 2 * l + 1
 
 
-def _find_headings(text: str) -> Iterator[re.Match[str]]:
-    """Headings in order: every bracket that begins a line (looked for first, since files are long and these are few)."""
-    at = text.find("[")
+def _open(path: Path) -> Text:
+    """The bytes of a file; those of a large one stay on the disk, so that they are not held beside the numbers."""
+    try:
+        with open(path, "rb") as stream:
+            if stream.seek(0, 2) > MAPPED_ABOVE:
+                text: Text = mmap.mmap(stream.fileno(), 0, access=mmap.ACCESS_READ)
+            else:
+                stream.seek(0)
+                text = stream.read()
+    except OSError as error:
+        raise FileError(
+            f"cannot be read ({error.strerror or error})",
+            where=str(path),
+            expected="a readable file",
+            remedy="check the path and the permissions",
+        ) from None
+    if text.find(b"\n") < 0 <= text.find(b"\r"):
+        return text[:].replace(b"\r", b"\n")  # lines that end with a carriage return alone
+    return text
+
+
+def _find_headings(text: Text) -> Iterator[re.Match[bytes]]:
+    """Headings in order: every bracket that begins a line (looked for first, since files are long and these few)."""
+    at = text.find(b"[")
     while at >= 0:
-        start = text.rfind("\n", 0, at) + 1
-        match = HEADING.match(text, start)
+        match = HEADING.match(text, text.rfind(b"\n", 0, at) + 1)
         if match is not None and match.start(1) == at + 1:
             yield match
-        at = text.find("[", at + 1)
+        at = text.find(b"[", at + 1)
 
 
-def _sections(text: str) -> list[_Section]:
+def _count_lines(text: Text, start: int, end: int) -> int:
+    """Line ends between two offsets."""
+    return sum(text[k : min(k + PIECE, end)].count(b"\n") for k in range(start, end, PIECE))
+
+
+def _sections(text: Text) -> list[_Section]:
     found = list(_find_headings(text))
     ends = [m.start() for m in found[1:]] + [len(text)]
     sections, line, seen = [], 1, 0
     for match, end in zip(found, ends, strict=True):
-        line += text.count("\n", seen, match.start(1))
+        line += _count_lines(text, seen, match.start(1))
         seen = match.start(1)
-        heading = " ".join(match.group(1).lower().split())
-        sections.append(_Section(heading, match.group(2).strip(), match.end(), end, line))
+        heading = " ".join(match.group(1).decode("latin-1").lower().split())
+        sections.append(_Section(heading, match.group(2).decode("latin-1").strip(), match.end(), end, line))
     return sections
 
 
-def _lines(text: str, section: _Section) -> list[tuple[int, list[str]]]:
-    """(line number, tokens) of the lines of a section that are not blank."""
-    rows = text[section.start : section.end].split("\n")
+def _lines(text: Text, section: _Section) -> list[tuple[int, list[str]]]:
+    """(line number, tokens) of the lines of a section that are neither blank nor comments."""
+    rows = text[section.start : section.end].decode("latin-1").split("\n")
     # The text begins behind the heading: its rest of the line is row 0.
-    return [(section.line + k, row.split()) for k, row in enumerate(rows) if k and row.strip()]
+    split = ((section.line + k, row.split()) for k, row in enumerate(rows) if k)
+    return [(line, tokens) for line, tokens in split if tokens and not tokens[0].startswith("#")]
 
 
-def _title(text: str, by_name: dict[str, _Section]) -> str:
+def _title(text: Text, by_name: dict[str, _Section]) -> str:
     section = by_name.get("title")
-    return "" if section is None else " ".join(text[section.start : section.end].split())[:200]
+    words = b"" if section is None else text[section.start : section.end]
+    return " ".join(words.decode("latin-1").split())[:200]
 
 
-def _atoms(text: str, section: _Section, name: str) -> tuple[list[Atom], str]:
+def _sha256(text: Text) -> str:
+    digest = hashlib.sha256()
+    for start in range(0, len(text), PIECE):
+        digest.update(text[start : start + PIECE])
+    return digest.hexdigest()
+
+
+def _atoms(text: Text, section: _Section, name: str) -> tuple[list[Atom], str]:
     word = section.argument.strip("() \t\r").lower()
     if word.startswith("ang"):
         scale, unit = 1.0 / BOHR, "angstrom"
@@ -257,7 +288,7 @@ def _atom_of(token: str, index: dict[int, int], name: str, line: int) -> int:
     return index[wanted]
 
 
-def _gto(text: str, section: _Section, name: str, index: dict[int, int]) -> list[GaussianShell]:
+def _gto(text: Text, section: _Section, name: str, index: dict[int, int]) -> list[GaussianShell]:
     shells: list[GaussianShell] = []
     rows = _lines(text, section)
     atom: int | None = None
@@ -298,7 +329,7 @@ def _gto(text: str, section: _Section, name: str, index: dict[int, int]) -> list
     return shells
 
 
-def _sto(text: str, section: _Section, name: str, index: dict[int, int]) -> list[SlaterFunction]:
+def _sto(text: Text, section: _Section, name: str, index: dict[int, int]) -> list[SlaterFunction]:
     functions = []
     for line, tokens in _lines(text, section):
         if len(tokens) < 7:
@@ -344,7 +375,7 @@ def _flags(sections: list[_Section], shells: list[GaussianShell], name: str) -> 
     return flags
 
 
-def _core(text: str, by_name: dict[str, _Section], name: str, index: dict[int, int]) -> dict[int, int]:
+def _core(text: Text, by_name: dict[str, _Section], name: str, index: dict[int, int]) -> dict[int, int]:
     """Core electrons by atom: lines ``number : electrons`` of [Core]."""
     core: dict[int, int] = {}
     for line, tokens in _lines(text, by_name["core"]) if "core" in by_name else ():
@@ -355,7 +386,7 @@ def _core(text: str, by_name: dict[str, _Section], name: str, index: dict[int, i
     return core
 
 
-def _pseudo(text: str, by_name: dict[str, _Section], name: str, index: dict[int, int]) -> dict[int, int]:
+def _pseudo(text: Text, by_name: dict[str, _Section], name: str, index: dict[int, int]) -> dict[int, int]:
     """Valence charges by atom: lines ``label number charge`` of [Pseudo]."""
     valence: dict[int, int] = {}
     for line, tokens in _lines(text, by_name["pseudo"]) if "pseudo" in by_name else ():
@@ -365,9 +396,6 @@ def _pseudo(text: str, by_name: dict[str, _Section], name: str, index: dict[int,
     return valence
 
 
-def _skipped(text: str, sections: list[_Section]) -> list[str]:
-    return [
-        f"[{s.name}] ({sum(1 for row in text[s.start : s.end].split(chr(10)) if row.strip())} lines)"
-        for s in sections
-        if s.name not in USED and s.name.replace(" ", "") not in FLAGS
-    ]
+def _skipped(text: Text, sections: list[_Section]) -> list[str]:
+    unused = [s for s in sections if s.name not in USED and s.name.replace(" ", "") not in FLAGS]
+    return [f"[{s.name}] ({len(_lines(text, s))} lines)" for s in unused]
