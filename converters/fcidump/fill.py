@@ -186,27 +186,45 @@ def _close(a: NDArray[Any], b: NDArray[Any], unit: NDArray[Any], other: NDArray[
     return np.asarray(np.abs(a - b) <= 0.5 * SLACK * (unit + other) + NOISE + 1e-15 * np.abs(a))
 
 
-def _sort_out(
-    source: Source, layout: Layout, parts: list[tuple[NDArray[np.int64], NDArray[Any], NDArray[np.int8]]]
-) -> tuple[NDArray[np.int64], NDArray[Any], int]:
-    """Collected places and values in ascending order, each place once; how many records repeat one."""
-    place, unit = (np.concatenate([part[k] for part in parts]) for k in (0, 2))
-    value = np.concatenate([part[1] for part in parts])
+class _Collected:
+    """Places, values and units in the order of the file, for files that have few of all possible integrals."""
+
+    def __init__(self) -> None:
+        self.places: list[NDArray[np.int64]] = []
+        self.values: list[NDArray[Any]] = []
+        self.units: list[NDArray[np.int8]] = []
+
+    def take(self, located: _Located, is_complex: bool) -> None:
+        own, records = located.place >= 0, located.records
+        self.places.append(located.place[own])
+        self.values.append(records.real[own] + 1j * records.imaginary[own] if is_complex else records.real[own])
+        self.units.append(records.unit[own])
+
+    def sort_out(self, source: Source, layout: Layout) -> tuple[NDArray[np.int64], NDArray[Any], int]:
+        """Places in ascending order, each once, and values; how many records repeat one. What was collected goes."""
+        place, value, unit = _joined(self.places), _joined(self.values), _joined(self.units)
+        order = np.argsort(place, kind="stable")
+        place = place[order]
+        fresh = np.empty(len(place), dtype=bool)
+        fresh[:1] = True
+        np.not_equal(place[1:], place[:-1], out=fresh[1:])
+        rows = np.flatnonzero(~fresh)
+        if not len(rows):
+            return place, value[order], 0
+        first = np.searchsorted(place, place[rows])  # records that repeat one are compared with the first of that place
+        a, b = value[order[first]], value[order[rows]]
+        units = 10.0 ** unit[order[first]].astype(np.float64), 10.0 ** unit[order[rows]].astype(np.float64)
+        apart = ~(_close(a.real, b.real, *units) & _close(a.imag, b.imag, *units))
+        if apart.any():
+            _contradiction(source, layout, int(place[rows[np.argmax(apart)]]))
+        return place[fresh], value[order[fresh]], len(rows)
+
+
+def _joined(parts: list[Any]) -> NDArray[Any]:
+    """The parts in one array; the list is emptied."""
+    whole = np.concatenate(parts)
     parts.clear()
-    order = np.argsort(place, kind="stable")
-    place = place[order]
-    fresh = np.empty(len(place), dtype=bool)
-    fresh[:1] = True
-    np.not_equal(place[1:], place[:-1], out=fresh[1:])
-    rows = np.flatnonzero(~fresh)
-    first = np.searchsorted(place, place[rows])  # records that repeat one are compared with the first of that place
-    a, b = value[order[first]], value[order[rows]]
-    units = 10.0 ** unit[order[first]].astype(np.float64), 10.0 ** unit[order[rows]].astype(np.float64)
-    apart = ~(_close(a.real, b.real, *units) & _close(a.imag, b.imag, *units))
-    if apart.any():
-        _contradiction(source, layout, int(place[rows[np.argmax(apart)]]))
-    repeated = int(len(place) - fresh.sum())
-    return place[fresh], value[order[fresh]], repeated
+    return whole
 
 
 def fill(
@@ -224,7 +242,7 @@ def fill(
     counts = _Counts(offsets)
     flat: NDArray[Any] | None = None
     units = np.zeros(0, dtype=np.int8)
-    parts: list[tuple[NDArray[np.int64], NDArray[Any], NDArray[np.int8]]] = []
+    collected = _Collected()
     repeated = block = 0
     decided = False
     for located in _located(source, layout):
@@ -240,9 +258,7 @@ def fill(
         if progress:
             progress("reading integrals", batch.done)
         if flat is None:
-            own = place >= 0
-            value = batch.real[own] + 1j * batch.imaginary[own] if places.is_complex else batch.real[own]
-            parts.append((place[own], value, batch.unit[own]))
+            collected.take(located, places.is_complex)
             continue
         view = flat.view(np.float64).reshape(total, -1)
         again, row = store(view, units, place, batch.real, batch.imaginary, batch.unit)
@@ -250,8 +266,6 @@ def fill(
             _contradiction(source, layout, int(place[row]))
         repeated += again
     index: NDArray[np.int64] | None = None
-    if flat is None and parts:
-        index, flat, repeated = _sort_out(source, layout, parts)
-    elif flat is None:
-        index, flat = np.zeros(0, dtype=np.int64), np.zeros(0, dtype=dtype)
+    if flat is None:
+        index, flat, repeated = collected.sort_out(source, layout)
     return Filled(flat, index, counts.core, counts.one, counts.two, counts.energies, repeated, counts.n, block)

@@ -53,7 +53,7 @@ def two_body(filled: Filled, places: Places) -> tuple[dict[str, TwoBody], list[s
         if index is None and length > SMALL and 2 * np.count_nonzero(values) < length:
             index = np.flatnonzero(values)
             values = values[index]
-        tables[pair] = TwoBody(values, None if index is None else index.astype(np.uint64))
+        tables[pair] = TwoBody(values, None if index is None else index.view(np.uint64))
         if index is not None:
             share = len(index) / length
             notes.append(f"two-electron integrals ({pair}) stored sparsely: {len(index)} of {length} ({share:.1%})")

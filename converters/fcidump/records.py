@@ -16,7 +16,7 @@ from qwfx.errors import ConversionError, FileError
 
 __all__ = ["COARSEST", "LARGEST_INDEX", "Records", "Source", "compiled"]
 
-PIECE = 1 << 20
+PIECE = 1 << 18
 SHORTEST = 10  # bytes of a record: "1 1 1 1 1\n"
 FINE, BAD_VALUE, FEW, BAD_INDEX, MORE, SLOW = range(6)
 PROBLEMS = {
