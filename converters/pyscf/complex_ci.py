@@ -81,28 +81,14 @@ class _Product:
 
 def _tensor(hamiltonian: Hamiltonian, key: str, *, like: bool) -> NDArray[Any]:
     """(n, n, n, n) integrals (pq|rs) of one pair of spins."""
-    from qwfx.converters.pyscf.full_ci import dense_two_body
+    from qwfx.kernels.packing import dense, unpack
 
     n = hamiltonian.n_orbitals
     if not hamiltonian.spin_resolved:
         key, like = "both", True
-    if hamiltonian.complex_orbitals:
-        n_pairs, rows = n * n, np.arange(n * n).reshape(n, n)
-    else:
-        n_pairs = n * (n + 1) // 2
-        p, q = np.indices((n, n))
-        larger, smaller = np.maximum(p, q), np.minimum(p, q)
-        rows = larger * (larger + 1) // 2 + smaller
-    values = dense_two_body(hamiltonian.two_body[key], n_pairs * (n_pairs + 1) // 2 if like else n_pairs**2)
-    if like:
-        square = np.zeros((n_pairs, n_pairs), dtype=values.dtype)
-        lower = np.tril_indices(n_pairs)
-        square[lower] = values
-        # (rs|pq) = (pq|rs): the two electrons are alike
-        square = square + np.tril(square, -1).T
-    else:
-        square = values.reshape(n_pairs, n_pairs)
-    return square[rows[:, :, None, None], rows[None, None, :, :]]
+    packing = "pairs" if hamiltonian.complex_orbitals else "eightfold" if like else "fourfold"
+    table = hamiltonian.two_body[key]
+    return unpack(dense(table.values, table.index, packing, n, like), packing, n, like)
 
 
 def _excitations(n: int, electrons: int) -> list[Any]:

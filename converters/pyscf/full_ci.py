@@ -9,9 +9,10 @@ import numpy as np
 from numpy.typing import NDArray
 
 from qwfx.errors import ConversionError, UnsupportedError
+from qwfx.kernels.packing import dense
 from qwfx.model import Hamiltonian, TwoBody, Wavefunction
 
-__all__ = ["dense_two_body", "fci_energy"]
+__all__ = ["fci_energy"]
 
 LARGEST_SPACE = 20_000_000  # determinants: a few hundred MB of vectors
 LARGEST_COMPLEX_SPACE = 200_000
@@ -106,7 +107,7 @@ def _real_energies(
 def _square(two_body: TwoBody, n: int, *, like: bool) -> NDArray[np.float64]:
     """(pairs, pairs) real integrals in PySCF's fourfold form, from the packed vector."""
     n_pairs = n * (n + 1) // 2
-    values = dense_two_body(two_body, n_pairs * (n_pairs + 1) // 2 if like else n_pairs**2)
+    values = dense(two_body.values, two_body.index, "eightfold" if like else "fourfold", n, like)
     if not like:
         return values.reshape(n_pairs, n_pairs)
     square = np.zeros((n_pairs, n_pairs))
@@ -114,13 +115,3 @@ def _square(two_body: TwoBody, n: int, *, like: bool) -> NDArray[np.float64]:
     square[rows, columns] = values
     square[columns, rows] = values
     return square
-
-
-def dense_two_body(two_body: TwoBody, length: int) -> NDArray[Any]:
-    """The packed vector with its zeros."""
-    values = np.asarray(two_body.values)
-    if two_body.index is None:
-        return values
-    dense = np.zeros(length, dtype=values.dtype)
-    dense[np.asarray(two_body.index).astype(np.int64)] = values
-    return dense
