@@ -58,7 +58,7 @@ class _Sink:
 
     def group(self, path: str, attributes: Mapping[str, Any] | None = None) -> None:
         """Make a group with attributes."""
-        plain = {name: self.attribute(f"{path}@{name}", value) for name, value in (attributes or {}).items()}
+        plain = {name: self.attribute(f"{path}@{name}", value) for name, value in sorted((attributes or {}).items())}
         if plain:
             self.digests.append(attributes_digest(path, plain))
         if self.file is None:
@@ -200,10 +200,10 @@ def _put_all(sink: _Sink, wavefunction: model.Wavefunction) -> None:
     _put(sink, "/system/cell", w.system.cell)
     _put(sink, "/potentials", w.potentials)
     _put(sink, "/basis", w.basis)
-    for name, orbitals in w.orbitals.items():
+    for name, orbitals in sorted(w.orbitals.items()):
         _put(sink, _name(sink, "/orbitals", name), orbitals, "orbitals/*")
     _put(sink, "/expansion", w.expansion)
-    for name, term in w.jastrow.items():
+    for name, term in sorted(w.jastrow.items()):
         path = _name(sink, "/jastrow", name)
         sink.group(path, {"form": term.form, **term.attributes})
         _put_free(sink, path, term.members)
@@ -215,19 +215,19 @@ def _put_all(sink: _Sink, wavefunction: model.Wavefunction) -> None:
     _put(sink, "/energies", w.energies)
     _put(sink, "/witness", w.witness)
     if w.witness is not None:
-        for name, told in w.witness.orbitals.items():
+        for name, told in sorted(w.witness.orbitals.items()):
             _put(sink, _name(sink, "/witness/orbitals", name), told, "witness/orbitals/*")
         _put(sink, "/witness/configurations", w.witness.configurations)
     if w.provenance.steps:
         sink.group("/provenance")
         steps = json.dumps([dict(step) for step in w.provenance.steps], ensure_ascii=False, allow_nan=False)
         sink.text("/provenance/steps", steps)
-    for owner, node in w.extensions.items():
+    for owner, node in sorted(w.extensions.items()):
         _put_node(sink, _name(sink, "/extensions", owner), node)
 
 
 def _put_keyed(sink: _Sink, group: str, arrays: Mapping[str, Any], kind: Kind) -> None:
-    for key, array in arrays.items():
+    for key, array in sorted(arrays.items()):
         sink.numbers(_name(sink, group, key), array, kind)
 
 
@@ -241,7 +241,7 @@ def _put_hamiltonian(sink: _Sink, h: model.Hamiltonian | None) -> None:
     sink.group("/hamiltonian", {name: value for name, value in attributes.items() if value is not None})
     sink.numbers("/hamiltonian/core_energy", np.float64(h.core_energy), "float64")
     _put_keyed(sink, "/hamiltonian/one_body", h.one_body, "number")
-    for pair, integrals in h.two_body.items():
+    for pair, integrals in sorted(h.two_body.items()):
         _put(sink, _name(sink, "/hamiltonian/two_body", pair), integrals, "hamiltonian/two_body/*")
     _put_keyed(sink, "/hamiltonian/orbital_energies", h.orbital_energies, "float64")
     if h.orbital_symmetry is not None:
@@ -249,7 +249,7 @@ def _put_hamiltonian(sink: _Sink, h: model.Hamiltonian | None) -> None:
 
 
 def _put_free(sink: _Sink, group: str, members: Mapping[str, Any]) -> None:
-    for name, value in members.items():
+    for name, value in sorted(members.items()):
         path = _name(sink, group, name)
         if isinstance(value, model.Node):
             _put_node(sink, path, value)
