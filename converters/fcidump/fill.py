@@ -55,9 +55,11 @@ class Filled:
     seen_core: bool
     seen_one_body: bool
     seen_two_body: bool
-    seen_energies: bool
+    n_energies: int
+    """Records of orbital energies."""
+    any_energy: bool
+    """Whether one of them is not zero."""
     n_repeated: int
-    n_records: int
     block: int
     """Blocks that were closed."""
 
@@ -166,19 +168,19 @@ class _Counts:
 
     def __init__(self, offsets: NDArray[np.int64]) -> None:
         self.offsets = offsets
-        self.core = self.one = self.two = self.energies = False
-        self.n = 0
+        self.core = self.one = self.two = self.any_energy = False
+        self.n_energies = 0
 
     def take(self, located: _Located) -> None:
         place, records = located.place, located.records
         energy, one, two = (int(x) for x in self.offsets[:3])
-        self.n += len(place)
         self.two = self.two or bool((place >= two).any())
         few = place[place < two]
         self.one = self.one or bool((few >= one).any())
         self.core = self.core or bool((few == 0).any())
         energies = (place >= energy) & (place < one)
-        self.energies = self.energies or bool(records.real[energies].any())
+        self.n_energies += int(np.count_nonzero(energies))
+        self.any_energy = self.any_energy or bool(records.real[energies].any())
 
 
 def _close(a: NDArray[Any], b: NDArray[Any], unit: NDArray[Any], other: NDArray[Any]) -> NDArray[np.bool_]:
@@ -268,4 +270,6 @@ def fill(
     index: NDArray[np.int64] | None = None
     if flat is None:
         index, flat, repeated = collected.sort_out(source, layout)
-    return Filled(flat, index, counts.core, counts.one, counts.two, counts.energies, repeated, counts.n, block)
+    return Filled(
+        flat, index, counts.core, counts.one, counts.two, counts.n_energies, counts.any_energy, repeated, block
+    )

@@ -10,8 +10,8 @@ from qwfx.errors import ConversionError, UnsupportedError
 
 __all__ = ["LARGEST", "LONGEST", "OPENING", "Header", "read_header"]
 
-OPENING = re.compile(rb"(?:\s|[!#][^\n]*\n)*[&$]FCI\b", re.IGNORECASE)
-"""Blank lines and comments, then the name of the namelist."""
+OPENING = re.compile(rb"(?:\xef\xbb\xbf)?(?:\s|[!#][^\n]*\n)*[&$]FCI\b", re.IGNORECASE)
+"""A byte order mark, blank lines and comments, then the name of the namelist."""
 CLOSING = re.compile(rb"[&$]END\b|/|^\s*[&$]\s*$", re.IGNORECASE | re.MULTILINE)
 COMMENT = re.compile(rb"![^\n]*")
 KEY = re.compile(r"([A-Za-z_]\w*)\s*(?:\(\s*\d+\s*\))?\s*=")

@@ -30,14 +30,19 @@ def one_body(filled: Filled, places: Places) -> dict[str, NDArray[Any]]:
     return matrices
 
 
-def orbital_energies(filled: Filled, places: Places) -> dict[str, NDArray[np.float64]]:
-    """Spin -> (n); empty if the file has none or nothing but zeros."""
-    if not filled.seen_energies:
-        return {}
+def orbital_energies(filled: Filled, places: Places) -> tuple[dict[str, NDArray[np.float64]], list[str]]:
+    """Spin -> (n), empty unless the file has the energy of every orbital; and what was left out."""
+    wanted = places.n * len(places.spins)
+    if not filled.n_energies:
+        return {}, []
+    if not filled.any_energy:
+        return {}, ["the orbital energies are all zero: left out"]
+    if filled.n_energies < wanted:
+        return {}, [f"only {filled.n_energies} of {wanted} orbital energies: left out"]
     return {
         spin: np.array(filled.part(1 + number * places.n, 1 + (number + 1) * places.n).real)
         for number, spin in enumerate(places.spins)
-    }
+    }, []
 
 
 def two_body(filled: Filled, places: Places) -> tuple[dict[str, TwoBody], list[str]]:

@@ -31,7 +31,7 @@ def read(path: Path, options: Mapping[str, str], progress: Progress | None = Non
     """Read `path`. Raises FileError, ConversionError for what is wrong, UnsupportedError for spinors."""
     source = Source(path)
     header = _header(source)
-    n_electrons_notes = _check_header(header, source)
+    header_notes = _check_header(header, source)
     if progress and not compiled():
         progress("compiling the parser of records (once)", 0.0)
     layout, filled = _integrals(source, header, progress)
@@ -39,17 +39,19 @@ def read(path: Path, options: Mapping[str, str], progress: Progress | None = Non
     places = layout.places
     n_up, n_down, spin_notes = _electrons(header, layout, source.name)
     two_body, storage_notes = integrals.two_body(filled, places)
+    energies, energy_notes = integrals.orbital_energies(filled, places)
     hamiltonian = Hamiltonian(
         n_orbitals=places.n,
         core_energy=float(filled.part(0, 1)[0].real),
         one_body=integrals.one_body(filled, places),
         two_body=two_body,
         complex_orbitals=places.is_complex,
-        orbital_energies=integrals.orbital_energies(filled, places),
+        orbital_energies=energies,
     )
     symmetry = symmetry_of(header, hamiltonian, options.get("isym", "like-orbsym"), source.name)
     hamiltonian = replace(hamiltonian, orbital_symmetry=symmetry.orbitals, state_symmetry=symmetry.state)
-    notes = [*layout.notes, *n_electrons_notes, *spin_notes, *symmetry.notes, *_notes(filled), *storage_notes]
+    notes = [*layout.notes, *header_notes, *spin_notes, *symmetry.notes, *_notes(filled)]
+    notes += [*energy_notes, *storage_notes]
     nothing = np.zeros(0)
     system = System(n_up, n_down, (), nothing.astype(np.int32), nothing, nothing.reshape(0, 3))
     step = {

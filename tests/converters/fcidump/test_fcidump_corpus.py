@@ -82,8 +82,20 @@ def test_spellings_of_one_hamiltonian(folder: Path) -> None:
 def test_orbital_energies() -> None:
     energies = hamiltonian(CORPUS / "z_z11_orbital_energy_lines").orbital_energies["both"]
     np.testing.assert_array_equal(energies, -1.5 + 0.25 * np.arange(6))
-    zeros = hamiltonian(CORPUS / "c_fd_n2_cas66_ccpvdz_c1")
-    assert not zeros.orbital_energies  # the program prints zeros for energies that it does not know
+    zeros = converter.read(CORPUS / "c_fd_n2_cas66_ccpvdz_c1" / "case.fcidump", {})
+    assert "the orbital energies are all zero: left out" in zeros.notes
+    assert zeros.wavefunction.hamiltonian is not None
+    assert not zeros.wavefunction.hamiltonian.orbital_energies
+
+
+def test_some_orbital_energies(tmp_path: Path) -> None:
+    text = (CORPUS / "z_z11_orbital_energy_lines" / "case.fcidump").read_text("ascii")
+    path = tmp_path / "x.fcidump"
+    path.write_text("".join(line for line in text.splitlines(keepends=True) if "   3   0   0   0" not in line))
+    reading = converter.read(path, {})
+    assert "only 5 of 6 orbital energies: left out" in reading.notes
+    assert reading.wavefunction.hamiltonian is not None
+    assert not reading.wavefunction.hamiltonian.orbital_energies
 
 
 def test_notes_and_provenance() -> None:
