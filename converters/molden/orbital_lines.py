@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -17,6 +19,19 @@ if TYPE_CHECKING:
 __all__ = ["read_orbitals"]
 
 FINE, BAD_INDEX, BAD_VALUE, OUT_OF_RANGE, MORE, TWICE = range(6)
+
+
+LARGEST = 1e12
+
+
+@dataclass(frozen=True)
+class _Orbital:
+    """One orbital of [MO]: the line where it begins, its keys (three letters), where its coefficients are."""
+
+    line: int
+    keys: dict[str, str]
+    start: int
+    end: int
 
 
 @njit(**JIT)  # type: ignore[untyped-decorator]
@@ -88,46 +103,65 @@ def _bad(name: str, line: int, found: str, expected: str, remedy: str = "mend th
 
 
 def read_orbitals(
-    text: NDArray[np.uint8], start: int, end: int, first_line: int, n_functions: int, name: str
+    text: NDArray[np.uint8], spans: list[tuple[int, int, int]], n_functions: int, name: str
 ) -> WrittenOrbitals:
-    """Parse [MO], which lies between two offsets. Raises ConversionError with the line."""
+    """Parse the sections [MO]: each lies between two offsets and begins at a line. Raises ConversionError."""
     from qwfx.converters.molden.sections import WrittenOrbitals
 
+    orbitals = [orbital for span in spans for orbital in _orbitals(text, *span)]
+    if not orbitals:
+        raise _bad(name, spans[0][2], "[MO] has no orbitals", "Ene=, Spin=, Occup= and coefficients", "check the file")
+    result = WrittenOrbitals(np.zeros((0, n_functions)), [], [], [], [], 0)
+    for orbital in orbitals:
+        result.lines.append(orbital.line)
+        _heading(orbital.keys, result, name, orbital.line)
+    for spin in ("alpha", "beta"):
+        count = result.spins.count(spin)
+        if count > n_functions:
+            raise _bad(
+                name, orbitals[0].line, f"there are {count} orbitals of the spin {spin} over {n_functions} functions",
+                "at most as many orbitals as functions", "check the flags [5D], [7F], [9G] and the shells",
+            )  # fmt: skip
+    result.coefficients = values = np.zeros((len(orbitals), n_functions))
+    table, bits, slow = power_table(), np.zeros(1, dtype=np.uint64), np.zeros(n_functions, dtype=np.int64)
+    for number, orbital in enumerate(orbitals):
+        seen = np.zeros(n_functions, dtype=np.bool_)
+        row = values[number].view(np.uint64)
+        at, status, n_slow = _coefficients(text, orbital.start, orbital.end, table, bits, row, seen, slow)
+        if status != FINE:
+            _complain(text, at, status, n_functions, name)
+        for position in slow[:n_slow]:
+            function, value = _text_at(text, int(position)).split()[:2]
+            values[number, int(function) - 1] = text_to_float(value.encode("latin-1"))
+        if not np.all(np.abs(values[number]) < LARGEST):
+            found = "a coefficient is too large or not finite"
+            raise _bad(name, orbital.line, found, f"magnitudes below {LARGEST:.0e}", "check how the file was made")
+    first = max(orbitals, key=lambda o: o.end - o.start)
+    result.decimals = _decimals(bytes(text[first.start : first.end][:20_000]).decode("latin-1"))
+    return result
+
+
+def _orbitals(text: NDArray[np.uint8], start: int, end: int, first_line: int) -> Iterator[_Orbital]:
+    """The orbitals of one section. One begins with a heading after coefficients, or with a key that it has already."""
     count = _headings(text, start, end, np.zeros(0, dtype=np.int64))
     offsets = np.zeros(count, dtype=np.int64)
     _headings(text, start, end, offsets)
-    if not count:
-        raise _bad(name, first_line, "[MO] has no orbitals", "Ene=, Spin=, Occup= and coefficients", "check the file")
-    ends = [_end_of_line(text, int(o), end) for o in offsets]
-    # An orbital begins with a heading that has something else than a heading before it.
-    groups: list[list[int]] = []
-    for k in range(count):
-        between = text[ends[k - 1] : offsets[k]] if k else text[:0]
-        if k == 0 or (between > 32).any():
-            groups.append([])
-        groups[-1].append(k)
-    values = np.zeros((len(groups), n_functions))
-    result = WrittenOrbitals(values, [], [], [], [], 0)
-    table, bits, slow = power_table(), np.zeros(1, dtype=np.uint64), np.zeros(n_functions, dtype=np.int64)
-    starts = [int(offsets[group[0]]) for group in groups] + [end]
     line, counted = first_line, start
-    for number, group in enumerate(groups):
-        line += int(np.count_nonzero(text[counted : starts[number]] == 10))
-        counted = starts[number]
-        result.lines.append(line)
-        _heading(text, [(int(offsets[k]), ends[k]) for k in group], result, name, line)
-        seen = np.zeros(n_functions, dtype=np.bool_)
-        row = values[number].view(np.uint64)
-        at, status, n_slow = _coefficients(text, ends[group[-1]], starts[number + 1], table, bits, row, seen, slow)
-        for position in slow[:n_slow]:
-            function, value = _text_at(text, int(position)).split()[:2]
-            values[number, int(function) - 1] = text_to_float(value.encode())
-        if status != FINE:
-            _complain(text, at, status, n_functions, name)
-        if not np.isfinite(values[number]).all():
-            raise _bad(name, line, "a coefficient is not finite", "finite numbers", "check how the file was made")
-    result.decimals = _decimals(bytes(text[ends[groups[0][-1]] : starts[1]]).decode("latin-1"))
-    return result
+    orbital: _Orbital | None = None
+    for offset in offsets.tolist():
+        stop = _end_of_line(text, offset, end)
+        key, _, value = bytes(text[offset:stop]).decode("latin-1").partition("=")
+        key = key.strip().lower()[:3]
+        if orbital is None or key in orbital.keys or (text[orbital.start : offset] > 32).any():
+            if orbital is not None:
+                yield replace(orbital, end=offset)
+            line += int(np.count_nonzero(text[counted:offset] == 10))
+            counted = offset
+            orbital = _Orbital(line, {}, stop, end)
+        orbital.keys[key] = value.strip()
+        orbital = replace(orbital, start=stop)
+    if orbital is not None:
+        yield orbital
 
 
 def _end_of_line(text: NDArray[np.uint8], start: int, end: int) -> int:
@@ -149,21 +183,15 @@ def _complain(text: NDArray[np.uint8], at: int, status: int, n_functions: int, n
     raise _bad(name, _line(text, at), found, expected, remedy)
 
 
-def _heading(
-    text: NDArray[np.uint8], spans: list[tuple[int, int]], result: WrittenOrbitals, name: str, line: int
-) -> None:
-    """Keys of one orbital, in any order and case."""
+def _heading(keys: dict[str, str], result: WrittenOrbitals, name: str, line: int) -> None:
+    """Values of the keys of one orbital."""
     from qwfx.converters.molden.sections import number
 
-    keys: dict[str, str] = {}
-    for begin, end in spans:
-        key, _, value = bytes(text[begin:end]).decode("latin-1").partition("=")
-        keys[key.strip().lower()] = value.strip()
-    spin = keys.get("spin", "alpha").lower()
+    spin = keys.get("spi", "alpha").lower()
     if not spin.startswith(("a", "b")):
-        raise _bad(name, line, f"the spin is {keys['spin']!r}", "Alpha or Beta")
+        raise _bad(name, line, f"the spin is {keys['spi']!r}", "Alpha or Beta")
     result.spins.append("alpha" if spin.startswith("a") else "beta")
-    for key, target, what in (("ene", result.energies, "the energy"), ("occup", result.occupations, "the occupation")):
+    for key, target, what in (("ene", result.energies, "the energy"), ("occ", result.occupations, "the occupation")):
         found = keys.get(key)
         target.append(number(found.split()[0], name, line, what) if found else None)
     result.symmetries.append(keys.get("sym") or None)

@@ -104,7 +104,9 @@ def _orbital_set(molden: Molden, group: OrbitalGroup, matrix: NDArray[np.float64
         return [values[int(r)] for r in group.rows]
 
     energies, symmetries = column(molden.orbitals.energies), column(molden.orbitals.symmetries)
-    without = not group.has_energies or any(e is None for e in energies)
+    # Programs write zeros, or the occupations, where they have no energies.
+    without = not group.has_energies or None in energies or not any(energies)
+    without = without or energies == column(molden.orbitals.occupations)
     return OrbitalSet(
         SPINS[group.name],
         matrix,

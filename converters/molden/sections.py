@@ -15,21 +15,25 @@ from numpy.typing import NDArray
 
 from qwfx.converters.molden.orbital_lines import read_orbitals
 from qwfx.elements import BOHR
-from qwfx.errors import ConversionError, FileError
+from qwfx.errors import ConversionError, FileError, UnsupportedError
 
 __all__ = ["Atom", "GaussianShell", "Molden", "SlaterFunction", "WrittenOrbitals", "parse"]
 
 HEADING = re.compile(rb"[ \t]*\[([^\]\n]+)\][ \t]*([^\n]*)")
 LETTERS = {letter: l for l, letter in enumerate("spdfghi")}
 FLAGS = {
-    "5d": {2: False, 3: False}, "5d7f": {2: False, 3: False}, "5d10f": {2: False, 3: True}, "7f": {3: False},
+    "5d": {2: False}, "5d7f": {2: False, 3: False}, "5d10f": {2: False, 3: True}, "7f": {3: False},
     "9g": {4: False}, "11h": {5: False}, "13i": {6: False}, "6d": {2: True}, "6d10f": {2: True, 3: True},
     "6d7f": {2: True, 3: False}, "10f": {3: True}, "15g": {4: True}, "21h": {5: True},
 }  # fmt: skip
-USED = {"molden format", "title", "atoms", "gto", "sto", "mo", "core", "pseudo", "n_atoms", "charge", *FLAGS}
+USED = {"molden format", "title", "atoms", "gto", "sto", "mo", "core", "pseudo", "nval", "n_atoms", "charge", *FLAGS}
 
 Text: TypeAlias = bytes | mmap.mmap
 MAPPED_ABOVE = PIECE = 1 << 20
+MOST_FUNCTIONS = 30_000
+LARGEST = 1e12
+"""Of any number but a charge or a power, so that no formula overflows."""
+SMALLEST_EXPONENT = 1e-8
 
 
 @dataclass(frozen=True)
@@ -101,7 +105,7 @@ class Molden:
     core: dict[int, int]
     """Atom index -> core electrons, from [Core]."""
     valence: dict[int, int]
-    """Atom index -> valence charge, from [Pseudo]."""
+    """Atom index -> valence charge, from [Pseudo] or [Nval]."""
     skipped: list[str]
     """Sections that were not used, with their numbers of lines."""
     unit: str
@@ -141,17 +145,16 @@ def number(token: str, name: str, line: int, what: str) -> float:
         if match is None:
             raise bad(name, line, f"{what} is {token!r}", "a number") from None
         value = float(f"{match.group(1)}E{match.group(2)}")
-    if not isfinite(value):
-        raise bad(name, line, f"{what} is {token!r}", "a finite number")
+    if not isfinite(value) or abs(value) > LARGEST:
+        raise bad(name, line, f"{what} is {token!r}", f"a number of a magnitude below {LARGEST:.0e}")
     return value
 
 
 def integer(token: str, name: str, line: int, what: str) -> int:
     """A whole number."""
-    try:
-        return int(token)
-    except ValueError:
-        raise bad(name, line, f"{what} is {token!r}", "a whole number") from None
+    if not re.fullmatch(r"[+-]?[0-9]{1,9}", token):
+        raise bad(name, line, f"{what} is {token!r}", "a whole number")
+    return int(token)
 
 
 def parse(path: Path) -> Molden:
@@ -161,7 +164,7 @@ def parse(path: Path) -> Molden:
     sections = _sections(text)
     by_name: dict[str, _Section] = {}
     for section in sections:
-        if section.name in by_name and section.name in ("atoms", "gto", "sto", "mo"):
+        if section.name in by_name and section.name in ("atoms", "gto", "sto"):
             raise bad(name, section.line, f"[{section.name}] is there twice", "one such section")
         by_name.setdefault(section.name, section)
     for needed in ("atoms", "mo"):
@@ -176,16 +179,33 @@ def parse(path: Path) -> Molden:
     slater = _sto(text, by_name["sto"], name, index) if "sto" in by_name else []
     cartesian = _flags(sections, shells, name)
     n_functions = len(slater) + sum(_size(shell.l, cartesian) for shell in shells)
-    mo = by_name["mo"]
-    orbitals = read_orbitals(np.frombuffer(text, np.uint8), mo.start, mo.end, mo.line, n_functions, name)
+    _check_sizes(text, by_name, name, len(atoms), n_functions)
+    spans = [(section.start, section.end, section.line) for section in sections if section.name == "mo"]
+    orbitals = read_orbitals(np.frombuffer(text, np.uint8), spans, n_functions, name)
     return Molden(
         name, _title(text, by_name), atoms, shells, slater, cartesian, orbitals, _core(text, by_name, name, index),
-        _pseudo(text, by_name, name, index), _skipped(text, sections), unit, _sha256(text),
+        _valence(text, by_name, name, atoms, index), _skipped(text, sections), unit, _sha256(text),
     )  # fmt: skip
 
 
 def _size(l: int, cartesian: dict[int, bool]) -> int:
     return (l + 1) * (l + 2) // 2 if cartesian.get(l, False) else 2 * l + 1
+
+
+def _check_sizes(text: Text, by_name: dict[str, _Section], name: str, n_atoms: int, n_functions: int) -> None:
+    announced = _lines(text, by_name["n_atoms"]) if "n_atoms" in by_name else []
+    if announced and integer(announced[0][1][0], name, announced[0][0], "the number of atoms") != n_atoms:
+        raise bad(
+            name, announced[0][0], f"[N_Atoms] says {announced[0][1][0]}, but [Atoms] has {n_atoms} lines",
+            "the same number", "check whether the file is complete",
+        )  # fmt: skip
+    if n_functions > MOST_FUNCTIONS:
+        raise UnsupportedError(
+            f"the file has {n_functions} functions",
+            where=name,
+            expected=f"at most {MOST_FUNCTIONS}, so that their overlap matrix can be held",
+            remedy="convert a smaller calculation",
+        )
 
 
 def _open(path: Path) -> Text:
@@ -261,10 +281,10 @@ def _atoms(text: Text, section: _Section, name: str) -> tuple[list[Atom], str]:
     word = section.argument.strip("() \t\r").lower()
     if word.startswith("ang"):
         scale, unit = 1.0 / BOHR, "angstrom"
-    elif word in ("au", "a.u.", "a.u", "bohr", "bohrs"):
-        scale, unit = 1.0, "bohr"
+    elif not word or word.startswith(("au", "a.u", "bohr", "atomic")):
+        scale, unit = 1.0, "bohr"  # a wrong guess where there is no unit spoils orthonormality
     else:
-        raise bad(name, section.line, f"the unit of [Atoms] is {section.argument!r}", "AU or Angs", "add the unit")
+        raise bad(name, section.line, f"the unit of [Atoms] is {section.argument!r}", "AU or Angs", "correct the unit")
     atoms = []
     for line, tokens in _lines(text, section):
         if len(tokens) < 6:
@@ -318,10 +338,12 @@ def _gto(text: Text, section: _Section, name: str, index: dict[int, int]) -> lis
                 expected = f"primitive {p + 1} of {n}: exponent and coefficient"
                 raise bad(name, at, f"{' '.join(numbers)[:40]!r}", expected)
             table[p] = [number(t, name, at, "an exponent or coefficient") for t in numbers[:columns]]
-            if table[p, 0] <= 0:
+            if scale not in (0.0, 1.0):
+                table[p, 0] *= scale**2
+            if not SMALLEST_EXPONENT < table[p, 0] < LARGEST:
                 raise bad(name, at, f"an exponent is {numbers[0]}", "a positive number")
         k += n
-        exponents = table[:, 0] * (scale**2 if scale not in (0.0, 1.0) else 1.0)
+        exponents = table[:, 0].copy()
         for column, l in enumerate([0, 1] if kind == "sp" else [LETTERS[kind]]):
             shells.append(GaussianShell(atom, l, exponents, table[:, 1 + column].copy(), line))
     if not shells:
@@ -336,7 +358,7 @@ def _sto(text: Text, section: _Section, name: str, index: dict[int, int]) -> lis
             raise bad(name, line, f"the line has {len(tokens)} entries", "atom kx ky kz kr exponent factor")
         powers = [integer(t, name, line, "a power") for t in tokens[1:5]]
         exponent, norm = (number(t, name, line, "a number") for t in tokens[5:7])
-        if exponent <= 0:
+        if exponent <= SMALLEST_EXPONENT:
             raise bad(name, line, f"an exponent is {tokens[5]}", "a positive number")
         if min(powers[:3]) < 0 or sum(powers[:3]) > 6 or powers[3] < 0:
             raise bad(
@@ -361,6 +383,8 @@ def _flags(sections: list[_Section], shells: list[GaussianShell], name: str) -> 
                 found = f"[{section.name}] contradicts an earlier flag"
                 raise bad(name, section.line, found, "one kind of shell per l")
             told[l] = cartesian
+    if any(section.name == "5d" for section in sections):
+        told.setdefault(3, False)  # [5D] is short for [5D7F], unless another flag says what f functions are
     any_spherical = any(not cartesian for cartesian in told.values())
     flags = {}
     for l in range(2, 7):
@@ -386,9 +410,16 @@ def _core(text: Text, by_name: dict[str, _Section], name: str, index: dict[int, 
     return core
 
 
-def _pseudo(text: Text, by_name: dict[str, _Section], name: str, index: dict[int, int]) -> dict[int, int]:
-    """Valence charges by atom: lines ``label number charge`` of [Pseudo]."""
+def _valence(
+    text: Text, by_name: dict[str, _Section], name: str, atoms: list[Atom], index: dict[int, int]
+) -> dict[int, int]:
+    """Valence charges by atom: lines ``label number charge`` of [Pseudo], or ``label charge`` of [Nval]."""
     valence: dict[int, int] = {}
+    for line, tokens in _lines(text, by_name["nval"]) if "nval" in by_name else ():
+        own = [i for i, atom in enumerate(atoms) if atom.label.lower() == tokens[0].lower()]
+        if len(tokens) < 2 or not own:
+            raise bad(name, line, f"{' '.join(tokens)!r}", "the label of an atom and a valence charge")
+        valence |= dict.fromkeys(own, integer(tokens[1], name, line, "the valence charge"))
     for line, tokens in _lines(text, by_name["pseudo"]) if "pseudo" in by_name else ():
         if len(tokens) < 3:
             raise bad(name, line, f"{' '.join(tokens)!r}", "label number valence-charge")
