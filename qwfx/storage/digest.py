@@ -18,7 +18,7 @@ from qwfx.storage.raw import RawFile, open_raw
 
 __all__ = [
     "BLOCK_BYTES", "Digest", "DigestCheck", "DigestMismatch", "Digester", "attributes_digest", "check_digests",
-    "combine", "row_step",
+    "combine", "parts_in_order",
 ]  # fmt: skip
 
 BLOCK_BYTES = 1 << 20
@@ -38,10 +38,20 @@ class Digest:
     blocks: tuple[bytes, ...]
 
 
-def row_step(shape: tuple[int, ...], itemsize: int) -> int:
-    """How many rows along axis 0 make up about `READ_BYTES`."""
-    row = itemsize * int(np.prod(shape[1:], dtype=np.int64)) if shape else itemsize
-    return max(READ_BYTES // max(row, 1), 1)
+def parts_in_order(shape: tuple[int, ...], itemsize: int) -> Iterator[tuple[slice, ...]]:
+    """Parts of about `READ_BYTES` that make up an array of this shape in C order, one after another."""
+    if not shape:
+        yield ()
+        return
+    row = itemsize * int(np.prod(shape[1:], dtype=np.int64))
+    if row > READ_BYTES and len(shape) > 1:
+        for k in range(shape[0]):
+            for part in parts_in_order(shape[1:], itemsize):
+                yield (slice(k, k + 1), *part)
+        return
+    step = max(READ_BYTES // max(row, 1), 1)
+    for start in range(0, shape[0], step):
+        yield (slice(start, min(start + step, shape[0])), *(slice(0, n) for n in shape[1:]))
 
 
 def canonical(array: NDArray[Any], width: int | None = None) -> NDArray[Any]:
@@ -175,20 +185,15 @@ def _left_out(path: str) -> bool:
 
 def _dataset_digest(file: RawFile, name: str, block: int, pool: ThreadPoolExecutor) -> tuple[Digest, int]:
     shape = file.shape(name)
-    step = None if not shape else row_step(shape, file.itemsize(name))
-    pieces = [(0, 0)] if step is None else [(s, min(s + step, shape[0])) for s in range(0, shape[0], step)]
-
-    def piece(start: int, stop: int) -> NDArray[Any]:
-        return file.read_stored(name) if step is None else file.read_stored(name, start, stop)
-
+    parts = list(parts_in_order(shape, file.itemsize(name)))
     width = None
     if file.is_text(name):
-        longest = (int(np.char.str_len(p).max(initial=0)) for p in (piece(*ends) for ends in pieces) if p.size)
+        longest = (int(np.char.str_len(file.read_stored(name, part)).max(initial=0)) for part in parts)
         width = max(max(longest, default=0), 1)
     digester = Digester(name, spelling(file.dtype(name), width), shape, pool, block)
     size = 0
-    for ends in pieces:
-        data = canonical(piece(*ends), width)
+    for part in parts:
+        data = canonical(file.read_stored(name, part), width)
         size += data.nbytes
         digester.feed(data)
     return digester.finish(), size

@@ -106,13 +106,12 @@ class RawFile:
             array = np.asarray(self._file[name][(slice(None),) * axis + (slice(start, stop),) if sliced else ()])
         return texts(array, f"{self.path}:{name}") if array.dtype.kind == "S" else native(array)
 
-    def read_stored(self, member: str, start: int | None = None, stop: int | None = None) -> NDArray[Any]:
-        """As `read`, but text as the bytes that are stored."""
-        entry = self._dataset_entry(member)
+    def read_stored(self, member: str, part: tuple[slice, ...]) -> NDArray[Any]:
+        """A part of a dataset, text as the bytes that are stored."""
+        self._dataset_entry(member)
         name = self._absolute(member)
-        sliced = entry.shape and (start is not None or stop is not None)
         with damage(self.path, name):
-            return native(np.asarray(self._file[name][slice(start, stop) if sliced else ()]))
+            return native(np.asarray(self._file[name][part]))
 
     def datasets(self) -> tuple[str, ...]:
         """Paths of all datasets, sorted."""

@@ -26,7 +26,7 @@ from qwfx.storage.digest import (
     attributes_digest,
     canonical,
     combine,
-    row_step,
+    parts_in_order,
     spelling,
 )
 from qwfx.storage.members import GROUPS, Kind
@@ -107,20 +107,20 @@ class _Sink:
         if dtype.kind not in "iufcS" or dtype.itemsize == 0:
             raise self.bad(path, f"holds {dtype}", "numbers or text")
         shape = tuple(int(n) for n in array.shape)
-        step = row_step(shape, dtype.itemsize)
         width = dtype.itemsize if dtype.kind == "S" else None
         digester = Digester(path, spelling(dtype, width), shape, self.pool, BLOCK_BYTES)
         target = None
-        for start in range(0, shape[0], step) if shape else (0,):
-            piece = np.asarray(array[start : start + step] if shape else array)
-            cast = self.cast(piece, dtype, path)
+        total, done = max(int(np.prod(shape, dtype=np.int64)), 1), 0
+        for part in parts_in_order(shape, dtype.itemsize):
+            cast = self.cast(np.asarray(array[part] if shape else array), dtype, path)
             if self.file is not None:
                 if target is None:
                     target = create(self.file, path, shape, dtype, cast)
-                target[(slice(start, start + len(cast)) if shape else ())] = cast
+                target[part] = cast
             digester.feed(canonical(cast, width))
-            if self.progress and shape:
-                self.progress(f"writing {path}", min((start + step) / shape[0], 1.0))
+            done += cast.size
+            if self.progress:
+                self.progress(f"writing {path}", done / total)
         if target is None and self.file is not None:
             create(self.file, path, shape, dtype, np.empty(shape, dtype))
         self.digests.append(digester.finish())
@@ -154,12 +154,12 @@ def create(file: h5py.File, path: str, shape: tuple[int, ...], dtype: np.dtype[A
     size = dtype.itemsize * int(np.prod(shape, dtype=np.int64))
     if size <= COMPRESS_ABOVE or not shrinks(sample):
         return file.create_dataset(path, shape=shape, dtype=stored)
-    row = size // shape[0]
-    if row > 4 * CHUNK_BYTES and len(shape) > 1:
-        chunk = (1, *(min(n, 1 << 16) for n in shape[1:]))
-    else:
-        chunk = (min(max(CHUNK_BYTES // max(row, 1), 1), shape[0]), *shape[1:])
-    return file.create_dataset(path, shape=shape, dtype=stored, chunks=chunk, shuffle=True, compression=1)
+    chunk: list[int] = []
+    room = CHUNK_BYTES // dtype.itemsize
+    for extent in reversed(shape):  # the last axes whole, the first as far as there is room
+        chunk.insert(0, min(extent, max(room, 1)))
+        room //= chunk[0]
+    return file.create_dataset(path, shape=shape, dtype=stored, chunks=tuple(chunk), shuffle=True, compression=1)
 
 
 def shrinks(sample: NDArray[Any]) -> bool:

@@ -288,3 +288,21 @@ def test_storage_imports_nothing_heavy() -> None:
     code = "import sys, qwfx.storage; print(*sys.modules)"
     done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True)
     assert {"scipy", "numba", "pyscf", "jsonschema"}.isdisjoint(done.stdout.split())
+
+
+def test_one_long_row_is_written_and_digested_in_parts(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    from qwfx.storage import digest as digest_module
+
+    matrix = np.random.default_rng(5).normal(size=(2, 3, 5000))
+    path = tmp_path / "x.qwfx"
+    densities = model.Densities({"both": matrix.reshape(2, 3, 5000)}, {})
+    wavefunction = dataclasses.replace(plain(), densities=densities)
+    whole = content_digest(wavefunction)
+    monkeypatch.setattr(digest_module, "READ_BYTES", 9000)
+    parts = list(digest_module.parts_in_order(matrix.shape, 8))
+    assert max(np.prod([p.stop - p.start for p in part]) * 8 for part in parts) <= 9000
+    assert np.array_equal(np.concatenate([matrix[part].ravel() for part in parts]), matrix.ravel())
+    save(wavefunction, path)
+    assert check_digests(path).sound
+    assert check_digests(path).content_digest_stored == whole
+    assert np.array_equal(np.asarray(load(path, lazy_above=0).densities.one_body["both"]), matrix)
