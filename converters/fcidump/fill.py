@@ -73,6 +73,14 @@ class Filled:
         return part
 
 
+    def at(self, position: NDArray[np.int64]) -> NDArray[Any]:
+        """Elements of the flat vector."""
+        if self.index is None:
+            return np.asarray(self.values[position])
+        place = np.minimum(np.searchsorted(self.index, position), len(self.index) - 1)
+        return np.where(self.index[place] == position, self.values[place], 0.0)
+
+
 @dataclass
 class _Located:
     records: Records

@@ -2,16 +2,24 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from qwfx.converters.fcidump.header import Header
 from qwfx.converters.fcidump.records import Source
 from qwfx.converters.fcidump.store import BLOCK_CORE, BLOCKS, INTERLEAVED, RESTRICTED, Places
 from qwfx.errors import ConversionError
+from qwfx.kernels.packing import positions
 
-__all__ = ["Layout", "Survey", "choose_layout", "survey"]
+__all__ = ["Layout", "Survey", "choose_layout", "looks_interleaved", "survey"]
+
+
+SOME_EXCHANGE = 1e-6
+"""hartree; models with repulsion on the sites alone have no exchange integrals at all, and stay spin-restricted."""
 
 
 @dataclass(frozen=True)
@@ -100,3 +108,20 @@ def choose_layout(header: Header, seen: Survey, source: Source) -> Layout:
         notes.insert(0, f"spin-resolved, spin orbitals interleaved; NORB = {n} counts {counted}")
         return Layout(Places(n // 2 if spin_orbitals else n, INTERLEAVED, is_complex), False, tuple(notes))
     return Layout(Places(n, RESTRICTED, is_complex), False, tuple(notes))
+
+
+def looks_interleaved(places: Places, at: Callable[[NDArray[np.int64]], NDArray[Any]]) -> bool:
+    """Whether integrals that were read as spin-restricted are over interleaved spin orbitals; `at` looks them up.
+
+    The exchange integral (pq|qp) of two orbitals in space is the self-repulsion of a charge distribution: positive.
+    Between spin orbitals of unlike spins there is none. So it is spin orbitals if it is there within the odd ones or
+    within the even ones, and nowhere between odd and even ones.
+    """
+    n = places.n
+    if places.kind != RESTRICTED or n % 2 or n < 4:
+        return False
+    p, q = np.tril_indices(n, -1)
+    place = positions(places.packing("both")[0], n, np.stack([p, q, q, p], axis=1), True)
+    exchange = np.abs(at(place + places.offsets[2]))
+    unlike = (p - q) % 2 == 1
+    return bool(exchange[~unlike].max() > SOME_EXCHANGE) and not exchange[unlike].any()

@@ -14,9 +14,9 @@ from qwfx._version import __version__
 from qwfx.converters.fcidump import integrals
 from qwfx.converters.fcidump.fill import Filled, fill
 from qwfx.converters.fcidump.header import LARGEST, LONGEST, Header, read_header
-from qwfx.converters.fcidump.layout import Layout, choose_layout, survey
+from qwfx.converters.fcidump.layout import Layout, choose_layout, looks_interleaved, survey
 from qwfx.converters.fcidump.records import PIECE, Source, compiled
-from qwfx.converters.fcidump.store import BLOCK_CORE, BLOCKS, RESTRICTED, Places
+from qwfx.converters.fcidump.store import BLOCK_CORE, BLOCKS, INTERLEAVED, RESTRICTED, Places
 from qwfx.converters.fcidump.symmetry import symmetry_of
 from qwfx.converters.plugin import Progress, Reading
 from qwfx.errors import ConversionError, UnsupportedError
@@ -35,6 +35,8 @@ def read(path: Path, options: Mapping[str, str], progress: Progress | None = Non
     if progress and not compiled():
         progress("compiling the parser of records (once)", 0.0)
     layout, filled = _integrals(source, header, progress)
+    if not {"UHF", "IUHF"} & header.lines.keys() and looks_interleaved(layout.places, filled.at):
+        layout, filled = _interleaved(source, layout, filled, progress)
     _check_complete(source, layout, filled, options.get("accept-incomplete", "no") == "yes")
     places = layout.places
     n_up, n_down, spin_notes = _electrons(header, layout, source.name)
@@ -123,6 +125,25 @@ def _with_survey(
     filled = fill(source, layout, progress)
     assert filled is not None
     return layout, filled
+
+
+def _interleaved(
+    source: Source, layout: Layout, filled: Filled, progress: Progress | None
+) -> tuple[Layout, Filled]:
+    """Read once more as interleaved spin orbitals; what was read stays if that does not fit."""
+    n = layout.places.n
+    note = (
+        f"no UHF in the namelist, but no exchange integral between odd and even orbitals: read as spin-resolved, spin "
+        f"orbitals interleaved; NORB = {n} counts spin orbitals (UHF=.FALSE. in the namelist prevents that)"
+    )
+    places = Places(n // 2, INTERLEAVED, layout.places.is_complex)
+    other = Layout(places, False, (note, *layout.notes))
+    try:
+        again = fill(source, other, progress)
+    except ConversionError:  # a pair joins odd and even orbitals: orbitals in space after all
+        return layout, filled
+    assert again is not None
+    return other, again
 
 
 def _spatial(header: Header, source: Source) -> int:

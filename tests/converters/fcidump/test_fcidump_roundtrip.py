@@ -159,6 +159,36 @@ def test_blocks_are_told_without_the_key(tmp_path: Path) -> None:
     assert_same(h, reading.wavefunction.hamiltonian)
 
 
+@pytest.mark.parametrize("is_complex", [False, True])
+def test_spin_orbitals_are_told_without_the_key(tmp_path: Path, is_complex: bool) -> None:
+    """By the lack of exchange integrals between odd and even orbitals; UHF=.FALSE. has the last word."""
+    h = hamiltonian(1, 3, True, is_complex, 0.0, False)
+    path = tmp_path / "x.fcidump"
+    converter.write(wrap(h), path, {"threshold": "0"})
+    text = path.read_text()
+    path.write_text(text.replace("  UHF=.TRUE.,\n", ""))
+    reading = converter.read(path, {})
+    assert any("no exchange integral between odd and even orbitals" in note for note in reading.notes)
+    assert reading.wavefunction.hamiltonian is not None
+    assert_same(h, reading.wavefunction.hamiltonian)
+    path.write_text(text.replace("UHF=.TRUE.", "UHF=.FALSE."))
+    restricted = converter.read(path, {}).wavefunction.hamiltonian
+    assert restricted is not None
+    assert not restricted.spin_resolved
+    assert restricted.n_orbitals == 6
+
+
+def test_a_model_without_exchange_stays_spin_restricted(tmp_path: Path) -> None:
+    """Repulsion on four sites, hopping between neighbours."""
+    sites = "".join(f"4.0 {i} {i} {i} {i}\n" for i in range(1, 5))
+    path = tmp_path / "x.fcidump"
+    path.write_text(f"&FCI NORB=4,NELEC=4,MS2=0 /\n{sites}-1 1 2 0 0\n-1 2 3 0 0\n-1 3 4 0 0\n-1 4 1 0 0\n0 0 0 0 0\n")
+    h = converter.read(path, {}).wavefunction.hamiltonian
+    assert h is not None
+    assert not h.spin_resolved
+    assert h.n_orbitals == 4
+
+
 def test_norb_of_spatial_orbitals_with_spin_indices(tmp_path: Path) -> None:
     h = hamiltonian(2, 3, True, False, 0.0, False)
     path = tmp_path / "x.fcidump"
