@@ -35,7 +35,8 @@ def read(path: Path, options: Mapping[str, str], progress: Progress | None = Non
     if progress and not compiled():
         progress("compiling the parser of records (once)", 0.0)
     layout, filled = _integrals(source, header, progress)
-    if not {"UHF", "IUHF"} & header.lines.keys() and looks_interleaved(layout.places, filled.at):
+    silent = not {"UHF", "IUHF"} & header.lines.keys() and header.n_electrons <= header.n_orbitals
+    if silent and looks_interleaved(layout.places, filled.at):
         layout, filled = _interleaved(source, layout, filled, progress)
     _check_complete(source, layout, filled, options.get("accept-incomplete", "no") == "yes")
     places = layout.places

@@ -174,6 +174,7 @@ def test_spin_orbitals_are_told_without_the_key(tmp_path: Path, is_complex: bool
     path.write_text(text.replace("UHF=.TRUE.", "UHF=.FALSE."))
     restricted = converter.read(path, {}).wavefunction.hamiltonian
     assert restricted is not None
+    assert_same(restricted, through(restricted, tmp_path / "y.fcidump"))
     assert not restricted.spin_resolved
     assert restricted.n_orbitals == 6
 
