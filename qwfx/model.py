@@ -276,7 +276,7 @@ class Densities:
     one_body: Mapping[str, Array] = field(default_factory=dict)
     """spin (``both``, ``up``, ``down``) -> (states, n, n), ``gamma_pq = <p+ q>``."""
     two_body: Mapping[str, Array] = field(default_factory=dict)
-    """spin pair (``both``, ``up_up``, ``up_down``, ``down_down``) -> (states, n, n, n, n): ``<p+ r+ s q>``, [p,q,r,s]."""
+    """spin pair (``both``, ``up_up``, ``up_down``, ``down_down``) -> (states, n, n, n, n): ``<p+ r+ s q>`` at pqrs."""
 
 
 @dataclass(frozen=True, eq=False)
