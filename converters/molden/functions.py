@@ -14,28 +14,32 @@ from qwfx.converters.molden.slater import slater_basis
 from qwfx.kernels import overlap
 from qwfx.model import Basis
 from qwfx.reference.harmonics import monomial_powers
-from qwfx.reference.norms import gaussian_norm, monomial_norm
+from qwfx.reference.norms import gaussian_norm, monomial_norm, self_overlaps
 
 __all__ = ["Trial", "in_our_order"]
 
 
-def in_our_order(molden: Molden, coefficients: NDArray[np.float64]) -> NDArray[np.float64]:
-    """(M, F) orbitals in the order of the format; `coefficients` (M, F') are in the file's order."""
+def in_our_order(molden: Molden, rows: NDArray[np.int64]) -> NDArray[np.float64]:
+    """(M, F) some orbitals of the file in the order of functions of the format."""
+    coefficients = molden.orbitals.coefficients
     if molden.slater:
         basis, place, _ = slater_basis(molden)
-        matrix = np.zeros((len(coefficients), basis.n_functions))
-        matrix[:, place] = coefficients
+        matrix = np.zeros((len(rows), basis.n_functions))
+        matrix[:, place] = coefficients[rows]
         return matrix
     parts, start = [np.zeros(0, dtype=np.int64)], 0
     for shell in molden.shells:
         own = shell_order(shell.l, _monomial(molden, shell.l))
         parts.append(start + own)
         start += len(own)
-    return np.asarray(coefficients[:, np.concatenate(parts)])
+    return np.asarray(coefficients[np.ix_(rows, np.concatenate(parts))])
 
 
 class Trial:
-    """One way of forming primitives, with its overlap matrix; the readings scale rows and columns of it."""
+    """One way of forming primitives, with its overlap matrix; the readings scale rows and columns of it.
+
+    The matrix is computed when it is asked for and was not kept.
+    """
 
     def __init__(self, molden: Molden, positions: NDArray[np.float64], factors_included: bool) -> None:
         self.slater = bool(molden.slater)
@@ -44,10 +48,22 @@ class Trial:
         else:
             self.basis = _basis(molden, factors_included)
             self.components = _component_factors(self.basis)
-        self.overlap = overlap(self.basis, positions)
+        self.positions = positions
+        self._overlap: NDArray[np.float64] | None = None
         self.signs = _reversed_signs(self.basis)
-        diagonal = np.diag(self.overlap)
+        diagonal = self_overlaps(self.basis)
         self.lengths = np.sqrt(np.where(diagonal > 0, diagonal, 1.0))
+
+    @property
+    def overlap(self) -> NDArray[np.float64]:
+        """(F, F)."""
+        if self._overlap is None:
+            self._overlap = overlap(self.basis, self.positions)
+        return self._overlap
+
+    def release(self) -> None:
+        """Forget the overlap matrix."""
+        self._overlap = None
 
     def _per_shell(self, normalised: bool) -> NDArray[np.float64]:
         # The first function of a monomial shell is x^l; all functions of a solid shell have the same norm.

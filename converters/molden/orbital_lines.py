@@ -10,8 +10,8 @@ import numpy as np
 from numba import njit
 from numpy.typing import NDArray
 
+from qwfx.converters.molden.text import LARGEST, bad, number
 from qwfx.converters.numbers import JIT, NOT_A_NUMBER, UNDECIDED, number_at, power_table, text_to_float
-from qwfx.errors import ConversionError
 
 if TYPE_CHECKING:
     from qwfx.converters.molden.sections import WrittenOrbitals
@@ -19,9 +19,6 @@ if TYPE_CHECKING:
 __all__ = ["read_orbitals"]
 
 FINE, BAD_INDEX, BAD_VALUE, OUT_OF_RANGE, MORE, TWICE = range(6)
-
-
-LARGEST = 1e12
 
 
 @dataclass(frozen=True)
@@ -98,10 +95,6 @@ def _text_at(text: NDArray[np.uint8], position: int) -> str:
     return bytes(text[position:end]).decode("latin-1").strip()
 
 
-def _bad(name: str, line: int, found: str, expected: str, remedy: str = "mend the line") -> ConversionError:
-    return ConversionError(found, where=f"{name}:{line}", expected=expected, remedy=remedy)
-
-
 def read_orbitals(
     text: NDArray[np.uint8], spans: list[tuple[int, int, int]], n_functions: int, name: str
 ) -> WrittenOrbitals:
@@ -110,7 +103,7 @@ def read_orbitals(
 
     orbitals = [orbital for span in spans for orbital in _orbitals(text, *span)]
     if not orbitals:
-        raise _bad(name, spans[0][2], "[MO] has no orbitals", "Ene=, Spin=, Occup= and coefficients", "check the file")
+        raise bad(name, spans[0][2], "[MO] has no orbitals", "Ene=, Spin=, Occup= and coefficients", "check the file")
     result = WrittenOrbitals(np.zeros((0, n_functions)), [], [], [], [], 0)
     for orbital in orbitals:
         result.lines.append(orbital.line)
@@ -118,24 +111,24 @@ def read_orbitals(
     for spin in ("alpha", "beta"):
         count = result.spins.count(spin)
         if count > n_functions:
-            raise _bad(
+            raise bad(
                 name, orbitals[0].line, f"there are {count} orbitals of the spin {spin} over {n_functions} functions",
                 "at most as many orbitals as functions", "check the flags [5D], [7F], [9G] and the shells",
             )  # fmt: skip
     result.coefficients = values = np.zeros((len(orbitals), n_functions))
     table, bits, slow = power_table(), np.zeros(1, dtype=np.uint64), np.zeros(n_functions, dtype=np.int64)
-    for number, orbital in enumerate(orbitals):
+    for place, orbital in enumerate(orbitals):
         seen = np.zeros(n_functions, dtype=np.bool_)
-        row = values[number].view(np.uint64)
+        row = values[place].view(np.uint64)
         at, status, n_slow = _coefficients(text, orbital.start, orbital.end, table, bits, row, seen, slow)
         if status != FINE:
             _complain(text, at, status, n_functions, name)
         for position in slow[:n_slow]:
             function, value = _text_at(text, int(position)).split()[:2]
-            values[number, int(function) - 1] = text_to_float(value.encode("latin-1"))
-        if not np.all(np.abs(values[number]) < LARGEST):
+            values[place, int(function) - 1] = text_to_float(value.encode("latin-1"))
+        if not np.all(np.abs(values[place]) < LARGEST):
             found = "a coefficient is too large or not finite"
-            raise _bad(name, orbital.line, found, f"magnitudes below {LARGEST:.0e}", "check how the file was made")
+            raise bad(name, orbital.line, found, f"magnitudes below {LARGEST:.0e}", "check how the file was made")
     first = max(orbitals, key=lambda o: o.end - o.start)
     result.decimals = _decimals(bytes(text[first.start : first.end][:20_000]).decode("latin-1"))
     return result
@@ -180,16 +173,14 @@ def _complain(text: NDArray[np.uint8], at: int, status: int, n_functions: int, n
         TWICE: (f"a second coefficient of function {shown.split()[0]}", "one for each function"),
     }[status]
     remedy = "check the flags [5D], [7F], [9G] and the shells" if status == OUT_OF_RANGE else "mend the line"
-    raise _bad(name, _line(text, at), found, expected, remedy)
+    raise bad(name, _line(text, at), found, expected, remedy)
 
 
 def _heading(keys: dict[str, str], result: WrittenOrbitals, name: str, line: int) -> None:
     """Values of the keys of one orbital."""
-    from qwfx.converters.molden.sections import number
-
     spin = keys.get("spi", "alpha").lower()
     if not spin.startswith(("a", "b")):
-        raise _bad(name, line, f"the spin is {keys['spi']!r}", "Alpha or Beta")
+        raise bad(name, line, f"the spin is {keys['spi']!r}", "Alpha or Beta")
     result.spins.append("alpha" if spin.startswith("a") else "beta")
     for key, target, what in (("ene", result.energies, "the energy"), ("occ", result.occupations, "the occupation")):
         found = keys.get(key)

@@ -91,7 +91,7 @@ def _functions(
     molden: Molden, positions: NDArray[np.float64], groups: list[OrbitalGroup], options: Mapping[str, str]
 ) -> tuple[list[NDArray[np.float64]], Choice]:
     """The orbitals of each group over the basis of the chosen reading."""
-    sets = [in_our_order(molden, molden.orbitals.coefficients[group.rows]) for group in groups]
+    sets = [in_our_order(molden, group.rows) for group in groups]
     choice = choose(molden, positions, sets, options.get("reading"), options.get("signs"))
     if not np.all(choice.factors == 1.0):
         for matrix in sets:

@@ -94,7 +94,7 @@ class _Candidate:
         """Largest deviation of some rows of C S C+ from 1, S over the functions of this reading."""
         self.residual = 0.0
         for matrix, own in zip(self.sets, rows, strict=True):
-            for part in np.array_split(own, max(1, len(own) // 256)):
+            for part in np.array_split(own, max(1, len(own) // 128)):
                 gram = ((matrix[part] * self.scale) @ self.trial.overlap * self.scale) @ matrix.T
                 gram[np.arange(len(part)), part] -= 1.0
                 deviation = float(np.abs(gram).max(initial=0.0))
@@ -119,27 +119,26 @@ def choose(
 
     Raises ConversionError if none fits, or several that are not the same to the printed digits.
     """
-    trials: dict[bool, Trial] = {}
     rng = np.random.default_rng(0)
     samples = [np.sort(rng.permutation(len(c))[:SAMPLE]) for c in sets]
     wanted = [READINGS[named]] if named else list(READINGS.values())
     if molden.slater:
         wanted = [r for r in wanted if not r.factors_included and not r.shared] or wanted
+    trials = {kind: Trial(molden, positions, kind) for kind in sorted({r.factors_included for r in wanted})}
     tried: list[_Candidate] = []
+    tolerance = FLOOR
     with np.errstate(all="ignore"):
         for reversed_signs in [signs == SIGNS[1]] if signs else [False, True]:
             if reversed_signs and not any(s.l > 2 and not molden.cartesian[s.l] for s in molden.shells):
                 continue
-            for reading in wanted:
-                if reading.factors_included not in trials:
-                    trials[reading.factors_included] = Trial(molden, positions, reading.factors_included)
-                trial = trials[reading.factors_included]
-                candidate = _Candidate(replace(reading, reversed_signs=reversed_signs), trial, sets)
-                twin = next((c for c in tried if c.trial is trial and np.array_equal(c.scale, candidate.scale)), None)
-                if twin is None or named:
-                    candidate.measure(samples)
-                    tried.append(candidate)
-            tolerance = _tolerance(molden, tried[0], samples) if tried else FLOOR
+            for kind, trial in trials.items():
+                for reading in (r for r in wanted if r.factors_included == kind):
+                    candidate = _Candidate(replace(reading, reversed_signs=reversed_signs), trial, sets)
+                    if not any(c.trial is trial and np.array_equal(c.scale, candidate.scale) for c in tried):
+                        candidate.measure(samples)
+                        tolerance = tolerance if tried else _tolerance(molden, candidate, samples)
+                        tried.append(candidate)
+                trial.release()  # only one matrix at a time: it takes less time to compute than it takes memory
             if any(c.residual <= tolerance for c in tried):
                 break  # unusual signs are tried only where usual ones do not fit
         every = [np.arange(len(c)) for c in sets]
@@ -205,7 +204,7 @@ def _distance(one: _Candidate, other: _Candidate) -> float:
     """Largest change of an orbital, as a fraction of its functions' size, if one reading replaces another."""
     lengths = np.diff(one.trial.basis.primitive_start)
     weight = np.max([np.abs(c).max(axis=0, initial=0.0) for c in one.sets], axis=0)
-    weight = weight * np.abs(one.scale) * np.sqrt(np.abs(np.diag(one.trial.overlap)))
+    weight = weight * np.abs(one.scale) * one.trial.lengths
     first = one.trial.basis.primitive_start[:-1].astype(np.intp)
     a, b = one.trial.basis.coefficients, other.trial.basis.coefficients
     worst = 0.0

@@ -2,24 +2,30 @@
 
 from __future__ import annotations
 
-import hashlib
-import mmap
-import re
-from collections.abc import Iterator
 from dataclasses import dataclass, field
 from pathlib import Path
-from typing import TypeAlias
 
 import numpy as np
 from numpy.typing import NDArray
 
 from qwfx.converters.molden.orbital_lines import read_orbitals
+from qwfx.converters.molden.text import (
+    LARGEST,
+    Section,
+    Text,
+    bad,
+    integer,
+    lines,
+    number,
+    open_text,
+    sha256,
+    split_sections,
+)  # fmt: skip
 from qwfx.elements import BOHR
-from qwfx.errors import ConversionError, FileError, UnsupportedError
+from qwfx.errors import UnsupportedError
 
 __all__ = ["Atom", "GaussianShell", "Molden", "SlaterFunction", "WrittenOrbitals", "parse"]
 
-HEADING = re.compile(rb"[ \t]*\[([^\]\n]+)\][ \t]*([^\n]*)")
 LETTERS = {letter: l for l, letter in enumerate("spdfghi")}
 FLAGS = {
     "5d": {2: False}, "5d7f": {2: False, 3: False}, "5d10f": {2: False, 3: True}, "7f": {3: False},
@@ -28,11 +34,7 @@ FLAGS = {
 }  # fmt: skip
 USED = {"molden format", "title", "atoms", "gto", "sto", "mo", "core", "pseudo", "nval", "n_atoms", "charge", *FLAGS}
 
-Text: TypeAlias = bytes | mmap.mmap
-MAPPED_ABOVE = PIECE = 1 << 20
 MOST_FUNCTIONS = 30_000
-LARGEST = 1e12
-"""Of any number but a charge or a power, so that no formula overflows."""
 SMALLEST_EXPONENT = 1e-8
 
 
@@ -118,51 +120,12 @@ class Molden:
         return len(self.slater) + sum(_size(shell.l, self.cartesian) for shell in self.shells)
 
 
-@dataclass(frozen=True)
-class _Section:
-    name: str
-    argument: str
-    start: int
-    end: int
-    line: int
-    """Line of the heading, from 1."""
-
-
-def bad(name: str, line: int, found: str, expected: str, remedy: str = "mend the line") -> ConversionError:
-    """An error at a line of a file."""
-    return ConversionError(found, where=f"{name}:{line}", expected=expected, remedy=remedy)
-
-
-def number(token: str, name: str, line: int, what: str) -> float:
-    """A number, with D or E or no letter before the exponent; finite."""
-    from math import isfinite
-
-    text = token.upper().replace("D", "E")
-    try:
-        value = float(text)
-    except ValueError:
-        match = re.fullmatch(r"([+-]?[\d.]+)([+-]\d+)", text)
-        if match is None:
-            raise bad(name, line, f"{what} is {token!r}", "a number") from None
-        value = float(f"{match.group(1)}E{match.group(2)}")
-    if not isfinite(value) or abs(value) > LARGEST:
-        raise bad(name, line, f"{what} is {token!r}", f"a number of a magnitude below {LARGEST:.0e}")
-    return value
-
-
-def integer(token: str, name: str, line: int, what: str) -> int:
-    """A whole number."""
-    if not re.fullmatch(r"[+-]?[0-9]{1,9}", token):
-        raise bad(name, line, f"{what} is {token!r}", "a whole number")
-    return int(token)
-
-
 def parse(path: Path) -> Molden:
     """Read `path`. Raises FileError, ConversionError with the line."""
     name = str(path)
-    text = _open(path)
-    sections = _sections(text)
-    by_name: dict[str, _Section] = {}
+    text = open_text(path)
+    sections = split_sections(text)
+    by_name: dict[str, Section] = {}
     for section in sections:
         if section.name in by_name and section.name in ("atoms", "gto", "sto"):
             raise bad(name, section.line, f"[{section.name}] is there twice", "one such section")
@@ -184,7 +147,7 @@ def parse(path: Path) -> Molden:
     orbitals = read_orbitals(np.frombuffer(text, np.uint8), spans, n_functions, name)
     return Molden(
         name, _title(text, by_name), atoms, shells, slater, cartesian, orbitals, _core(text, by_name, name, index),
-        _valence(text, by_name, name, atoms, index), _skipped(text, sections), unit, _sha256(text),
+        _valence(text, by_name, name, atoms, index), _skipped(text, sections), unit, sha256(text),
     )  # fmt: skip
 
 
@@ -192,8 +155,8 @@ def _size(l: int, cartesian: dict[int, bool]) -> int:
     return (l + 1) * (l + 2) // 2 if cartesian.get(l, False) else 2 * l + 1
 
 
-def _check_sizes(text: Text, by_name: dict[str, _Section], name: str, n_atoms: int, n_functions: int) -> None:
-    announced = _lines(text, by_name["n_atoms"]) if "n_atoms" in by_name else []
+def _check_sizes(text: Text, by_name: dict[str, Section], name: str, n_atoms: int, n_functions: int) -> None:
+    announced = lines(text, by_name["n_atoms"]) if "n_atoms" in by_name else []
     if announced and integer(announced[0][1][0], name, announced[0][0], "the number of atoms") != n_atoms:
         raise bad(
             name, announced[0][0], f"[N_Atoms] says {announced[0][1][0]}, but [Atoms] has {n_atoms} lines",
@@ -208,76 +171,13 @@ def _check_sizes(text: Text, by_name: dict[str, _Section], name: str, n_atoms: i
         )
 
 
-def _open(path: Path) -> Text:
-    """The bytes of a file; those of a large one stay on the disk, so that they are not held beside the numbers."""
-    try:
-        with open(path, "rb") as stream:
-            if stream.seek(0, 2) > MAPPED_ABOVE:
-                text: Text = mmap.mmap(stream.fileno(), 0, access=mmap.ACCESS_READ)
-            else:
-                stream.seek(0)
-                text = stream.read()
-    except OSError as error:
-        raise FileError(
-            f"cannot be read ({error.strerror or error})",
-            where=str(path),
-            expected="a readable file",
-            remedy="check the path and the permissions",
-        ) from None
-    if text.find(b"\n") < 0 <= text.find(b"\r"):
-        return text[:].replace(b"\r", b"\n")  # lines that end with a carriage return alone
-    return text
-
-
-def _find_headings(text: Text) -> Iterator[re.Match[bytes]]:
-    """Headings in order: every bracket that begins a line (looked for first, since files are long and these few)."""
-    at = text.find(b"[")
-    while at >= 0:
-        match = HEADING.match(text, text.rfind(b"\n", 0, at) + 1)
-        if match is not None and match.start(1) == at + 1:
-            yield match
-        at = text.find(b"[", at + 1)
-
-
-def _count_lines(text: Text, start: int, end: int) -> int:
-    """Line ends between two offsets."""
-    return sum(text[k : min(k + PIECE, end)].count(b"\n") for k in range(start, end, PIECE))
-
-
-def _sections(text: Text) -> list[_Section]:
-    found = list(_find_headings(text))
-    ends = [m.start() for m in found[1:]] + [len(text)]
-    sections, line, seen = [], 1, 0
-    for match, end in zip(found, ends, strict=True):
-        line += _count_lines(text, seen, match.start(1))
-        seen = match.start(1)
-        heading = " ".join(match.group(1).decode("latin-1").lower().split())
-        sections.append(_Section(heading, match.group(2).decode("latin-1").strip(), match.end(), end, line))
-    return sections
-
-
-def _lines(text: Text, section: _Section) -> list[tuple[int, list[str]]]:
-    """(line number, tokens) of the lines of a section that are neither blank nor comments."""
-    rows = text[section.start : section.end].decode("latin-1").split("\n")
-    # The text begins behind the heading: its rest of the line is row 0.
-    split = ((section.line + k, row.split()) for k, row in enumerate(rows) if k)
-    return [(line, tokens) for line, tokens in split if tokens and not tokens[0].startswith("#")]
-
-
-def _title(text: Text, by_name: dict[str, _Section]) -> str:
+def _title(text: Text, by_name: dict[str, Section]) -> str:
     section = by_name.get("title")
     words = b"" if section is None else text[section.start : section.end]
     return " ".join(words.decode("latin-1").split())[:200]
 
 
-def _sha256(text: Text) -> str:
-    digest = hashlib.sha256()
-    for start in range(0, len(text), PIECE):
-        digest.update(text[start : start + PIECE])
-    return digest.hexdigest()
-
-
-def _atoms(text: Text, section: _Section, name: str) -> tuple[list[Atom], str]:
+def _atoms(text: Text, section: Section, name: str) -> tuple[list[Atom], str]:
     word = section.argument.strip("() \t\r").lower()
     if word.startswith("ang"):
         scale, unit = 1.0 / BOHR, "angstrom"
@@ -286,7 +186,7 @@ def _atoms(text: Text, section: _Section, name: str) -> tuple[list[Atom], str]:
     else:
         raise bad(name, section.line, f"the unit of [Atoms] is {section.argument!r}", "AU or Angs", "correct the unit")
     atoms = []
-    for line, tokens in _lines(text, section):
+    for line, tokens in lines(text, section):
         if len(tokens) < 6:
             raise bad(name, line, f"the line has {len(tokens)} entries", "label number charge x y z")
         position = np.array([number(t, name, line, "a coordinate") for t in tokens[3:6]]) * scale
@@ -308,9 +208,9 @@ def _atom_of(token: str, index: dict[int, int], name: str, line: int) -> int:
     return index[wanted]
 
 
-def _gto(text: Text, section: _Section, name: str, index: dict[int, int]) -> list[GaussianShell]:
+def _gto(text: Text, section: Section, name: str, index: dict[int, int]) -> list[GaussianShell]:
     shells: list[GaussianShell] = []
-    rows = _lines(text, section)
+    rows = lines(text, section)
     atom: int | None = None
     k = 0
     while k < len(rows):
@@ -351,9 +251,9 @@ def _gto(text: Text, section: _Section, name: str, index: dict[int, int]) -> lis
     return shells
 
 
-def _sto(text: Text, section: _Section, name: str, index: dict[int, int]) -> list[SlaterFunction]:
+def _sto(text: Text, section: Section, name: str, index: dict[int, int]) -> list[SlaterFunction]:
     functions = []
-    for line, tokens in _lines(text, section):
+    for line, tokens in lines(text, section):
         if len(tokens) < 7:
             raise bad(name, line, f"the line has {len(tokens)} entries", "atom kx ky kz kr exponent factor")
         powers = [integer(t, name, line, "a power") for t in tokens[1:5]]
@@ -374,7 +274,7 @@ def _sto(text: Text, section: _Section, name: str, index: dict[int, int]) -> lis
     return functions
 
 
-def _flags(sections: list[_Section], shells: list[GaussianShell], name: str) -> dict[int, bool]:
+def _flags(sections: list[Section], shells: list[GaussianShell], name: str) -> dict[int, bool]:
     """Which shells are Cartesian: all without a flag, as the format has it; h and i go with the rest of the file."""
     told: dict[int, bool] = {}
     for section in sections:
@@ -399,10 +299,10 @@ def _flags(sections: list[_Section], shells: list[GaussianShell], name: str) -> 
     return flags
 
 
-def _core(text: Text, by_name: dict[str, _Section], name: str, index: dict[int, int]) -> dict[int, int]:
+def _core(text: Text, by_name: dict[str, Section], name: str, index: dict[int, int]) -> dict[int, int]:
     """Core electrons by atom: lines ``number : electrons`` of [Core]."""
     core: dict[int, int] = {}
-    for line, tokens in _lines(text, by_name["core"]) if "core" in by_name else ():
+    for line, tokens in lines(text, by_name["core"]) if "core" in by_name else ():
         parts = " ".join(tokens).replace(":", " ").split()
         if len(parts) < 2:
             raise bad(name, line, f"{' '.join(tokens)!r}", "number : core electrons")
@@ -411,22 +311,22 @@ def _core(text: Text, by_name: dict[str, _Section], name: str, index: dict[int, 
 
 
 def _valence(
-    text: Text, by_name: dict[str, _Section], name: str, atoms: list[Atom], index: dict[int, int]
+    text: Text, by_name: dict[str, Section], name: str, atoms: list[Atom], index: dict[int, int]
 ) -> dict[int, int]:
     """Valence charges by atom: lines ``label number charge`` of [Pseudo], or ``label charge`` of [Nval]."""
     valence: dict[int, int] = {}
-    for line, tokens in _lines(text, by_name["nval"]) if "nval" in by_name else ():
+    for line, tokens in lines(text, by_name["nval"]) if "nval" in by_name else ():
         own = [i for i, atom in enumerate(atoms) if atom.label.lower() == tokens[0].lower()]
         if len(tokens) < 2 or not own:
             raise bad(name, line, f"{' '.join(tokens)!r}", "the label of an atom and a valence charge")
         valence |= dict.fromkeys(own, integer(tokens[1], name, line, "the valence charge"))
-    for line, tokens in _lines(text, by_name["pseudo"]) if "pseudo" in by_name else ():
+    for line, tokens in lines(text, by_name["pseudo"]) if "pseudo" in by_name else ():
         if len(tokens) < 3:
             raise bad(name, line, f"{' '.join(tokens)!r}", "label number valence-charge")
         valence[_atom_of(tokens[1], index, name, line)] = integer(tokens[2], name, line, "the valence charge")
     return valence
 
 
-def _skipped(text: Text, sections: list[_Section]) -> list[str]:
+def _skipped(text: Text, sections: list[Section]) -> list[str]:
     unused = [s for s in sections if s.name not in USED and s.name.replace(" ", "") not in FLAGS]
-    return [f"[{s.name}] ({len(_lines(text, s))} lines)" for s in unused]
+    return [f"[{s.name}] ({len(lines(text, s))} lines)" for s in unused]

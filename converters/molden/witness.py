@@ -19,6 +19,8 @@ from qwfx.model import WitnessOrbitals
 
 __all__ = ["slater_orbitals", "witness_orbitals"]
 
+WITNESSED = ("values", "gradients", "laplacians")
+
 
 def _mole(molden: Molden, cartesian: bool) -> Any:
     """All shells of the file, in its order, as a PySCF molecule of spherical or of Cartesian functions."""
@@ -94,12 +96,11 @@ def witness_orbitals(
         mol = _mole(molden, cartesian)
         order = _shell_order(mol, molden)
         _set_contractions(mol, order, molden, reading)
-        parts.append(orbitals_by_pyscf(mol, _matrix(mol, order, molden, reading, cartesian, rows), points))
-    return WitnessOrbitals(
-        sum((p.values for p in parts[1:]), parts[0].values),
-        sum((p.gradients for p in parts[1:]), parts[0].gradients),
-        sum((p.laplacians for p in parts[1:]), parts[0].laplacians),
-    )
+        matrix = _matrix(mol, order, molden, reading, cartesian, rows)
+        # A few points at a time: PySCF gives ten arrays (points, functions).
+        some = [orbitals_by_pyscf(mol, matrix, points[k : k + 32]) for k in range(0, len(points), 32)]
+        parts.append([np.concatenate([getattr(o, name) for o in some]) for name in WITNESSED])
+    return WitnessOrbitals(*(sum(kinds[1:], kinds[0]) for kinds in zip(*parts, strict=True)))
 
 
 def _shell_order(mol: Any, molden: Molden) -> list[int]:
@@ -129,7 +130,7 @@ def _matrix(
     sizes = [len(_file_labels(s.l, molden.cartesian.get(s.l, False))) for s in molden.shells]
     starts = np.concatenate([[0], np.cumsum(sizes)])
     matrix = np.zeros((mol.nao, len(rows)))
-    norms = np.sqrt(np.diag(mol.intor("int1e_ovlp_cart" if cartesian else "int1e_ovlp_sph")))
+    norms = np.sqrt(np.diag(mol.intor("int1e_ovlp_cart"))) if cartesian else np.ones(mol.nao)
     at = 0
     for k in order:
         l = molden.shells[k].l
