@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import sys
-import time
+import threading
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 
@@ -46,18 +46,17 @@ def progress_line() -> Iterator[Callable[[str, float], None] | None]:
         transient=True,
     )
     task = bar.add_task("", total=1.0)
-    start = time.monotonic()
-    shown = False
+    # A timer and not the first update decides when the line appears: the first phase may be the long one.
+    timer = threading.Timer(SHOW_AFTER, bar.start)
+    timer.daemon = True
+    timer.start()
 
     def update(phase: str, fraction: float) -> None:
-        nonlocal shown
-        if not shown and time.monotonic() - start > SHOW_AFTER:
-            bar.start()
-            shown = True
         bar.update(task, description=phase, completed=min(max(fraction, 0.0), 1.0))
 
     try:
         yield update
     finally:
-        if shown:
-            bar.stop()
+        timer.cancel()
+        timer.join()
+        bar.stop()
