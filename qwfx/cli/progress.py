@@ -9,6 +9,8 @@ from contextlib import contextmanager
 
 __all__ = ["announce_compilation", "progress_line"]
 
+SHOW_AFTER = 0.5  # seconds; short work should not flicker
+
 
 def announce_compilation() -> None:
     """Compile the kernels if that was never done on this machine, and say so on a terminal while it lasts."""
@@ -23,9 +25,6 @@ def announce_compilation() -> None:
 
     with Console(stderr=True).status("compiling the evaluation kernels: once on this machine, about 20 seconds"):
         kernels.prepare()
-
-
-SHOW_AFTER = 0.5  # seconds; short work should not flicker
 
 
 @contextmanager
