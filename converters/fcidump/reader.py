@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import hashlib
 from collections.abc import Mapping
+from concurrent.futures import Future, ThreadPoolExecutor
 from dataclasses import replace
 from datetime import datetime, timezone
 from pathlib import Path
@@ -30,6 +31,14 @@ MOSTLY = 1 << 16  # bytes; few namelists are longer
 def read(path: Path, options: Mapping[str, str], progress: Progress | None = None) -> Reading:
     """Read `path`. Raises FileError, ConversionError for what is wrong, UnsupportedError for spinors."""
     source = Source(path)
+    with ThreadPoolExecutor(1) as pool:  # neither hashing nor the compiled parser holds Python's lock
+        digest = pool.submit(_sha256, source)
+        return _read(source, options, progress, digest)
+
+
+def _read(
+    source: Source, options: Mapping[str, str], progress: Progress | None, digest: Future[str]
+) -> Reading:
     header = _header(source)
     header_notes = _check_header(header, source)
     if progress and not compiled():
@@ -61,7 +70,7 @@ def read(path: Path, options: Mapping[str, str], progress: Progress | None = Non
         "activity": "read from an FCIDUMP file",
         "agent": f"qwfx {__version__}",
         "time": datetime.now(timezone.utc).isoformat(timespec="seconds"),
-        "used": [{"entity": path.name, "sha256": _sha256(source)}],
+        "used": [{"entity": source.path.name, "sha256": digest.result()}],
         "generated": [],
         "notes": notes,
     }
