@@ -66,6 +66,8 @@ CLEARLY = 0.02
 FLOOR = 1e-6
 """Deviation that is always allowed: thresholds of the programs, and the digits of their length of an angstrom."""
 SAFETY = 4.0
+ROUNDING = 1e-12
+"""Deviations that are rounding alone: no reason to prefer one reading to an earlier one."""
 LARGEST_TOLERANCE = 0.02
 
 
@@ -157,7 +159,7 @@ def _decide(molden: Molden, tried: list[_Candidate], tolerance: float, named: bo
             remedy="leave the option out",
         )
     least = min(c.residual for c in tried)
-    best = next(c for c in tried if c.residual <= 10.0 * least or c.residual == least)
+    best = next(c for c in tried if not c.residual > 10.0 * least + ROUNDING)
     if not named:
         _check(molden, best, tried, tolerance)
     reading = best.reading
