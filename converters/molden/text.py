@@ -97,7 +97,7 @@ def _count_lines(text: Text, start: int, end: int) -> int:
 
 def split_sections(text: Text) -> list[Section]:
     found = list(_find_headings(text))
-    ends = [m.start() for m in found[1:]] + [len(text)]
+    ends = [m.start() for m in found[1:]] + [len(text)] * bool(found)
     sections, line, seen = [], 1, 0
     for match, end in zip(found, ends, strict=True):
         line += _count_lines(text, seen, match.start(1))
