@@ -18,7 +18,7 @@ from qwfx.elements import SYMBOLS
 from qwfx.errors import ConversionError
 from qwfx.model import Potentials
 
-__all__ = ["atomic_numbers", "cores_of_options", "effective_charges"]
+__all__ = ["atomic_numbers", "candidates", "cores_of_options", "effective_charges"]
 
 CORES = (2, 10, 18, 28, 36, 46, 54, 60, 68, 78)
 """Closed shells that core potentials replace (common practice)."""
@@ -29,7 +29,7 @@ INNERMOST = 0.2
 HYDROGEN = ("D", "T")
 
 
-def _candidates(label: str) -> list[int]:
+def candidates(label: str) -> list[int]:
     """Elements that a label such as ``O1``, ``cl`` or ``CA`` may name, the longest symbol first."""
     match = re.match(r"[A-Za-z]*", label)
     word = match.group() if match else ""
@@ -47,14 +47,14 @@ def atomic_numbers(molden: Molden) -> NDArray[np.int32]:
 
 
 def _atomic_number(molden: Molden, atom: Atom) -> int:
-    candidates = _candidates(atom.label)
+    named = candidates(atom.label)
     if atom.charge == 0.0:  # a ghost
-        return candidates[0] if candidates else 0
-    if atom.charge in candidates:
+        return named[0] if named else 0
+    if atom.charge in named:
         return int(atom.charge)
-    if not candidates and atom.charge == round(atom.charge) and 0 < atom.charge < len(SYMBOLS):
+    if not named and atom.charge == round(atom.charge) and 0 < atom.charge < len(SYMBOLS):
         return int(atom.charge)
-    larger = [z for z in candidates if 0.0 < atom.charge < z]
+    larger = [z for z in named if 0.0 < atom.charge < z]
     usual = [z for z in larger if z - atom.charge in CORES]
     if larger:
         return (usual or larger)[0]

@@ -11,18 +11,20 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from qwfx.converters.molden.order import CARTESIAN, cartesian_powers, shell_order
+from qwfx.converters.molden.charges import candidates
+from qwfx.converters.molden.order import shell_order
 from qwfx.converters.plugin import Progress, Writing
 from qwfx.elements import SYMBOLS
 from qwfx.errors import FileError, UnsupportedError
 from qwfx.model import Basis, OrbitalSet, Wavefunction
-from qwfx.reference.harmonics import monomial_powers
-from qwfx.reference.norms import gaussian_norm, monomial_norm
+from qwfx.reference.harmonics import monomial_powers, shell_polynomials
+from qwfx.reference.norms import gaussian_norm, monomial_norm, self_overlaps
 
 __all__ = ["write"]
 
-LETTERS = "spdfghi"
-FLAG = {2: ("[5D]", "[6D]"), 3: ("[7F]", "[10F]"), 4: ("[9G]", "[15G]"), 5: ("", ""), 6: ("", "")}
+LETTERS = "spdfgh"
+LARGEST_L = 5
+FLAG = {2: ("[5D]", "[6D]"), 3: ("[7F]", "[10F]"), 4: ("[9G]", "[15G]")}
 """l -> flag of spherical and of Cartesian shells."""
 
 
@@ -52,8 +54,8 @@ def _check(wavefunction: Wavefunction, where: str) -> Basis:
             raise _limit("the Gaussian functions contain powers of r", "none", where)
         for l in sorted(set(basis.shell_l.tolist())):
             kinds = set(basis.shell_monomial[basis.shell_l == l].tolist())
-            if l > 6:
-                raise _limit(f"a shell has l = {l}", "at most 6", where)
+            if l > LARGEST_L:
+                raise _limit(f"a shell has l = {l}", f"at most {LARGEST_L}, beyond which programs do not read", where)
             if l > 1 and len(kinds) > 1:
                 raise _limit(f"shells with l = {l} are partly solid, partly monomial", "one kind", where)
             if l > 4 and 1 in kinds:
@@ -62,9 +64,21 @@ def _check(wavefunction: Wavefunction, where: str) -> Basis:
         low = set(basis.shell_monomial[(basis.shell_l > 1) & (basis.shell_l < 5)].tolist())
         if high and low == {1}:
             raise _limit("solid shells beyond g beside monomial ones", "solid shells throughout", where)
-    elif not np.all(basis.shell_monomial[basis.shell_l > 0]):
-        raise _limit("a Slater shell with l > 0 is solid", "monomial shells", where)
+    elif basis.powers is not None and np.any(np.asarray(basis.powers) < 0):
+        raise _limit("Slater functions contain negative powers of r", "powers from 0", where)
+    _check_charges(wavefunction, where)
     return basis
+
+
+def _check_charges(wavefunction: Wavefunction, where: str) -> None:
+    system = wavefunction.system
+    for label, number, charge in zip(system.labels, system.atomic_numbers, system.effective_charges, strict=True):
+        core = float(number - charge)
+        if charge != 0.0 and (charge < 0.0 or core < 0.0 or core != round(core)):
+            raise _limit(
+                f"the atom {label} has the effective charge {charge:g} and the atomic number {number}",
+                "the number of the element less a whole number of core electrons", where,
+            )  # fmt: skip
 
 
 def _atoms(wavefunction: Wavefunction) -> Iterator[str]:
@@ -73,7 +87,9 @@ def _atoms(wavefunction: Wavefunction) -> Iterator[str]:
     for i, (label, z, position) in enumerate(
         zip(system.labels, system.atomic_numbers.tolist(), system.positions.tolist(), strict=True)
     ):
-        word = "".join(label.split()) or SYMBOLS[z]
+        word = "".join(label.split())
+        if not word.isascii() or z not in (candidates(word)[:1] or [0]):
+            word = f"{SYMBOLS[z]}{i + 1}"  # a reader would take the label for another element
         charge = z if system.effective_charges[i] > 0 else 0
         yield f"{word} {i + 1} {charge} {position[0]: .17e} {position[1]: .17e} {position[2]: .17e}\n"
     reduced = np.flatnonzero((system.effective_charges > 0) & (system.effective_charges != system.atomic_numbers))
@@ -83,16 +99,28 @@ def _atoms(wavefunction: Wavefunction) -> Iterator[str]:
             yield f"{i + 1} : {round(float(system.atomic_numbers[i] - system.effective_charges[i]))}\n"
 
 
+def _by_atom(basis: Basis) -> NDArray[np.intp]:
+    """The shells as [GTO] lists them: atom by atom."""
+    return np.argsort(basis.shell_center, kind="stable")
+
+
+def _norms(basis: Basis) -> NDArray[np.float64]:
+    """(S) length of each contraction (of its component x^l): they are written normalised, as most programs expect."""
+    lengths = np.sqrt(self_overlaps(basis)[basis.function_start[:-1]])
+    return np.where(lengths > 0.0, lengths, 1.0)
+
+
 def _gto(basis: Basis, n_atoms: int) -> Iterator[str]:
     """[GTO] and the flags."""
     yield "[GTO]\n"
+    norms, shells = _norms(basis), _by_atom(basis)
     for atom in range(n_atoms):
         yield f"{atom + 1} 0\n"
-        for s in np.flatnonzero(basis.shell_center == atom):
+        for s in shells[basis.shell_center[shells] == atom]:
             l, own = int(basis.shell_l[s]), slice(int(basis.primitive_start[s]), int(basis.primitive_start[s + 1]))
             yield f"{LETTERS[l]} {own.stop - own.start} 1.00\n"
             a = basis.exponents[own]
-            norm = np.asarray(monomial_norm(l, 0, 0, a) if basis.shell_monomial[s] else gaussian_norm(l, a))
+            norm = norms[s] * (monomial_norm(l, 0, 0, a) if basis.shell_monomial[s] else gaussian_norm(l, a))
             for exponent, coefficient in zip(a.tolist(), (basis.coefficients[own] / norm).tolist(), strict=True):
                 yield f"{exponent: .17e} {coefficient: .17e}\n"
         yield "\n"
@@ -108,61 +136,55 @@ def _gto_columns(basis: Basis) -> tuple[NDArray[np.int64], NDArray[np.float64]]:
 
     The file's Cartesian components are each normalised; ours share the factor of xx..x.
     """
-    columns, factors = [], []
-    for s, start in enumerate(basis.function_start[:-1].tolist()):
+    columns, factors = [np.zeros(0, dtype=np.int64)], [np.zeros(0)]
+    norms = _norms(basis)
+    for s in _by_atom(basis).tolist():
         l, monomial = int(basis.shell_l[s]), bool(basis.shell_monomial[s])
         order = shell_order(l, monomial)
         inverse = np.empty_like(order)
         inverse[order] = np.arange(len(order))
-        columns.append(start + inverse)
+        columns.append(int(basis.function_start[s]) + inverse)
         if monomial:
             powers = [monomial_powers(l)[k] for k in inverse]
-            assert powers == cartesian_powers(l) or l not in CARTESIAN
-            factors.append(np.array([monomial_norm(l, 0, 0, 1.0) / monomial_norm(i, j, k, 1.0) for i, j, k in powers]))
+            own = np.array([monomial_norm(l, 0, 0, 1.0) / monomial_norm(i, j, k, 1.0) for i, j, k in powers])
         else:
-            factors.append(np.ones(len(order)))
+            own = np.ones(len(order))
+        factors.append(own * norms[s])
     return np.concatenate(columns), np.concatenate(factors)
 
 
 def _sto(basis: Basis) -> Iterator[str]:
+    """[STO] of monomial shells of one primitive each."""
     yield "[STO]\n"
     for s in range(basis.n_shells):
-        k = int(basis.primitive_start[s])
-        l = int(basis.shell_l[s])
-        n = 0 if basis.powers is None else int(basis.powers[k])
-        factor = float(basis.coefficients[k])
-        if not basis.shell_monomial[s]:
-            factor *= float(np.sqrt(1 / (4 * np.pi)))  # S_00
-        for i, j, m in monomial_powers(l):
-            yield f"{int(basis.shell_center[s]) + 1} {i} {j} {m} {n} {float(basis.exponents[k]): .17e} {factor: .17e}\n"
+        n = 0 if basis.powers is None else int(basis.powers[s])
+        exponent, factor = float(basis.exponents[s]), float(basis.coefficients[s])
+        for i, j, k in monomial_powers(int(basis.shell_l[s])):
+            yield f"{int(basis.shell_center[s]) + 1} {i} {j} {k} {n} {exponent: .17e} {factor: .17e}\n"
 
 
-def _uncontracted(basis: Basis) -> tuple[Basis, NDArray[np.float64]]:
-    """Slater shells of one primitive each, and the matrix (F, F') that spreads orbital coefficients over them."""
-    lengths = np.diff(basis.primitive_start)
-    shell = np.repeat(np.arange(basis.n_shells), lengths)
+def _line_by_line(basis: Basis) -> tuple[Basis, NDArray[np.float64]]:
+    """Monomial Slater shells of one primitive each, and (F, F') the functions of the basis in terms of theirs."""
+    shell = np.repeat(np.arange(basis.n_shells), np.diff(basis.primitive_start))
     spread = Basis(
-        basis.radial, basis.shell_center[shell], basis.shell_l[shell], basis.shell_monomial[shell],
+        basis.radial, basis.shell_center[shell], basis.shell_l[shell], np.ones(len(shell), dtype=np.int8),
         np.arange(len(shell) + 1, dtype=np.int64), basis.exponents, basis.coefficients, basis.powers,
     )  # fmt: skip
     matrix = np.zeros((basis.n_functions, spread.n_functions))
-    for new, old in enumerate(shell):
-        size = int(basis.shell_size[old])
-        rows, columns = int(basis.function_start[old]), int(spread.function_start[new])
-        matrix[rows : rows + size, columns : columns + size] = np.eye(size)
+    for new, old in enumerate(shell.tolist()):
+        block = shell_polynomials(int(basis.shell_l[old]), bool(basis.shell_monomial[old]))
+        row, column = int(basis.function_start[old]), int(spread.function_start[new])
+        matrix[row : row + len(block), column : column + block.shape[1]] = block
     return spread, matrix
 
 
-def _orbitals(s: OrbitalSet, matrix: NDArray[np.float64], spin: str, electrons: int | None) -> Iterator[str]:
+def _orbitals(s: OrbitalSet, matrix: NDArray[np.float64], spin: str) -> Iterator[str]:
     """One set of orbitals; `matrix` (M, F) in the order and values of the file."""
     form = "".join(f"{k + 1} %.17e\n" for k in range(matrix.shape[1]))
     for p, row in enumerate(matrix.tolist()):
         irrep = f" Sym= {''.join(s.irreps[p].split())}\n" if s.irreps is not None else ""
         energy = 0.0 if s.energies is None else float(s.energies[p])
-        if s.occupations is not None:
-            occupation = float(s.occupations[p])
-        else:
-            occupation = float(electrons is not None and p < electrons)
+        occupation = 0.0 if s.occupations is None else float(s.occupations[p])
         yield f"{irrep} Ene= {energy:.17e}\n Spin= {spin}\n Occup= {occupation:.17g}\n" + form % tuple(row)
 
 
@@ -171,7 +193,7 @@ def _text(wavefunction: Wavefunction, basis: Basis) -> Iterator[str]:
     yield from _atoms(wavefunction)
     spread: NDArray[np.float64] | None = None
     if basis.radial == "slater":
-        basis, spread = _uncontracted(basis)
+        basis, spread = _line_by_line(basis)
         yield from _sto(basis)
         columns, factors = np.arange(basis.n_functions), np.ones(basis.n_functions)
     else:
@@ -182,7 +204,7 @@ def _text(wavefunction: Wavefunction, basis: Basis) -> Iterator[str]:
         matrix = np.asarray(s.coefficients)
         if spread is not None:
             matrix = matrix @ spread
-        yield from _orbitals(s, matrix[:, columns] * factors, "Beta" if s.spin == "down" else "Alpha", None)
+        yield from _orbitals(s, matrix[:, columns] * factors, "Beta" if s.spin == "down" else "Alpha")
 
 
 def write(
@@ -222,6 +244,8 @@ def _left_out(w: Wavefunction) -> tuple[str, ...]:
     }  # fmt: skip
     listed = [word for word, there in parts.items() if there]
     notes = [f"not carried by Molden: {', '.join(listed)}"] if listed else []
+    if [s.spin for s in w.orbitals.values()] in (["up"], ["down"]):
+        notes.append("the orbitals are of one spin: readers of the file may take them for those of both")
     if any(s.energies is None for s in w.orbitals.values()):
         notes.append("there are no orbital energies: written as 0")
     if any(s.occupations is None for s in w.orbitals.values()):
