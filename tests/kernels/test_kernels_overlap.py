@@ -35,7 +35,7 @@ def basis_of_shells(
 
 def agree(basis: Basis, tolerance: float = 1e-13) -> None:
     fast, plain = kernels.overlap(basis, CENTERS), reference.overlap(basis, CENTERS)
-    # Relative to the terms that are added up, which may cancel within a contraction: those of all coefficients positive.
+    # Relative to the terms that are added up, which may cancel within a contraction: take all coefficients positive.
     terms = reference.overlap(dataclasses.replace(basis, coefficients=np.abs(basis.coefficients)), CENTERS)
     scale = np.sqrt(np.abs(np.diag(terms)))
     assert (np.abs(fast - plain) <= tolerance * np.outer(scale, scale) + 1e-300).all()
