@@ -27,6 +27,8 @@ LARGEST_CHARGE = 4
 INNERMOST = 0.2
 """The 1s orbital of an atom lies below -0.2 Z^2 hartree; one of the valence shell does not (Z > 2)."""
 HYDROGEN = ("D", "T")
+GHOST = re.compile(r"^(ghost|gh|bq|xx|x(?!e)|q)[-_:]?", re.IGNORECASE)
+"""Words for sites without a nucleus, before the element whose functions they carry (common practice)."""
 
 
 def candidates(label: str) -> list[int]:
@@ -47,9 +49,10 @@ def atomic_numbers(molden: Molden) -> NDArray[np.int32]:
 
 
 def _atomic_number(molden: Molden, atom: Atom) -> int:
-    named = candidates(atom.label)
-    if atom.charge == 0.0:  # a ghost
+    if atom.charge == 0.0:
+        named = candidates(GHOST.sub("", atom.label))
         return named[0] if named else 0
+    named = candidates(atom.label)
     if atom.charge in named:
         return int(atom.charge)
     if not named and atom.charge == round(atom.charge) and 0 < atom.charge < len(SYMBOLS):
@@ -183,6 +186,8 @@ def _cores_by_count(
         if abs(left) <= 1 and any(cores):
             fits.setdefault(abs(round(left)), []).append(dict(zip(heavy, cores, strict=True)))
     best = fits[min(fits)] if fits else []
+    if len(best) != 1 and missing <= LARGEST_CHARGE:
+        return [f"the molecule is taken to have the charge {missing:+g}: no core potentials explain it"]
     if len(best) != 1:
         raise ConversionError(
             f"the nuclear charges exceed the {n_electrons} electrons by {missing:g}, and "
