@@ -2,10 +2,17 @@
 
 from __future__ import annotations
 
+import os
 from pathlib import Path
 
 import numpy as np
 import pytest
+from hypothesis import settings
+
+# Continuous integration judges a change by the same examples each time; at home every run draws new ones.
+settings.register_profile("ci", derandomize=True, deadline=None)
+settings.register_profile("home", deadline=None)
+settings.load_profile("ci" if os.environ.get("CI") else "home")
 
 
 @pytest.fixture(scope="session")
