@@ -16,7 +16,7 @@ from qwfx.converters.numbers import JIT, NOT_A_NUMBER, UNDECIDED, number_at, pow
 if TYPE_CHECKING:
     from qwfx.converters.molden.sections import WrittenOrbitals
 
-__all__ = ["read_orbitals"]
+__all__ = ["count_functions", "read_orbitals"]
 
 FINE, BAD_INDEX, BAD_VALUE, OUT_OF_RANGE, MORE, TWICE = range(6)
 
@@ -155,6 +155,14 @@ def _orbitals(text: NDArray[np.uint8], start: int, end: int, first_line: int) ->
         orbital = replace(orbital, start=stop)
     if orbital is not None:
         yield orbital
+
+
+def count_functions(text: NDArray[np.uint8], spans: list[tuple[int, int, int]]) -> int:
+    """How many functions the first orbital lists, if it lists 1, 2, 3, ... without a gap; else 0."""
+    orbital = next((o for span in spans for o in _orbitals(text, *span)), None)
+    words = b"" if orbital is None else bytes(text[orbital.start : orbital.end])
+    numbers = [row.split()[0] for row in words.split(b"\n") if row.strip()]
+    return len(numbers) if numbers == [b"%d" % (k + 1) for k in range(len(numbers))] else 0
 
 
 def _end_of_line(text: NDArray[np.uint8], start: int, end: int) -> int:

@@ -54,6 +54,7 @@ def read(path: Path, options: Mapping[str, str], progress: Progress | None = Non
         progress("trying readings", 0.4)
     sets, choice = _functions(molden, positions, groups, options)
     notes.append(choice.note)
+    notes += molden.remarks
     if molden.skipped:
         notes.append("sections that were not used: " + ", ".join(molden.skipped))
     orbitals = {g.name: _orbital_set(molden, g, matrix) for g, matrix in zip(groups, sets, strict=True)}

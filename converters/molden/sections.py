@@ -8,7 +8,7 @@ from pathlib import Path
 import numpy as np
 from numpy.typing import NDArray
 
-from qwfx.converters.molden.orbital_lines import read_orbitals
+from qwfx.converters.molden.orbital_lines import count_functions, read_orbitals
 from qwfx.converters.molden.text import (
     LARGEST,
     Section,
@@ -113,11 +113,8 @@ class Molden:
     unit: str
     sha256: str
     """Of the bytes of the file."""
-
-    @property
-    def n_functions(self) -> int:
-        """Functions, by the shells and flags."""
-        return len(self.slater) + sum(_size(shell.l, self.cartesian) for shell in self.shells)
+    remarks: list[str]
+    """What the user should know of how the file was read."""
 
 
 def parse(path: Path) -> Molden:
@@ -140,14 +137,18 @@ def parse(path: Path) -> Molden:
     index = {atom.number: i for i, atom in enumerate(atoms)}
     shells = _gto(text, by_name["gto"], name, index) if "gto" in by_name else []
     slater = _sto(text, by_name["sto"], name, index) if "sto" in by_name else []
-    cartesian = _flags(sections, shells, name)
-    n_functions = len(slater) + sum(_size(shell.l, cartesian) for shell in shells)
-    _check_sizes(text, by_name, name, len(atoms), n_functions)
     spans = [(section.start, section.end, section.line) for section in sections if section.name == "mo"]
-    orbitals = read_orbitals(np.frombuffer(text, np.uint8), spans, n_functions, name)
+    octets = np.frombuffer(text, np.uint8)
+    told = _flags(sections, name)
+    cartesian, remarks = _kinds(told, shells, count_functions(octets, spans) if shells else 0)
+    _check_kinds(cartesian, shells, name)
+    n_functions = len(slater) + _total(shells, cartesian)
+    _check_sizes(text, by_name, name, len(atoms), n_functions)
+    orbitals = read_orbitals(octets, spans, n_functions, name)
     return Molden(
         name, _title(text, by_name), atoms, shells, slater, cartesian, orbitals, _core(text, by_name, name, index),
         _valence(text, by_name, name, atoms, index), _skipped(text, sections), unit, sha256(text),
+        remarks,
     )  # fmt: skip
 
 
@@ -274,8 +275,8 @@ def _sto(text: Text, section: Section, name: str, index: dict[int, int]) -> list
     return functions
 
 
-def _flags(sections: list[Section], shells: list[GaussianShell], name: str) -> dict[int, bool]:
-    """Which shells are Cartesian: all without a flag, as the format has it; h and i go with the rest of the file."""
+def _flags(sections: list[Section], name: str) -> dict[int, bool]:
+    """l -> whether its shells are Cartesian, as far as flags say it."""
     told: dict[int, bool] = {}
     for section in sections:
         for l, cartesian in FLAGS.get(section.name.replace(" ", ""), {}).items():
@@ -285,18 +286,35 @@ def _flags(sections: list[Section], shells: list[GaussianShell], name: str) -> d
             told[l] = cartesian
     if any(section.name == "5d" for section in sections):
         told.setdefault(3, False)  # [5D] is short for [5D7F], unless another flag says what f functions are
+    return told
+
+
+def _kinds(told: dict[int, bool], shells: list[GaussianShell], listed: int) -> tuple[dict[int, bool], list[str]]:
+    """Which shells are Cartesian: those without a flag, as the format has it; h and i go with the rest of the file.
+
+    Where the first orbital lists another number of functions (`listed`), and just as many as there are if the shells
+    without a flag are spherical, programs have forgotten a flag.
+    """
     any_spherical = any(not cartesian for cartesian in told.values())
-    flags = {}
-    for l in range(2, 7):
-        # The format has no flag beyond g: such shells are spherical where others of the file are.
-        flags[l] = told.get(l, not any_spherical if l > 4 else True)
+    # The format has no flag beyond g: such shells are spherical where others of the file are.
+    kinds = {l: told.get(l, not any_spherical if l > 4 else True) for l in range(2, 7)}
+    spherical = {l: told.get(l, False) for l in range(2, 7)}
+    if listed and listed != _total(shells, kinds) and listed == _total(shells, spherical):
+        return spherical, ["shells without a flag are spherical, as the number of orbital coefficients shows"]
+    return kinds, []
+
+
+def _total(shells: list[GaussianShell], cartesian: dict[int, bool]) -> int:
+    return sum(_size(shell.l, cartesian) for shell in shells)
+
+
+def _check_kinds(cartesian: dict[int, bool], shells: list[GaussianShell], name: str) -> None:
     for shell in shells:
-        if shell.l > 4 and flags[shell.l]:
+        if shell.l > 4 and cartesian[shell.l]:
             raise bad(
                 name, shell.line, "a Cartesian shell beyond g, for which the format defines no order",
                 "spherical functions ([5D], [7F], [9G])", "write the file with spherical functions",
             )  # fmt: skip
-    return flags
 
 
 def _core(text: Text, by_name: dict[str, Section], name: str, index: dict[int, int]) -> dict[int, int]:

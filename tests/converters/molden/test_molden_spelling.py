@@ -141,6 +141,15 @@ def test_orbital_without_coefficients_keeps_its_place(tmp_path: Path) -> None:
     np.testing.assert_array_equal(np.asarray(wavefunction.orbitals["spatial"].coefficients)[0], [0.0, 0.0])
 
 
+def test_forgotten_flags(tmp_path: Path) -> None:
+    text = WATER.read_text()
+    path = tmp_path / "case.molden"
+    path.write_text(text.replace("[5D]\n", ""))
+    reading = converter.read(path, {})
+    assert any("without a flag" in note for note in reading.notes)
+    np.testing.assert_array_equal(values(reading.wavefunction), values(read_text(tmp_path, text)))
+
+
 def test_unknown_sections_are_said(tmp_path: Path) -> None:
     path = tmp_path / "case.molden"
     path.write_text(WATER.read_text().replace("[GTO]", "[FREQ]\n1.0\n2.0\n[GTO]"))
