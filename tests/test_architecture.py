@@ -13,6 +13,7 @@ TOP = Path(__file__).parents[1]
 # Floor of each room, from the ground up; a module may import from its own room and from lower floors.
 FLOORS = [
     {"_version", "errors", "findings"},
+    {"atomic"},
     {"elements", "model", "points"},
     {"reference", "schema", "schema_check", "storage"},
     {"kernels"},

@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-import os
-import tempfile
 from collections.abc import Callable, Iterator, Mapping
 from pathlib import Path
 from typing import IO, Any
@@ -11,11 +9,12 @@ from typing import IO, Any
 import numpy as np
 from numpy.typing import NDArray
 
+from qwfx.atomic import replacing
 from qwfx.converters.fcidump.layout import looks_interleaved
 from qwfx.converters.fcidump.lines import format_records
 from qwfx.converters.fcidump.store import RESTRICTED, Places
 from qwfx.converters.plugin import Progress, Writing
-from qwfx.errors import ConversionError, FileError, UnsupportedError
+from qwfx.errors import ConversionError, UnsupportedError
 from qwfx.kernels.packing import indices
 from qwfx.model import Hamiltonian, TwoBody, Wavefunction
 
@@ -201,27 +200,12 @@ def write(
         )
     layout = options.get("spin-layout", "interleaved")
     threshold = _threshold(options)
-    try:
-        handle, name = tempfile.mkstemp(dir=path.parent, prefix=f".{path.name}.", suffix=".part")
-    except OSError as error:
-        raise _cannot(path, error) from None
-    try:
-        with os.fdopen(handle, "wb") as stream:
-            if progress:
-                progress("writing integrals", 0.0)
-            stream.write("".join(_header(wavefunction, h.spin_resolved and layout == "interleaved")).encode())
-            writer = _Writer(stream, h, threshold)
-            _records(writer, h, layout)
-            stream.flush()
-            os.fsync(stream.fileno())
-        umask = os.umask(0)
-        os.umask(umask)
-        os.chmod(name, 0o666 & ~umask)
-        os.replace(name, path)
-    except OSError as error:
-        raise _cannot(path, error) from None
-    finally:
-        Path(name).unlink(missing_ok=True)
+    with replacing(path) as part, open(part, "wb") as stream:
+        if progress:
+            progress("writing integrals", 0.0)
+        stream.write("".join(_header(wavefunction, h.spin_resolved and layout == "interleaved")).encode())
+        writer = _Writer(stream, h, threshold)
+        _records(writer, h, layout)
     notes = []
     if h.orbital_symmetry is None:
         notes.append("no irreps are known: ORBSYM and ISYM are written as 1, which is no symmetry")
@@ -241,12 +225,3 @@ def write(
     if left_out:
         notes.append("not carried by FCIDUMP: " + ", ".join(left_out))
     return Writing(tuple(notes))
-
-
-def _cannot(path: Path, error: OSError) -> FileError:
-    return FileError(
-        f"cannot be written ({error.strerror or error})",
-        where=str(path),
-        expected="a folder that exists, may be written to and has room",
-        remedy="check the folder, its permissions and the space on the disk; nothing was changed",
-    )

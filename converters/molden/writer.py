@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-import os
-import tempfile
 from collections.abc import Iterator, Mapping
 from pathlib import Path
 from typing import Any
@@ -11,11 +9,12 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from qwfx.atomic import replacing
 from qwfx.converters.molden.charges import candidates
 from qwfx.converters.molden.order import shell_order
 from qwfx.converters.plugin import Progress, Writing
 from qwfx.elements import SYMBOLS
-from qwfx.errors import FileError, UnsupportedError
+from qwfx.errors import UnsupportedError
 from qwfx.model import Basis, OrbitalSet, Wavefunction
 from qwfx.reference.harmonics import monomial_powers, shell_polynomials
 from qwfx.reference.norms import gaussian_norm, monomial_norm, self_overlaps
@@ -212,25 +211,10 @@ def write(
 ) -> Writing:
     """Write orbitals to `path`, whole or not at all. Raises UnsupportedError for what the format cannot hold."""
     basis = _check(wavefunction, str(path))
-    try:
-        handle, name = tempfile.mkstemp(dir=path.parent, prefix=f".{path.name}.", suffix=".part")
-    except OSError as error:
-        raise _cannot(path, error) from None
-    try:
-        with os.fdopen(handle, "w", encoding="utf-8", newline="\n") as stream:
-            if progress:
-                progress("writing orbitals", 0.0)
-            stream.writelines(_text(wavefunction, basis))
-            stream.flush()
-            os.fsync(stream.fileno())
-        umask = os.umask(0)
-        os.umask(umask)
-        os.chmod(name, 0o666 & ~umask)
-        os.replace(name, path)
-    except OSError as error:
-        raise _cannot(path, error) from None
-    finally:
-        Path(name).unlink(missing_ok=True)
+    with replacing(path) as part, open(part, "w", encoding="utf-8", newline="\n") as stream:
+        if progress:
+            progress("writing orbitals", 0.0)
+        stream.writelines(_text(wavefunction, basis))
     return Writing(_left_out(wavefunction))
 
 
@@ -251,12 +235,3 @@ def _left_out(w: Wavefunction) -> tuple[str, ...]:
     if any(s.occupations is None for s in w.orbitals.values()):
         notes.append("there are no occupations: written as 0")
     return tuple(notes)
-
-
-def _cannot(path: Path, error: OSError) -> FileError:
-    return FileError(
-        f"cannot be written ({error.strerror or error})",
-        where=str(path),
-        expected="a folder that exists, may be written to and has room",
-        remedy="check the folder, its permissions and the space on the disk; nothing was changed",
-    )

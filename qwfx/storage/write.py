@@ -3,8 +3,6 @@
 from __future__ import annotations
 
 import json
-import os
-import tempfile
 import zlib
 from collections.abc import Callable, Iterable, Mapping
 from concurrent.futures import ThreadPoolExecutor
@@ -16,7 +14,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from qwfx import model
-from qwfx.errors import FileError, FormatError, QwfxError
+from qwfx.atomic import replacing
+from qwfx.errors import FileError, FormatError
 from qwfx.storage.convert import target_dtype
 from qwfx.storage.digest import (
     BLOCK_BYTES,
@@ -320,29 +319,8 @@ def save(
         )
     if target.is_dir():
         raise FileError("is a folder", where=str(target), expected="a file name", remedy="choose another name")
-    try:
-        handle, name = tempfile.mkstemp(dir=target.parent, prefix=f".{target.name}.", suffix=PART_SUFFIX)
-    except OSError as error:
-        raise _cannot_write(target, error) from None
-    os.close(handle)
-    part = Path(name)
-    try:
+    with replacing(target, PART_SUFFIX, (OSError, RuntimeError)) as part:  # h5py raises either on a full disk
         _write_whole(wavefunction, part, str(target), progress)
-        _settle(part, target)
-    except (OSError, RuntimeError) as error:
-        raise _cannot_write(target, error) from error
-    finally:
-        part.unlink(missing_ok=True)
-
-
-def _cannot_write(target: Path, error: BaseException) -> QwfxError:
-    reason = getattr(error, "strerror", None) or str(error).splitlines()[0]
-    return FileError(
-        f"cannot be written ({reason})",
-        where=str(target),
-        expected="a folder that exists, may be written to and has room",
-        remedy="check the folder, its permissions and the space on the disk; nothing was changed",
-    )
 
 
 def _write_whole(wavefunction: model.Wavefunction, part: Path, where: str, progress: Progress | None) -> None:
@@ -355,28 +333,3 @@ def _write_whole(wavefunction: model.Wavefunction, part: Path, where: str, progr
         put_attribute(file, "version", model.FORMAT_VERSION)
         put_attribute(file, "content_digest", combine(sink.digests))
         _put_digests(file, sink.digests)
-
-
-def _settle(part: Path, target: Path) -> None:
-    """Bring the finished file under its name, on the disk too."""
-    mode = target.stat().st_mode & 0o7777 if target.exists() else 0o666 & ~_umask()
-    os.chmod(part, mode)
-    with open(part, "rb+") as stream:
-        os.fsync(stream.fileno())
-    os.replace(part, target)
-    try:
-        folder = os.open(target.parent, os.O_RDONLY)
-    except OSError:
-        return  # some systems do not open folders; the rename itself is done
-    try:
-        os.fsync(folder)
-    except OSError:
-        pass
-    finally:
-        os.close(folder)
-
-
-def _umask() -> int:
-    mask = os.umask(0)
-    os.umask(mask)
-    return mask

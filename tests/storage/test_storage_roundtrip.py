@@ -221,7 +221,7 @@ def test_a_full_disk_is_said(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) ->
     def full(*_: object, **__: object) -> None:
         raise OSError(28, "No space left on device")
 
-    monkeypatch.setattr("qwfx.storage.write.os.fsync", full)
+    monkeypatch.setattr("qwfx.atomic.os.fsync", full)
     with pytest.raises(FileError, match="No space left"):
         save(plain(), tmp_path / "x.qwfx")
     assert list(tmp_path.iterdir()) == []
