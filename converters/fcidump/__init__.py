@@ -25,6 +25,8 @@ class FcidumpConverter:
         Option("isym", "whether ISYM counts irreps from 0 or from 1; the default is to count like ORBSYM",
                ("like-orbsym", "from-0", "from-1")),
         Option("accept-incomplete", "read a file that lacks one-electron integrals", ("no", "yes")),
+        Option("spins", "whether the integrals are over orbitals of each spin; the default is what UHF says",
+               ("as-stated", "resolved", "restricted")),
         Option("threshold", "writing: integrals of at most this magnitude, in hartree, are left out (1e-15)"),
         Option("spin-layout", "writing: how spin-resolved integrals are laid out", ("interleaved", "blocks")),
     )  # fmt: skip

@@ -13,7 +13,8 @@ __all__ = ["LARGEST", "LONGEST", "OPENING", "Header", "read_header"]
 OPENING = re.compile(rb"(?:\xef\xbb\xbf)?(?:\s|[!#][^\n]*\n)*[&$]FCI\b", re.IGNORECASE)
 """A byte order mark, blank lines and comments, then the name of the namelist."""
 CLOSING = re.compile(rb"[&$]END\b|/|^\s*[&$]\s*$", re.IGNORECASE | re.MULTILINE)
-COMMENT = re.compile(rb"![^\n]*")
+ASIDE = re.compile(rb"'[^'\n]*'|\"[^\"\n]*\"|![^\n]*")
+"""What says nothing of the namelist's form: quoted text, which may hold any sign, and comments."""
 KEY = re.compile(r"([A-Za-z_]\w*)\s*(?:\(\s*\d+\s*\))?\s*=")
 WHOLE = re.compile(r"(?:(\d{1,6})\*)?([+-]?\d{1,9})")
 LARGEST = 4096
@@ -61,13 +62,15 @@ def read_header(text: bytes, name: str) -> Header:
     opening = OPENING.match(text)
     if opening is None:
         raise _error(f"{name}:1", "the file does not begin with &FCI", "a namelist &FCI ... &END", "check the file")
-    bare = COMMENT.sub(lambda m: b" " * len(m.group()), text[:LONGEST])  # offsets stay as they are
-    closing = CLOSING.search(bare, opening.end())
+    # Offsets stay as they are: of `bare` comments are blanked out, of `form` quoted text as well.
+    bare = ASIDE.sub(lambda m: b" " * len(m.group()) if m.group()[:1] == b"!" else m.group(), text[:LONGEST])
+    form = ASIDE.sub(lambda m: (b" " if m.group()[:1] == b"!" else b"_") * len(m.group()), text[:LONGEST])
+    closing = CLOSING.search(form, opening.end())
     first_line = text.count(b"\n", 0, opening.end()) + 1
     if closing is None:
         raise _error(f"{name}:{first_line}", "the namelist &FCI is not closed", "&END, $END or / after the last key")
     body = bare[opening.end() : closing.start()].decode("latin-1")
-    keys = _keys(body, name, first_line)
+    keys = _keys(body, form[opening.end() : closing.start()].decode("latin-1"), name, first_line)
 
     def line_of(key: str) -> str:
         return f"{name}:{first_line + body[: keys[key][1]].count(chr(10))}"
@@ -117,21 +120,24 @@ def _behind(bare: bytes, position: int) -> int:
     return position + len(rest) if not rest.strip() else position
 
 
-def _keys(body: str, name: str, first_line: int) -> dict[str, tuple[str, int]]:
-    """Key in capitals -> (text of its values, offset)."""
-    found = list(KEY.finditer(body))
+def _keys(body: str, form: str, name: str, first_line: int) -> dict[str, tuple[str, int]]:
+    """Key in capitals -> (text of its values, offset); `form` is `body` without quoted text.
+
+    A key of ours without a value (``MS2=,``) counts as absent, as in a namelist of Fortran.
+    """
+    found = list(KEY.finditer(form))
     before = body[: found[0].start()] if found else body
     if before.strip(" \t\r\n,"):
         line = first_line + before.count("\n")
         raise _error(f"{name}:{line}", f"{before.strip()[:40]!r} stands before the first key", "KEY=value, ...")
     keys: dict[str, tuple[str, int]] = {}
-    for match, following in zip(found, [*found[1:], None], strict=True):
+    for match, following in zip(found, [*found[1:], None][: len(found)], strict=True):
         key = match.group(1).upper()
         if key in keys:
             line = first_line + body.count("\n", 0, match.start())
             raise _error(f"{name}:{line}", f"{key} is given twice", "each key once")
         keys[key] = body[match.end() : following.start() if following else len(body)], match.start()
-    return keys
+    return {key: item for key, item in keys.items() if key not in KNOWN or item[0].strip(" \t\r\n,")}
 
 
 def _integers(text: str, key: str, where: str) -> list[int]:

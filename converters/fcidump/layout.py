@@ -111,11 +111,11 @@ def choose_layout(header: Header, seen: Survey, source: Source) -> Layout:
 
 
 def looks_interleaved(places: Places, at: Callable[[NDArray[np.int64]], NDArray[Any]]) -> bool:
-    """Whether integrals that were read as spin-restricted are over interleaved spin orbitals; `at` looks them up.
+    """Whether integrals that were read as spin-restricted could be over interleaved spin orbitals; `at` looks them up.
 
     The exchange integral (pq|qp) of two orbitals in space is the self-repulsion of a charge distribution: positive.
-    Between spin orbitals of unlike spins there is none. So it is spin orbitals if it is there within the odd ones or
-    within the even ones, and nowhere between odd and even ones.
+    Between spin orbitals of unlike spins there is none. So it may be spin orbitals if it is there within the odd ones
+    or within the even ones, and nowhere between odd and even ones. Fragments far apart look alike.
     """
     n = places.n
     if places.kind != RESTRICTED or n % 2 or n < 4:

@@ -43,10 +43,8 @@ def _read(
     header_notes = _check_header(header, source)
     if progress and not compiled():
         progress("compiling the parser of records (once)", 0.0)
+    header = _spins(header, options.get("spins", "as-stated"))
     layout, filled = _integrals(source, header, progress)
-    silent = not {"UHF", "IUHF"} & header.lines.keys() and header.n_electrons <= header.n_orbitals
-    if silent and looks_interleaved(layout.places, filled.at):
-        layout, filled = _interleaved(source, layout, filled, progress)
     _check_complete(source, layout, filled, options.get("accept-incomplete", "no") == "yes")
     places = layout.places
     n_up, n_down, spin_notes = _electrons(header, layout, source.name)
@@ -62,7 +60,7 @@ def _read(
     )
     symmetry = symmetry_of(header, hamiltonian, options.get("isym", "like-orbsym"), source.name)
     hamiltonian = replace(hamiltonian, orbital_symmetry=symmetry.orbitals, state_symmetry=symmetry.state)
-    notes = [*layout.notes, *header_notes, *spin_notes, *symmetry.notes, *_notes(filled)]
+    notes = [*layout.notes, *header_notes, *_doubt(header, layout, filled), *spin_notes, *symmetry.notes, *_notes(filled)]
     notes += [*energy_notes, *storage_notes]
     nothing = np.zeros(0)
     system = System(n_up, n_down, (), nothing.astype(np.int32), nothing, nothing.reshape(0, 3))
@@ -137,23 +135,26 @@ def _with_survey(
     return layout, filled
 
 
-def _interleaved(
-    source: Source, layout: Layout, filled: Filled, progress: Progress | None
-) -> tuple[Layout, Filled]:
-    """Read once more as interleaved spin orbitals; what was read stays if that does not fit."""
-    n = layout.places.n
-    note = (
-        f"no UHF in the namelist, but no exchange integral between odd and even orbitals: read as spin-resolved, spin "
-        f"orbitals interleaved; NORB = {n} counts spin orbitals (UHF=.FALSE. in the namelist prevents that)"
-    )
-    places = Places(n // 2, INTERLEAVED, layout.places.is_complex)
-    other = Layout(places, False, (note, *layout.notes))
-    try:
-        again = fill(source, other, progress)
-    except ConversionError:  # a pair joins odd and even orbitals: orbitals in space after all
-        return layout, filled
-    assert again is not None
-    return other, again
+def _spins(header: Header, told: str) -> Header:
+    """The header with what the user says of the spins in the place of what the namelist says."""
+    if told == "as-stated":
+        return header
+    return replace(header, spin_resolved=told == "resolved", lines={**header.lines, "UHF": header.line_of("UHF")})
+
+
+def _doubt(header: Header, layout: Layout, filled: Filled) -> list[str]:
+    """A note where integrals without a word on spins could be over spin orbitals.
+
+    Two molecules far apart look the same when their orbitals alternate, so that this is for the user to decide.
+    """
+    if {"UHF", "IUHF"} & header.lines.keys() or header.n_electrons > header.n_orbitals:
+        return []
+    if not looks_interleaved(layout.places, filled.at):
+        return []
+    return [
+        "no exchange integral joins an odd and an even orbital, and the namelist has no UHF: read as spin-restricted, "
+        "as the format says; if odd and even numbers are the two spins, convert again with --set spins=resolved"
+    ]
 
 
 def _spatial(header: Header, source: Source) -> int:

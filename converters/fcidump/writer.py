@@ -10,7 +10,6 @@ import numpy as np
 from numpy.typing import NDArray
 
 from qwfx.atomic import replacing
-from qwfx.converters.fcidump.layout import looks_interleaved
 from qwfx.converters.fcidump.lines import format_records
 from qwfx.converters.fcidump.store import RESTRICTED, Places
 from qwfx.converters.plugin import Progress, Writing
@@ -126,27 +125,7 @@ def _header(wavefunction: Wavefunction, interleaved: bool) -> Iterator[str]:
     yield f"  ISYM={(h.state_symmetry or 0) + 1},\n"
     if h.spin_resolved:
         yield "  UHF=.TRUE.,\n"
-    elif _looks_interleaved(h):
-        yield "  UHF=.FALSE.,\n"
     yield " &END\n"
-
-
-def _looks_interleaved(h: Hamiltonian) -> bool:
-    """Whether a reader could take spin-restricted integrals for interleaved spin orbitals."""
-    places, table = Places(h.n_orbitals, RESTRICTED, h.complex_orbitals), h.two_body["both"]
-
-    def at(position: NDArray[np.int64]) -> NDArray[Any]:
-        position = position - places.offsets[2]
-        values = np.asarray(table.values)
-        if table.index is None:
-            return np.asarray(values[position])
-        index = np.asarray(table.index).astype(np.int64)
-        if not len(index):
-            return np.zeros(len(position))
-        place = np.minimum(np.searchsorted(index, position), len(index) - 1)
-        return np.where(index[place] == position, values[place], 0)
-
-    return looks_interleaved(places, at)
 
 
 def _spatial(index: NDArray[np.int64]) -> NDArray[np.int64]:

@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 from qwfx.errors import FormatError
 from qwfx.storage.members import Kind
 
-__all__ = ["as_kind", "native", "target_dtype", "texts"]
+__all__ = ["as_kind", "cut_texts", "native", "target_dtype", "texts"]
 
 _DTYPES = {"int8": np.int8, "int32": np.int32, "int64": np.int64, "uint64": np.uint64, "float64": np.float64}
 
@@ -20,8 +20,24 @@ def native(array: NDArray[Any]) -> NDArray[Any]:
     return array if array.dtype.isnative else array.astype(array.dtype.newbyteorder("="))
 
 
+def cut_texts(array: NDArray[Any]) -> NDArray[Any]:
+    """Fixed-length bytes without what follows the first NUL of each, where a text ends.
+
+    Padding with spaces (``H5T_STR_SPACEPAD``, as Fortran programs may write it) was taken off by HDF5 before: it is
+    padding by the type. Spaces at the end of other texts belong to them.
+    """
+    width = array.dtype.itemsize
+    array = np.ascontiguousarray(array, dtype=f"S{width}").reshape(array.shape)
+    letters = array.reshape(-1).view(np.uint8).reshape(-1, width)
+    ended = np.logical_or.accumulate(letters == 0, axis=1)
+    if not (letters * ended).any():
+        return array
+    return np.where(ended, np.uint8(0), letters).reshape(-1).view(f"S{width}").reshape(array.shape)
+
+
 def texts(array: NDArray[Any], where: str) -> NDArray[np.str_]:
-    """Fixed-length bytes as text, NUL padding taken off. Raises FormatError for what is not UTF-8."""
+    """Fixed-length bytes as text, see `cut_texts`. Raises FormatError for what is not UTF-8."""
+    array = cut_texts(array)
     try:
         return np.asarray(np.char.decode(array, "utf-8")) if array.size else np.zeros(array.shape, "U1")
     except UnicodeDecodeError as error:

@@ -13,6 +13,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from qwfx.errors import FormatError
 from qwfx.storage.members import DIGESTED
 from qwfx.storage.raw import RawFile, open_raw
 
@@ -22,6 +23,8 @@ __all__ = [
 ]  # fmt: skip
 
 BLOCK_BYTES = 1 << 20
+MIN_BLOCK, MAX_BLOCK = 1 << 12, 1 << 26
+"""Blocks outside of this would make a table longer than the data, or fill the memory."""
 READ_BYTES = 1 << 24
 """Data are read in pieces of about this size, so that a file of any size is digested in bounded memory."""
 THREADS = 4
@@ -43,6 +46,8 @@ def parts_in_order(shape: tuple[int, ...], itemsize: int) -> Iterator[tuple[slic
     if not shape:
         yield ()
         return
+    if 0 in shape:
+        return  # the other extents may be astronomical
     row = itemsize * int(np.prod(shape[1:], dtype=np.int64))
     if row > READ_BYTES and len(shape) > 1:
         for k in range(shape[0]):
@@ -108,11 +113,11 @@ class Digester:
         return Digest(self._path, whole.digest(), tuple(blocks))
 
 
-def attributes_digest(group: str, attributes: Mapping[str, Any]) -> Digest:
+def attributes_digest(group: str, attributes: Mapping[str, Any], block: int = BLOCK_BYTES) -> Digest:
     """The digest of the attributes of a group: of their canonical JSON."""
     text = json.dumps(dict(attributes), sort_keys=True, separators=(",", ":"), ensure_ascii=False).encode()
     blocks = tuple(
-        hashlib.sha256(text[start : start + BLOCK_BYTES]).digest() for start in range(0, max(len(text), 1), BLOCK_BYTES)
+        hashlib.sha256(text[start : start + block]).digest() for start in range(0, max(len(text), 1), block)
     )
     header = f"{group}@\njson\n\n".encode()
     return Digest(f"{group}@", hashlib.sha256(header + b"".join(blocks)).digest(), blocks)
@@ -170,13 +175,15 @@ def digests_of(
     """The digest of every item of a file and its size in bytes, in the order of the paths."""
     groups = [g for g in file.groups() if g != "/" and not _left_out(g) and file.attributes(g)]
     for group in groups:
-        yield attributes_digest(group, file.attributes(group)), 0
+        yield attributes_digest(group, file.attributes(group), block), 0
     names = [name for name in file.datasets() if not _left_out(name)]
     with ThreadPoolExecutor(THREADS) as pool:
         for number, name in enumerate(names):
             if progress:
                 progress("digests", number / len(names))
             yield _dataset_digest(file, name, block, pool)
+    if progress:
+        progress("digests", 1.0)
 
 
 def _left_out(path: str) -> bool:
@@ -202,11 +209,20 @@ def _dataset_digest(file: RawFile, name: str, block: int, pool: ThreadPoolExecut
 def check_digests(path: str | Path, progress: Progress | None = None) -> DigestCheck:
     """Compute every digest of a file again and compare. Reads the whole file once, in bounded memory.
 
-    Raises FileError or UnsafeFileError. A file without ``/digests`` gives only `extra` items.
+    A file without ``/digests``, or with one whose tables do not agree with each other, gives only `extra` items.
+
+    Raises FileError, UnsafeFileError, or FormatError if the blocks are of a size that cannot be worked with.
     """
     with open_raw(path) as file:
         stored = _stored(file)
-        block = int(file.attributes("/digests").get("block_bytes", BLOCK_BYTES)) or BLOCK_BYTES
+        block = file.attributes("/digests").get("block_bytes", BLOCK_BYTES)
+        if not isinstance(block, int) or not MIN_BLOCK <= block <= MAX_BLOCK:
+            raise FormatError(
+                f"is {block!r}",
+                where=f"{path}:/digests@block_bytes",
+                expected=f"{BLOCK_BYTES}",
+                remedy="save the file anew",
+            )
         computed: dict[str, Digest] = {}
         mismatches = []
         total = 0
@@ -214,7 +230,7 @@ def check_digests(path: str | Path, progress: Progress | None = None) -> DigestC
             computed[item.path] = item
             total += size
             told = stored.get(item.path)
-            if told is not None and told.digest != item.digest:
+            if told is not None and told != item:
                 mismatches.append(_mismatch(told, item, block))
         content = str(file.attributes("/").get("content_digest", ""))
     return DigestCheck(
@@ -229,12 +245,17 @@ def check_digests(path: str | Path, progress: Progress | None = None) -> DigestC
 
 
 def _stored(file: RawFile) -> dict[str, Digest]:
-    """What ``/digests`` says; an inconsistent table counts as saying nothing of the items concerned."""
-    members = [f"/digests/{name}" for name in ("path", "digest", "block_start", "block_digest")]
-    if not all(file.has(member) for member in members):
+    """What ``/digests`` says; tables that do not agree with each other say nothing."""
+    kinds = {"path": "S", "digest": "u", "block_start": "iu", "block_digest": "u"}
+    members = {f"/digests/{name}": kind for name, kind in kinds.items()}
+    if not all(m in file.datasets() and file.dtype(m).kind in kind for m, kind in members.items()):
         return {}
     paths, digest, start, blocks = (file.read(member) for member in members)
-    if digest.shape != (len(paths), 32) or start.shape != (len(paths) + 1,) or blocks.shape[1:] != (32,):
+    n = paths.size
+    if paths.shape != (n,) or digest.shape != (n, 32) or start.shape != (n + 1,) or blocks.shape[1:] != (32,):
+        return {}
+    start = start.astype(object)  # exact for any width, signed or not
+    if start[0] != 0 or start[-1] != len(blocks) or (start[1:] < start[:-1]).any():
         return {}
     return {
         str(p): Digest(str(p), digest[k].tobytes(), tuple(b.tobytes() for b in blocks[start[k] : start[k + 1]]))
@@ -249,5 +270,7 @@ def _mismatch(told: Digest, found: Digest, block: int) -> DigestMismatch:
     different = [k for k, (a, b) in enumerate(zip(told.blocks, found.blocks, strict=True)) if a != b]
     if not different:
         return DigestMismatch(found.path, -1, 0, "the type or shape changed, or the digest itself is damaged")
+    if told.digest == found.digest:
+        return DigestMismatch(found.path, -1, 0, f"{len(different)} damaged block digests, intact data")
     reason = f"{len(different)} of {len(found.blocks)} blocks differ"
     return DigestMismatch(found.path, different[0], different[0] * block, reason, len(different))

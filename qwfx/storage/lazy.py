@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import weakref
 from pathlib import Path
 from typing import Any
 
@@ -10,10 +11,18 @@ import numpy as np
 from numpy.typing import NDArray
 
 from qwfx.storage.convert import as_kind, target_dtype
-from qwfx.storage.inventory import damage
 from qwfx.storage.members import Kind
+from qwfx.storage.opening import damage
 
-__all__ = ["StoredArray"]
+__all__ = ["OpenFile", "StoredArray"]
+
+
+class OpenFile:
+    """A file that is closed once no array refers to this object any more."""
+
+    def __init__(self, file: h5py.File) -> None:
+        self.file = file
+        weakref.finalize(self, file.close)
 
 
 class StoredArray:
@@ -22,8 +31,9 @@ class StoredArray:
     It keeps the file open, so that a file which is replaced under its name by a newer one is still read as it was.
     """
 
-    def __init__(self, dataset: h5py.Dataset, kind: Kind, path: Path) -> None:
-        self._dataset = dataset
+    def __init__(self, opened: OpenFile, member: str, kind: Kind, path: Path) -> None:
+        self._opened = opened
+        self._dataset = dataset = opened.file[member]
         self._kind: Kind = kind
         self._path = path
         self._dtype = target_dtype(dataset.dtype, kind, f"{path}:{dataset.name}")
@@ -52,8 +62,16 @@ class StoredArray:
         return self.shape[0]
 
     def __getitem__(self, key: Any) -> Any:
-        with damage(self._path, str(self._dataset.name)):
+        try:
             part = np.asarray(self._dataset[key])
+        except (TypeError, ValueError, NotImplementedError):
+            # NumPy selects more than HDF5 does: backwards, by several lists, with new axes.
+            with damage(self._path, str(self._dataset.name)):
+                whole = np.asarray(self._dataset[()])
+            part = np.asarray(whole[key])
+        except (OSError, RuntimeError, KeyError, SystemError, MemoryError):
+            with damage(self._path, str(self._dataset.name)):
+                raise
         part = as_kind(part, self._kind, f"{self._path}:{self._dataset.name}")
         return part if part.ndim else part[()]
 

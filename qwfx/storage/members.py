@@ -7,7 +7,7 @@ from typing import Any, Literal, TypeAlias
 
 from qwfx import model
 
-__all__ = ["DIGESTED", "GROUPS", "AttributeSpec", "GroupSpec", "Kind", "MemberSpec"]
+__all__ = ["DIGESTED", "GROUPS", "SPINS", "SPIN_PAIRS", "AttributeSpec", "GroupSpec", "Kind", "MemberSpec"]
 
 Kind: TypeAlias = Literal["int8", "int32", "int64", "uint64", "float64", "number", "text"]
 """``number`` is float64 or complex128, whichever the data are."""
@@ -24,6 +24,9 @@ DIGESTED = (
     "energies",
 )
 """Groups whose content is the wave function: those that the content digest covers."""
+
+SPINS = ("both", "up", "down")
+SPIN_PAIRS = ("both", "up_up", "up_down", "down_down")
 
 
 @dataclass(frozen=True)
@@ -156,7 +159,7 @@ GROUPS: dict[str, GroupSpec] = {
             MemberSpec("sign", "number", 2),
             MemberSpec("gradients", "number", 4),
             MemberSpec("laplacian", "number", 2),
-            MemberSpec("potential", "float64", 1, optional=True),
+            MemberSpec("potential", "number", 2, optional=True),
             MemberSpec("local_energy", "number", 2, optional=True),
         ),
     ),

@@ -10,8 +10,9 @@ import numpy as np
 from numpy.typing import NDArray
 
 from qwfx.errors import FormatError
-from qwfx.storage.convert import native, texts
-from qwfx.storage.inventory import Entry, connect, damage, outline_of, take_inventory
+from qwfx.storage.convert import cut_texts, native, texts
+from qwfx.storage.inventory import Entry, outline_of, take_inventory
+from qwfx.storage.opening import connect, damage, refuse_more_than_memory
 
 __all__ = ["RawFile", "open_raw", "outline"]
 
@@ -51,9 +52,8 @@ class RawFile:
 
     def members(self, group: str) -> tuple[str, ...]:
         """Names of the members of a group, sorted; empty if there is no such group."""
-        prefix = self._absolute(group).rstrip("/") + "/"
-        tails = (path[len(prefix) :] for path in self._entries if path.startswith(prefix) and path != "/")
-        return tuple(sorted({tail for tail in tails if "/" not in tail}))
+        entry = self._entries.get(self._absolute(group))
+        return tuple(sorted(entry.members)) if entry else ()
 
     def attributes(self, member: str) -> dict[str, Any]:
         """The attributes of a group or dataset; empty if there is none."""
@@ -102,16 +102,19 @@ class RawFile:
         entry = self._dataset_entry(member)
         name = self._absolute(member)
         sliced = entry.shape and (start is not None or stop is not None)
+        if not sliced:
+            refuse_more_than_memory(entry.size, self.path, name)
         with damage(self.path, name):
             array = np.asarray(self._file[name][(slice(None),) * axis + (slice(start, stop),) if sliced else ()])
         return texts(array, f"{self.path}:{name}") if array.dtype.kind == "S" else native(array)
 
     def read_stored(self, member: str, part: tuple[slice, ...]) -> NDArray[Any]:
-        """A part of a dataset, text as the bytes that are stored."""
+        """A part of a dataset, text as bytes up to its end."""
         self._dataset_entry(member)
         name = self._absolute(member)
         with damage(self.path, name):
-            return native(np.asarray(self._file[name][part]))
+            array = np.asarray(self._file[name][part])
+        return cut_texts(array) if array.dtype.kind == "S" else native(array)
 
     def datasets(self) -> tuple[str, ...]:
         """Paths of all datasets, sorted."""

@@ -4,6 +4,8 @@ from __future__ import annotations
 
 import dataclasses
 import json
+import re
+from collections.abc import Iterator
 from pathlib import Path
 from typing import Any
 
@@ -13,14 +15,14 @@ import numpy as np
 from qwfx import model
 from qwfx.errors import FormatError, VersionError
 from qwfx.storage.convert import as_kind, native, texts
-from qwfx.storage.inventory import SIGNATURE, Inventory, connect, damage, take_inventory
-from qwfx.storage.lazy import StoredArray
-from qwfx.storage.members import GROUPS, AttributeSpec, Kind, MemberSpec
+from qwfx.storage.inventory import Inventory, root_attributes, take_inventory
+from qwfx.storage.lazy import OpenFile, StoredArray
+from qwfx.storage.members import GROUPS, SPIN_PAIRS, SPINS, AttributeSpec, Kind, MemberSpec
+from qwfx.storage.opening import connect, damage, has_signature, refuse_more_than_memory
 
 __all__ = ["is_qwfx", "load"]
 
-SPINS = ("both", "up", "down")
-SPIN_PAIRS = ("both", "up_up", "up_down", "down_down")
+ROOT_ATTRIBUTES = ("format", "version", "content_digest")
 HAMILTONIAN_ATTRIBUTES = (
     AttributeSpec("n_orbitals", "int"),
     AttributeSpec("packing", "text"),
@@ -33,9 +35,8 @@ HAMILTONIAN_ATTRIBUTES = (
 def is_qwfx(path: str | Path) -> bool:
     """Whether a file says of itself that it is a .qwfx file; False for anything else, absent files included."""
     try:
-        with open(path, "rb") as stream:
-            if stream.read(len(SIGNATURE)) != SIGNATURE:
-                return False
+        if not has_signature(path):
+            return False
         with h5py.File(path, "r", locking=False) as file:
             told = file.attrs.get("format")
             return bool((told.decode() if isinstance(told, bytes) else str(told)) == model.FORMAT_NAME)
@@ -61,59 +62,96 @@ def load(path: str | Path, *, lazy_above: int = 1 << 20) -> model.Wavefunction:
     where = Path(path)
     file = connect(where)
     try:
+        check_version(root_attributes(file, where), where)
         reader = _Reader(file, where, take_inventory(file, where), lazy_above)
         with damage(where):
-            return reader.wavefunction()
-    finally:
-        if not (locals().get("reader") and reader.lazy):
-            file.close()
+            wavefunction = reader.wavefunction()
+    except BaseException:
+        file.close()
+        raise
+    if not reader.lazy:
+        file.close()
+    return wavefunction
+
+
+REMEDY = "run `qwfx validate` on the file, and write it again with the program that made it"
+
+
+def check_version(root: dict[str, Any], path: Path) -> None:
+    """Raise FormatError if the file is not one of ours, VersionError if it is of a major version that is not known."""
+    told = root.get("format")
+    if told != model.FORMAT_NAME:
+        raise FormatError(
+            f"is {told!r}" if told else "the file does not say that it is a .qwfx file",
+            where=f"{path}:/@format",
+            expected=f"{model.FORMAT_NAME!r}",
+            remedy="convert it: `qwfx convert SRC DST.qwfx`",
+        )
+    version = str(root.get("version", ""))
+    numbers = re.fullmatch(r"(0|[1-9][0-9]*)\.(0|[1-9][0-9]*)", version)
+    where, known = f"{path}:/@version", model.FORMAT_VERSION.partition(".")[0]
+    if not numbers:
+        raise FormatError(
+            f"is {version!r}",
+            where=where,
+            expected=f"MAJOR.MINOR, such as {model.FORMAT_VERSION}",
+            remedy=REMEDY,
+        )
+    if numbers[1] != known:
+        raise VersionError(
+            f"the file has version {version}",
+            where=where,
+            expected=f"{known}.x",
+            remedy="install a version of qwfx that reads it",
+        )
 
 
 class _Reader:
     def __init__(self, file: h5py.File, path: Path, entries: Inventory, lazy_above: int) -> None:
         self.file, self.path, self.entries, self.lazy_above = file, path, entries, lazy_above
-        self.lazy = False
-        self.known: set[str] = {"/", "/digests"}
+        self.opened: OpenFile | None = None
+        self.eager = 0
+        self.known: set[str] = {"/"}
+        self.known_attributes: dict[str, set[str]] = {"/": set(ROOT_ATTRIBUTES)}
 
-    def bad(self, member: str, found: str, expected: str, remedy: str = "") -> FormatError:
+    @property
+    def lazy(self) -> bool:
+        """Whether any member stayed in the file."""
+        return self.opened is not None
+
+    def bad(self, member: str, found: str, expected: str) -> FormatError:
         return FormatError(
             found,
             where=f"{self.path}:{member}",
             expected=expected,
-            remedy=remedy or "run `qwfx validate` on the file, and write it again with the program that made it",
+            remedy=REMEDY,
         )
 
     def has(self, member: str) -> bool:
         return member in self.entries
 
+    def group(self, path: str, *attributes: str) -> bool:
+        """Whether there is a group at `path`, and that it and these attributes of it are looked at."""
+        if path not in self.entries:
+            return False
+        if self.entries[path].kind != "group":
+            raise self.bad(path, "is a dataset", "a group")
+        self.known.add(path)
+        self.known_attributes.setdefault(path, set()).update(attributes)
+        return True
+
     def names(self, group: str) -> list[str]:
         """Names of the members of a group that exists or not, sorted."""
-        self.known.add(group)
-        prefix = group + "/"
-        tails = (p[len(prefix) :] for p in self.entries if p.startswith(prefix))
-        return sorted(tail for tail in tails if "/" not in tail)
+        return sorted(self.entries[group].members) if self.group(group) else []
 
-    def check_version(self) -> None:
-        root = self.entries["/"].attributes
-        told = root.get("format")
-        if told != model.FORMAT_NAME:
-            raise self.bad(
-                "/@format",
-                f"is {told!r}" if told else "the file does not say that it is a .qwfx file",
-                f"{model.FORMAT_NAME!r}",
-                "convert it: `qwfx convert SRC DST.qwfx`",
-            )
-        version = str(root.get("version", ""))
-        major, dot, minor = version.partition(".")
-        if not (dot and major.isdecimal() and minor.isdecimal()):
-            raise self.bad("/@version", f"is {version!r}", f"MAJOR.MINOR, such as {model.FORMAT_VERSION}")
-        if major != model.FORMAT_VERSION.partition(".")[0]:
-            raise VersionError(
-                f"the file has version {version}",
-                where=f"{self.path}:/@version",
-                expected=f"{model.FORMAT_VERSION.partition('.')[0]}.x",
-                remedy="install a version of qwfx that reads it",
-            )
+    def load_now(self, member: str) -> Any:
+        """The whole of a dataset as it is stored."""
+        entry = self.entries[member]
+        self.known.add(member)
+        self.eager += entry.size
+        refuse_more_than_memory(self.eager, self.path, member)
+        with damage(self.path, member):
+            return np.asarray(self.file[member][()])
 
     def attribute(self, group: str, spec: AttributeSpec) -> Any:
         value = self.entries[group].attributes.get(spec.name)
@@ -140,11 +178,9 @@ class _Reader:
             raise self.bad(member, f"has {len(entry.shape)} axes", f"{rank}")
         where = f"{self.path}:{member}"
         if big and entry.size > self.lazy_above:
-            self.lazy = True
-            return StoredArray(self.file[member], kind, self.path)
-        with damage(self.path, member):
-            stored = np.asarray(self.file[member][()])
-        return as_kind(stored, kind, where)
+            self.opened = self.opened or OpenFile(self.file)
+            return StoredArray(self.opened, member, kind, self.path)
+        return as_kind(self.load_now(member), kind, where)
 
     def member(self, group: str, spec: MemberSpec) -> Any:
         path = f"{group}/{spec.name}"
@@ -158,9 +194,7 @@ class _Reader:
     def fields(self, group: str, pattern: str | None = None) -> dict[str, Any]:
         """The fields that the table lists for a group, read."""
         spec = GROUPS[pattern or group.lstrip("/")]
-        self.known.add(group)
-        if self.entries[group].kind != "group":
-            raise self.bad(group, "is a dataset", "a group")
+        self.group(group, *(a.name for a in spec.attributes))
         values = {a.name: self.attribute(group, a) for a in spec.attributes}
         return values | {m.name: self.member(group, m) for m in spec.members}
 
@@ -172,9 +206,8 @@ class _Reader:
 
     def hamiltonian(self) -> model.Hamiltonian | None:
         group = "/hamiltonian"
-        if not self.has(group):
+        if not self.group(group, *(spec.name for spec in HAMILTONIAN_ATTRIBUTES)):
             return None
-        self.known.add(group)
         told = {spec.name: self.attribute(group, spec) for spec in HAMILTONIAN_ATTRIBUTES}
         packing = told.pop("packing")
         if packing not in ("real", "complex"):
@@ -199,9 +232,8 @@ class _Reader:
         return {key: self.array(f"{group}/{key}", kind, rank, True) for key in self.names(group) if key in keys}
 
     def densities(self) -> model.Densities | None:
-        if not self.has("/densities"):
+        if not self.group("/densities"):
             return None
-        self.known.add("/densities")
         return model.Densities(
             self.keyed("/densities/one_body", SPINS, "number", 3),
             self.keyed("/densities/two_body", SPIN_PAIRS, "number", 5),
@@ -209,27 +241,28 @@ class _Reader:
 
     def jastrow_term(self, name: str) -> model.JastrowTerm:
         group = f"/jastrow/{name}"
+        self.group(group, *self.entries[group].attributes)
         form = self.attribute(group, AttributeSpec("form", "text"))
         attributes = {key: v for key, v in self.entries[group].attributes.items() if key != "form"}
         return model.JastrowTerm(form, attributes, self.free_members(group, nested=False))
 
     def free_members(self, group: str, nested: bool) -> dict[str, Any]:
-        """Members whose names and types are data: arrays as they are stored, and groups where they may be nested."""
+        """Members whose names and types are data: arrays as they are stored, and groups where they may be nested.
+
+        A group where none may be stays unread, as it comes from a newer version.
+        """
         members: dict[str, Any] = {}
         for name in self.names(group):
             path = f"{group}/{name}"
-            self.known.add(path)
             if self.entries[path].kind == "dataset":
-                with damage(self.path, path):
-                    array = np.asarray(self.file[path][()])
+                array = self.load_now(path)
                 members[name] = texts(array, f"{self.path}:{path}") if array.dtype.kind == "S" else native(array)
             elif nested:
                 members[name] = self.node(path)
-            else:
-                raise self.bad(path, "is a group", "a dataset")
         return members
 
     def node(self, group: str) -> model.Node:
+        self.group(group, *self.entries[group].attributes)
         return model.Node(dict(self.entries[group].attributes), self.free_members(group, nested=True))
 
     def extensions(self) -> dict[str, model.Node]:
@@ -245,9 +278,8 @@ class _Reader:
         return self.whole("/witness", orbitals=sets, configurations=self.whole("/witness/configurations"))  # type: ignore[no-any-return]
 
     def provenance(self) -> model.Provenance:
-        if not self.has("/provenance"):
+        if not self.group("/provenance"):
             return model.Provenance()
-        self.known.add("/provenance")
         text = str(np.asarray(self.array("/provenance/steps", "text", 0))) if self.has("/provenance/steps") else "[]"
         try:
             steps = json.loads(text)
@@ -258,7 +290,6 @@ class _Reader:
         return model.Provenance(tuple(steps))
 
     def wavefunction(self) -> model.Wavefunction:
-        self.check_version()
         if not self.has("/system"):
             raise self.bad("/system", "is missing", "a group with the nuclei and electrons")
         found = model.Wavefunction(
@@ -278,6 +309,17 @@ class _Reader:
         return dataclasses.replace(found, unread=self.unread())
 
     def unread(self) -> tuple[str, ...]:
-        """Members that this reader did not look at, the topmost of each branch only."""
-        strange = sorted(p for p in self.entries if p not in self.known and not p.startswith("/digests/"))
-        return tuple(p for p in strange if not any(p.startswith(q + "/") for q in strange))
+        """What this reader did not look at: the topmost member of each branch, and attributes as ``path@name``."""
+        return tuple(sorted(self.strange("/")))
+
+    def strange(self, path: str) -> Iterator[str]:
+        if path == "/digests":
+            return  # made anew by whoever writes the file
+        if path not in self.known:
+            yield path
+            return
+        entry = self.entries[path]
+        known = self.known_attributes.get(path, set())
+        yield from (f"{path}@{name}" for name in entry.attributes if name not in known)
+        for name in entry.members:
+            yield from self.strange(f"{path.rstrip('/')}/{name}")

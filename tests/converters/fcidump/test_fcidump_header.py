@@ -150,6 +150,17 @@ def test_logical_keys_decide_nothing_else(tmp_path: Path) -> None:
         assert not h.spin_resolved
 
 
+@pytest.mark.parametrize("text", ["&FCI &END\n", "&FCI /\n", "$FCI\n$END\n", "&FCI ,, &END\n", "&FCI NORB=,NELEC=, /\n"])
+def test_an_empty_namelist(text: str) -> None:
+    with pytest.raises(ConversionError, match="has no NORB"):
+        read_header(text.encode(), "x")
+
+
+def test_quoted_text_is_no_part_of_the_form() -> None:
+    header = read_header(b"&FCI NORB=2,NELEC=2,TITLE='a / b &END MS2=4' ! NELEC=7\n/\n", "x")
+    assert (header.n_orbitals, header.n_electrons, header.ms2) == (2, 2, None)
+
+
 def test_garbage_in_the_namelist() -> None:
     with pytest.raises(ConversionError, match="before the first key"):
         read_header(b"&FCI 12 NORB=1,NELEC=1 /\n", "x")

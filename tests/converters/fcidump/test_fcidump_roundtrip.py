@@ -10,7 +10,7 @@ import pytest
 from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 from numpy.typing import NDArray
-from pyscf import ao2mo
+from pyscf import ao2mo, fci, gto, scf
 from pyscf.tools import fcidump
 
 from qwfx.converters.fcidump import converter
@@ -160,23 +160,48 @@ def test_blocks_are_told_without_the_key(tmp_path: Path) -> None:
 
 
 @pytest.mark.parametrize("is_complex", [False, True])
-def test_spin_orbitals_are_told_without_the_key(tmp_path: Path, is_complex: bool) -> None:
-    """By the lack of exchange integrals between odd and even orbitals; UHF=.FALSE. has the last word."""
+def test_spin_orbitals_without_the_key(tmp_path: Path, is_complex: bool) -> None:
+    """Never guessed from the numbers: said, and for the user to decide."""
     h = hamiltonian(1, 3, True, is_complex, 0.0, False)
     path = tmp_path / "x.fcidump"
     converter.write(wrap(h), path, {"threshold": "0"})
     text = path.read_text()
     path.write_text(text.replace("  UHF=.TRUE.,\n", ""))
     reading = converter.read(path, {})
-    assert any("no exchange integral between odd and even orbitals" in note for note in reading.notes)
-    assert reading.wavefunction.hamiltonian is not None
-    assert_same(h, reading.wavefunction.hamiltonian)
-    path.write_text(text.replace("UHF=.TRUE.", "UHF=.FALSE."))
-    restricted = converter.read(path, {}).wavefunction.hamiltonian
+    assert any("--set spins=resolved" in note for note in reading.notes)
+    silent = reading.wavefunction.hamiltonian
+    assert silent is not None
+    assert not silent.spin_resolved
+    assert silent.n_orbitals == 6
+    assert_same(silent, through(silent, tmp_path / "y.fcidump"))
+    told = converter.read(path, {"spins": "resolved"})
+    assert told.wavefunction.hamiltonian is not None
+    assert not any("--set spins" in note for note in told.notes)
+    assert_same(h, told.wavefunction.hamiltonian)
+    path.write_text(text)
+    restricted = converter.read(path, {"spins": "restricted"}).wavefunction.hamiltonian
     assert restricted is not None
-    assert_same(restricted, through(restricted, tmp_path / "y.fcidump"))
-    assert not restricted.spin_resolved
-    assert restricted.n_orbitals == 6
+    assert_same(restricted, silent)
+
+
+def test_two_molecules_far_apart_are_not_spin_orbitals(tmp_path: Path) -> None:
+    """Their orbitals alternate and have no exchange: taken for spins, the energy was -1.06 instead of -2.27 hartree."""
+    mol = gto.M(atom="H 0 0 0; H 0 0 1.4; H 0 0 2000; H 0 0 2001.4", unit="bohr", basis="sto-3g", verbose=0)
+    c = scf.RHF(gto.M(atom="H 0 0 0; H 0 0 1.4", unit="bohr", basis="sto-3g", verbose=0)).run().mo_coeff
+    both = np.zeros((4, 4))
+    both[:2, ::2] = both[2:, 1::2] = c
+    path = tmp_path / "x.fcidump"
+    one = both.T @ scf.hf.get_hcore(mol) @ both
+    fcidump.from_integrals(str(path), one, ao2mo.kernel(mol, both), 4, 4, mol.energy_nuc(), 0, tol=1e-9)
+    reading = converter.read(path, {})
+    h = reading.wavefunction.hamiltonian
+    assert h is not None
+    assert not h.spin_resolved
+    assert any("--set spins=resolved" in note for note in reading.notes)
+    table = h.two_body["both"]
+    two = unpack(dense(table.values, table.index, "eightfold", 4), "eightfold", 4)
+    energy = fci.direct_spin1.kernel(np.asarray(h.one_body["both"]), two, 4, (2, 2), ecore=h.core_energy)[0]
+    assert energy == pytest.approx(2 * -1.1372759436170613, abs=1e-6)  # full CI of one molecule, PySCF
 
 
 def test_a_model_without_exchange_stays_spin_restricted(tmp_path: Path) -> None:
