@@ -10,11 +10,21 @@ import numpy as np
 from numpy.typing import NDArray
 
 from qwfx.findings import Severity
+from qwfx.reference.strings import (
+    Fault,
+    allowed_bits,
+    beyond_orbitals,
+    popcount,
+    precedes,
+    wrong_column,
+    wrong_count,
+    wrong_order,
+)
 from qwfx.rules.inspection import Inspection
 from qwfx.rules.registry import Covered, Measured, Premise, Problem, Purpose, Remark, rule
 from qwfx.rules.wording import at, every
 
-__all__ = ["popcount", "row_slices"]
+__all__ = ["row_slices"]
 
 TRIAL: tuple[Purpose, ...] = ("trial",)
 WORD = 64
@@ -23,27 +33,12 @@ MATRIX = ("/expansion/row_start", "/expansion/columns", *STRINGS)
 ONE_PASS_STRINGS = "one pass over the strings"
 ONE_PASS_MATRIX = "one pass over row_start and columns"
 
-_BITS = np.array([bin(byte).count("1") for byte in range(256)], dtype=np.uint8)
-
-
-def popcount(strings: NDArray[np.uint64]) -> NDArray[np.int64]:
-    """Number of set bits of each row of (k, W) uint64. (NumPy has a ufunc for this from version 2 only.)"""
-    octets = np.ascontiguousarray(strings).view(np.uint8).reshape(len(strings), -1)
-    return np.asarray(_BITS[octets].sum(axis=1, dtype=np.int64))
-
-
 def _words(block: NDArray[Any]) -> NDArray[np.uint64]:
     return np.ascontiguousarray(block, dtype=np.uint64)
 
 
-def _precedes(a: NDArray[np.uint64], b: NDArray[np.uint64]) -> NDArray[np.bool_]:
-    """Row by row a < b as integers whose most significant word comes last."""
-    result = np.zeros(len(a), dtype=bool)
-    undecided = np.ones(len(a), dtype=bool)
-    for word in range(a.shape[1] - 1, -1, -1):
-        result |= undecided & (a[:, word] < b[:, word])
-        undecided &= a[:, word] == b[:, word]
-    return result
+def _problem(fault: Fault, count: int) -> Problem:
+    return Problem(fault.where, fault.expected, fault.found, fault.remedy, count=count)
 
 
 def _spin_of(member: str) -> str:
@@ -73,13 +68,7 @@ def string_electrons(file: Inspection) -> Iterator[Remark]:
             bad += int(wrong.sum())
             seen += len(block)
         if bad:
-            yield Problem(
-                at(member, first[0]),
-                f"{electrons} occupied orbitals: n_{spin} = {electrons}",
-                str(first[1]),
-                "write all occupied orbitals, frozen ones too, or correct the number of electrons",
-                count=bad,
-            )
+            yield _problem(wrong_count(spin, first[0], electrons, first[1]), bad)
         yield Covered(every(seen, f"{spin} string"))
 
 
@@ -97,21 +86,14 @@ def string_order(file: Inspection) -> Iterator[Remark]:
         bad, first, seen = 0, (0, False), 0
         for start, block in file.blocks(member, overlap=1):
             words = _words(block)
-            wrong = ~_precedes(words[:-1], words[1:])
+            wrong = ~precedes(words[:-1], words[1:])
             if wrong.any() and not bad:
                 k = int(np.argmax(wrong))
                 first = (start + k + 1, bool(np.array_equal(words[k], words[k + 1])))
             bad += int(wrong.sum())
             seen = start + len(block)
         if bad:
-            index, same = first
-            yield Problem(
-                at(member, index),
-                "a string above the one before it",
-                "the same string again" if same else "a lower one",
-                "sort the strings as integers, most significant word last, and add up entries of like strings",
-                count=bad,
-            )
+            yield _problem(wrong_order(_spin_of(member), *first), bad)
         yield Covered(every(seen, f"{_spin_of(member)} string"))
 
 
@@ -133,9 +115,7 @@ def string_range(file: Inspection) -> Iterator[Remark]:
             continue
         n_orbitals = file.shape(f"/orbitals/{name}/coefficients")[0]
         n_words, sizes[name] = file.shape(member)[1], n_orbitals
-        allowed = np.array(
-            [(1 << min(max(n_orbitals - WORD * w, 0), WORD)) - 1 for w in range(n_words)], dtype=np.uint64
-        )
+        allowed = allowed_bits(n_orbitals, n_words)
         bad, first = 0, 0
         for start, block in file.blocks(member):
             beyond = (_words(block) & ~allowed).any(axis=1)
@@ -143,13 +123,7 @@ def string_range(file: Inspection) -> Iterator[Remark]:
                 first = start + int(np.argmax(beyond))
             bad += int(beyond.sum())
         if bad:
-            yield Problem(
-                at(member, first),
-                f"bits 0 to {n_orbitals - 1}: set {name!r} has {n_orbitals} orbitals",
-                "a bit beyond them",
-                "number orbitals as the rows of the set",
-                count=bad,
-            )
+            yield _problem(beyond_orbitals(spin, first, n_orbitals, name), bad)
         yield Covered(every(file.shape(member)[0], f"{spin} string"))
     enough = max([1, *(-(-n_orbitals // WORD) for n_orbitals in sizes.values())])
     n_words = file.shape(STRINGS[0])[1]
@@ -258,22 +232,10 @@ def column_order(file: Inspection) -> Iterator[Remark]:
         disorder += int(wrong.sum())
         entries = begin + len(columns)
     if outside:
-        yield Problem(
-            at(member, first_outside[0]),
-            f"0 to {n_down - 1}: there are {n_down} down strings",
-            str(first_outside[1]),
-            "count down strings from 0",
-            count=outside,
-        )
+        yield _problem(wrong_column(first_outside[0], n_down, first_outside[1], None), outside)
     if disorder:
         index, before, here = first_disorder
-        yield Problem(
-            at(member, index),
-            f"more than {before}, the column before it in the row",
-            str(here),
-            "sort the entries of each row by column, and add up entries of like columns",
-            count=disorder,
-        )
+        yield _problem(wrong_column(index, n_down, here, before), disorder)
     yield Covered(every(entries, "entry"))
 
 

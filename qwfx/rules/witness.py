@@ -9,8 +9,9 @@ import numpy as np
 from numpy.typing import NDArray
 
 from qwfx.findings import Severity
+from qwfx.reference.determinants import DeterminantSum, evaluate_determinants, occupied
+from qwfx.reference.potential import coulomb
 from qwfx.rules.algebra_orbitals import BASIS_RULES
-from qwfx.rules.configurations import DeterminantSum, coulomb, evaluate, occupied
 from qwfx.rules.diagnosis import explain_mismatch
 from qwfx.rules.evaluator import evaluate_orbitals
 from qwfx.rules.inspection import Inspection
@@ -186,7 +187,7 @@ def witness_configurations(file: Inspection) -> Iterator[Remark]:
     for m in range(affordable):
         phi_up = evaluate_orbitals(file.basis, file.positions, sets[0], positions[m, :n_up])
         phi_down = evaluate_orbitals(file.basis, file.positions, sets[1], positions[m, n_up:])
-        mine = evaluate(total, phi_up, phi_down)
+        mine = evaluate_determinants(total, phi_up, phi_down)
         for word, value in theirs.items():
             ours = getattr(mine, word)
             for state in range(len(ours)):

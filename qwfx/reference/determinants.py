@@ -1,4 +1,4 @@
-"""D at whole configurations of electrons, for the witness: determinants as they stand, without regard for speed."""
+"""Sums of determinants as they stand in FORMAT.md (F12 to F15), without regard for speed."""
 
 from __future__ import annotations
 
@@ -8,7 +8,9 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-__all__ = ["DeterminantSum", "LocalValues", "coulomb", "evaluate", "occupied"]
+from qwfx.model import Expansion
+
+__all__ = ["DeterminantSum", "LocalValues", "determinant_sum", "evaluate_determinants", "occupied"]
 
 
 @dataclass(frozen=True)
@@ -72,7 +74,7 @@ def _determinants(phi: NDArray[Any], strings: NDArray[np.int64]) -> tuple[NDArra
     return sign * np.exp(log - shift), shift
 
 
-def evaluate(total: DeterminantSum, phi_up: NDArray[Any], phi_down: NDArray[Any]) -> LocalValues:
+def evaluate_determinants(total: DeterminantSum, phi_up: NDArray[Any], phi_down: NDArray[Any]) -> LocalValues:
     """D = sum_IJ C_IJ det_I det_J and its derivatives from orbitals (5, n_up, M) and (5, n_down, M) at one place."""
     up, up_shift = _determinants(phi_up, total.up)
     down, down_shift = _determinants(phi_down, total.down)
@@ -91,19 +93,13 @@ def evaluate(total: DeterminantSum, phi_up: NDArray[Any], phi_down: NDArray[Any]
                            ratios[..., 3].sum(axis=1))  # fmt: skip
 
 
-def coulomb(
-    places: NDArray[np.float64], nuclei: NDArray[np.float64], charges: NDArray[np.float64]
-) -> NDArray[np.float64]:
-    """(m) potential energy in hartree of electrons at (m, N, 3) and nuclei at (A, 3), repulsion of nuclei included."""
-
-    def inverse(a: NDArray[np.float64]) -> NDArray[np.float64]:
-        with np.errstate(divide="ignore"):
-            return np.asarray(1.0 / np.linalg.norm(a, axis=-1))
-
-    i, j = np.triu_indices(places.shape[1], 1)
-    a, b = np.triu_indices(len(nuclei), 1)
-    a, b = a[charges[a] * charges[b] > 0], b[charges[a] * charges[b] > 0]
-    real = charges > 0
-    attraction = inverse(places[:, :, None] - nuclei[real]) @ charges[real]
-    repulsion = float((charges[a] * charges[b] * inverse(nuclei[a] - nuclei[b])).sum())
-    return np.asarray(inverse(places[:, i] - places[:, j]).sum(axis=1) - attraction.sum(axis=1) + repulsion)
+def determinant_sum(expansion: Expansion, n_up: int, n_down: int) -> DeterminantSum:
+    """The expansion of a model, read in full."""
+    row_start = np.asarray(expansion.row_start)
+    return DeterminantSum(
+        occupied(np.asarray(expansion.up_strings), n_up),
+        occupied(np.asarray(expansion.down_strings), n_down),
+        np.repeat(np.arange(len(row_start) - 1), np.diff(row_start)),
+        np.asarray(expansion.columns),
+        np.asarray(expansion.coefficients),
+    )

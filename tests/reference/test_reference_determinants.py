@@ -7,8 +7,8 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from qwfx.rules.configurations import DeterminantSum, evaluate, occupied
-from qwfx.rules.consistency_expansion import popcount
+from qwfx.reference.determinants import DeterminantSum, evaluate_determinants, occupied
+from qwfx.reference.strings import popcount
 
 
 def plane_waves(places: np.ndarray, k: np.ndarray) -> np.ndarray:
@@ -47,7 +47,7 @@ def direct(total: DeterminantSum, k: np.ndarray, places: np.ndarray) -> np.ndarr
 def test_value_gradient_and_laplacian(example: tuple[DeterminantSum, np.ndarray, np.ndarray]) -> None:
     total, k, places = example
     phi = plane_waves(places, k)
-    got = evaluate(total, phi[:, :3], phi[:, 3:])
+    got = evaluate_determinants(total, phi[:, :3], phi[:, 3:])
     D = direct(total, k, places)
     assert np.allclose(got.sign * np.exp(got.log_abs), D, rtol=1e-12)
     assert np.allclose(np.abs(got.sign), 1)
@@ -69,7 +69,7 @@ def test_no_electron_of_one_spin() -> None:
         np.array([[0]]), np.zeros((1, 0), dtype=np.int64), np.array([0]), np.array([0]), np.array([[2.0]])
     )
     phi = np.arange(1.0, 6).reshape(5, 1, 1)
-    got = evaluate(total, phi, np.zeros((5, 0, 1)))
+    got = evaluate_determinants(total, phi, np.zeros((5, 0, 1)))
     assert np.isclose(got.log_abs[0], np.log(2.0))
     assert np.allclose(got.gradients[0], [[2, 3, 4]])
     assert np.isclose(got.laplacian[0], 5)
@@ -79,7 +79,7 @@ def test_a_node_gives_infinities_and_no_warning() -> None:
     total = DeterminantSum(
         np.array([[0, 1]]), np.zeros((1, 0), dtype=np.int64), np.array([0]), np.array([0]), np.ones((1, 1))
     )
-    got = evaluate(total, np.ones((5, 2, 2)), np.zeros((5, 0, 2)))
+    got = evaluate_determinants(total, np.ones((5, 2, 2)), np.zeros((5, 0, 2)))
     assert got.log_abs[0] == -np.inf
 
 
