@@ -18,6 +18,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from qwfx.errors import EvaluationError
 from qwfx.kernels.bilinear import bilinear
 from qwfx.kernels.minors import LANES, add_cofactors, fill_minors
 from qwfx.kernels.strings import SpinStrings
@@ -47,6 +48,8 @@ class Values:
     """(S, W, M, n_up): D with the row of electron i replaced by v, over D, is sum_p v_p gamma[p, i]."""
     gamma_down: NDArray[Any]
     """(S, W, M, n_down)."""
+    singular: NDArray[np.bool_]
+    """(W) where D of some state vanishes or is no number: gamma means nothing there."""
 
 
 class Determinants:
@@ -100,19 +103,30 @@ class Determinants:
         """Orbitals that occur in any down string, ascending."""
         return self.spins[1].used
 
-    def evaluate(self, phi_up: NDArray[Any], phi_down: NDArray[Any], *, gammas: bool = True) -> Values:
+    def evaluate(
+        self, phi_up: NDArray[Any], phi_down: NDArray[Any], *, gammas: bool = True, threads: int | None = None
+    ) -> Values:
         """D and gamma of walkers whose orbitals are `phi_up` (W, n_up, M) and `phi_down` (W, n_down, M).
 
         M are the orbitals `used_up` and `used_down`. Without `gammas` they are empty. Nothing is raised and no warning
-        given where D vanishes or is no number: see `Values`.
+        given where D vanishes or is no number: see `Values`. Without `threads` all processors are taken. Raises
+        EvaluationError for arrays of another shape.
         """
+        for spin, strings, phi in zip(("up", "down"), self.spins, (phi_up, phi_down), strict=True):
+            wanted = (len(phi_up), strings.occupied.shape[1], len(strings.used))
+            if phi.shape != wanted:
+                raise EvaluationError(
+                    f"an array of shape {phi.shape}",
+                    where=f"phi_{spin}",
+                    expected=f"{wanted}: walkers, {spin} electrons, orbitals that occur in {spin} strings",
+                )
         up, down = (
             make_table(strings, phi, LARGEST_ENTRY)
             for strings, phi in zip(self.spins, (phi_up, phi_down), strict=True)
         )
-        return self.from_tables(up, down, gammas=gammas)
+        return self.from_tables(up, down, gammas=gammas, threads=threads)
 
-    def from_tables(self, up: Table, down: Table, *, gammas: bool = True) -> Values:
+    def from_tables(self, up: Table, down: Table, *, gammas: bool = True, threads: int | None = None) -> Values:
         """As `evaluate`, from tables that are there already: of the same walkers."""
         kind = np.result_type(up.table, down.table, self.coefficients)
         n_walkers = len(up.log)
@@ -123,7 +137,7 @@ class Determinants:
         if self.single:
             total[:] = self.coefficients[:, 0, None]
         else:
-            self._sum(up, down, total, slopes)
+            self._sum(up, down, total, slopes, threads or os.cpu_count() or 1)
         scale = up.sign * down.sign
         with np.errstate(all="ignore"):
             size = np.abs(total)
@@ -135,16 +149,19 @@ class Determinants:
                 if gammas else np.zeros((self.n_states, 0, 0, 0))
                 for table, slope in zip((up, down), slopes, strict=True)
             ]  # fmt: skip
-        return Values(log_abs, sign, found[0], found[1])
+        singular = ~(np.isfinite(log_abs) & (sign != 0)).all(axis=0)
+        return Values(log_abs, sign, found[0], found[1], singular)
 
-    def _sum(self, up: Table, down: Table, total: NDArray[Any], slopes: list[NDArray[Any] | None]) -> None:
+    def _sum(
+        self, up: Table, down: Table, total: NDArray[Any], slopes: list[NDArray[Any] | None], threads: int
+    ) -> None:
         """Blocks of walkers with like references, in threads."""
         blocks: list[NDArray[np.int64]] = []
         kinds = np.stack([up.reference_of, down.reference_of], axis=1)
         for kind in np.unique(kinds, axis=0):
             own = np.flatnonzero((kinds == kind).all(axis=1))
             blocks += [own[start : start + LANES] for start in range(0, len(own), LANES)]
-        threads = min(os.cpu_count() or 1, len(blocks))
+        threads = min(threads, len(blocks))
         if threads <= 1:
             for block in blocks:
                 self._block(up, down, block, total, slopes)
