@@ -5,34 +5,18 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
-
 import numpy as np
 from numpy.typing import NDArray
 
 from qwfx.errors import FormatError
 from qwfx.model import Expansion
+from qwfx.reference.faults import Fault
 
-__all__ = ["Fault", "allowed_bits", "beyond_orbitals", "check_expansion", "popcount", "precedes", "wrong_column",
+__all__ = ["allowed_bits", "beyond_orbitals", "check_expansion", "popcount", "precedes", "wrong_column",
            "wrong_count", "wrong_order"]  # fmt: skip
 
 WORD = 64
 _BITS = np.array([bin(byte).count("1") for byte in range(256)], dtype=np.uint8)
-
-
-@dataclass(frozen=True)
-class Fault:
-    """Something in a file that is not as it must be."""
-
-    where: str
-    """Member with the first index concerned."""
-    expected: str
-    found: str
-    remedy: str
-
-    def error(self) -> FormatError:
-        """The same as an exception."""
-        return FormatError(self.found, where=self.where, expected=self.expected, remedy=self.remedy)
 
 
 def wrong_count(spin: str, index: int, electrons: int, bits: int) -> Fault:

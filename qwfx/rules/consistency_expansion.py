@@ -11,7 +11,6 @@ from numpy.typing import NDArray
 
 from qwfx.findings import Severity
 from qwfx.reference.strings import (
-    Fault,
     allowed_bits,
     beyond_orbitals,
     popcount,
@@ -35,10 +34,6 @@ ONE_PASS_MATRIX = "one pass over row_start and columns"
 
 def _words(block: NDArray[Any]) -> NDArray[np.uint64]:
     return np.ascontiguousarray(block, dtype=np.uint64)
-
-
-def _problem(fault: Fault, count: int) -> Problem:
-    return Problem(fault.where, fault.expected, fault.found, fault.remedy, count=count)
 
 
 def _spin_of(member: str) -> str:
@@ -68,7 +63,7 @@ def string_electrons(file: Inspection) -> Iterator[Remark]:
             bad += int(wrong.sum())
             seen += len(block)
         if bad:
-            yield _problem(wrong_count(spin, first[0], electrons, first[1]), bad)
+            yield Problem.of(wrong_count(spin, first[0], electrons, first[1]), bad)
         yield Covered(every(seen, f"{spin} string"))
 
 
@@ -93,7 +88,7 @@ def string_order(file: Inspection) -> Iterator[Remark]:
             bad += int(wrong.sum())
             seen = start + len(block)
         if bad:
-            yield _problem(wrong_order(_spin_of(member), *first), bad)
+            yield Problem.of(wrong_order(_spin_of(member), *first), bad)
         yield Covered(every(seen, f"{_spin_of(member)} string"))
 
 
@@ -123,7 +118,7 @@ def string_range(file: Inspection) -> Iterator[Remark]:
                 first = start + int(np.argmax(beyond))
             bad += int(beyond.sum())
         if bad:
-            yield _problem(beyond_orbitals(spin, first, n_orbitals, name), bad)
+            yield Problem.of(beyond_orbitals(spin, first, n_orbitals, name), bad)
         yield Covered(every(file.shape(member)[0], f"{spin} string"))
     enough = max([1, *(-(-n_orbitals // WORD) for n_orbitals in sizes.values())])
     n_words = file.shape(STRINGS[0])[1]
@@ -232,10 +227,10 @@ def column_order(file: Inspection) -> Iterator[Remark]:
         disorder += int(wrong.sum())
         entries = begin + len(columns)
     if outside:
-        yield _problem(wrong_column(first_outside[0], n_down, first_outside[1], None), outside)
+        yield Problem.of(wrong_column(first_outside[0], n_down, first_outside[1], None), outside)
     if disorder:
         index, before, here = first_disorder
-        yield _problem(wrong_column(index, n_down, here, before), disorder)
+        yield Problem.of(wrong_column(index, n_down, here, before), disorder)
     yield Covered(every(entries, "entry"))
 
 

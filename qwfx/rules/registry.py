@@ -12,6 +12,7 @@ from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING, Literal, TypeAlias
 
 from qwfx.findings import Severity
+from qwfx.reference.faults import Fault
 
 if TYPE_CHECKING:
     from qwfx.rules.inspection import Inspection
@@ -52,6 +53,11 @@ class Problem:
     severity: Severity | None = None
     """None: the severity of the rule. A rule may state a milder one, never a worse one."""
     count: int = 1
+
+    @classmethod
+    def of(cls, fault: Fault, count: int = 1) -> Problem:
+        """A fault that evaluators find too, in the same words."""
+        return cls(fault.where, fault.expected, fault.found, fault.remedy, count=count)
 
 
 @dataclass(frozen=True)

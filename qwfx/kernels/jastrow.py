@@ -1,0 +1,296 @@
+"""The Jastrow factor of a file: J, its gradients and Laplacians, and its change when one electron moves."""
+
+from __future__ import annotations
+
+from typing import Any
+
+import numpy as np
+from numba import njit
+from numpy.typing import NDArray
+
+from qwfx.errors import FormatError, UnsupportedError
+from qwfx.kernels.radial import SUM, derivatives, pack_radial, values
+from qwfx.kernels.three_body import add_three_body, change_three_body, pack_three_body
+from qwfx.model import JastrowTerm, Wavefunction
+from qwfx.reference.jastrow import radial_function
+from qwfx.reference.jastrow_faults import PAIRS, atom_faults, channel_faults, parameter_faults
+
+__all__ = ["Jastrow"]
+
+FORMS = ("pade", "cutoff-polynomial", "scaled-polynomial", "bspline")
+
+
+@njit(**SUM)  # type: ignore[untyped-decorator]
+def _distances(x: Any, y: Any, first: int, last: int, at: Any, r: Any) -> None:
+    """r[k] = |at - y[first + k]|: of rows of coordinates (3, n)."""
+    for k in range(last - first):
+        dx, dy, dz = at[0] - y[0, first + k], at[1] - y[1, first + k], at[2] - y[2, first + k]
+        r[k] = np.sqrt(dx * dx + dy * dy + dz * dz)
+
+
+@njit(**SUM)  # type: ignore[untyped-decorator]
+def _add_pairs(
+    kinds: Any, starts: Any, parameters: Any, own: Any, i: int, first: int, last: int, x: Any, gradient: Any,
+    laplacian: Any, scratch: Any,
+) -> float:  # fmt: skip
+    """Electron i with the electrons `first` to `last` - 1, by the functions `own`; x and gradient are (3, N)."""
+    n = last - first
+    if n <= 0 or len(own) == 0:
+        return 0.0
+    r, u, du, d2u = scratch[0], scratch[1], scratch[2], scratch[3]
+    _distances(x, x, first, last, x[:, i], r)
+    for k in range(n):
+        u[k] = du[k] = d2u[k] = 0.0
+    for f in own:
+        derivatives(kinds[f], parameters[starts[f] : starts[f + 1]], r, n, u, du, d2u)
+    total = curve = gx = gy = gz = 0.0
+    for k in range(n):
+        j = first + k
+        slope = du[k] / r[k]
+        bend = d2u[k] + 2.0 * slope
+        dx, dy, dz = slope * (x[0, i] - x[0, j]), slope * (x[1, i] - x[1, j]), slope * (x[2, i] - x[2, j])
+        total += u[k]
+        curve += bend
+        gx += dx
+        gy += dy
+        gz += dz
+        gradient[0, j] -= dx
+        gradient[1, j] -= dy
+        gradient[2, j] -= dz
+        laplacian[j] += bend
+    gradient[0, i] += gx
+    gradient[1, i] += gy
+    gradient[2, i] += gz
+    laplacian[i] += curve
+    return total
+
+
+@njit(**SUM)  # type: ignore[untyped-decorator]
+def _all_pairs(
+    kinds: Any, starts: Any, parameters: Any, up_up: Any, up_down: Any, down_down: Any, n_up: int, x: Any,
+    gradient: Any, laplacian: Any,
+) -> float:  # fmt: skip
+    """The electron-electron terms of one walker."""
+    n = x.shape[1]
+    scratch = np.empty((4, n))
+    total = 0.0
+    for i in range(n):
+        to_up = up_up if i < n_up else up_down
+        total += _add_pairs(
+            kinds, starts, parameters, to_up, i, 0, min(i, n_up), x, gradient, laplacian, scratch
+        )  # fmt: skip
+        total += _add_pairs(kinds, starts, parameters, down_down, i, n_up, i, x, gradient, laplacian, scratch)
+    return total
+
+
+@njit(**SUM)  # type: ignore[untyped-decorator]
+def _nuclei(kind: int, p: Any, nuclei: Any, first: int, last: int, x: Any, gradient: Any, laplacian: Any) -> float:
+    """One row of an electron-nucleus term: electrons `first` to `last` - 1 with all its nuclei (3, A)."""
+    n = nuclei.shape[1]
+    r, u, du, d2u = np.empty(n), np.empty(n), np.empty(n), np.empty(n)
+    total = 0.0
+    for i in range(first, last):
+        _distances(x, nuclei, 0, n, x[:, i], r)
+        u[:], du[:], d2u[:] = 0.0, 0.0, 0.0
+        derivatives(kind, p, r, n, u, du, d2u)
+        curve = gx = gy = gz = 0.0
+        for k in range(n):
+            slope = du[k] / r[k]
+            total += u[k]
+            curve += d2u[k] + 2.0 * slope
+            gx += slope * (x[0, i] - nuclei[0, k])
+            gy += slope * (x[1, i] - nuclei[1, k])
+            gz += slope * (x[2, i] - nuclei[2, k])
+        gradient[0, i] += gx
+        gradient[1, i] += gy
+        gradient[2, i] += gz
+        laplacian[i] += curve
+    return total
+
+
+@njit(**SUM)  # type: ignore[untyped-decorator]
+def _sum_over(kinds: Any, starts: Any, parameters: Any, own: Any, y: Any, first: int, last: int, at: Any,
+              scratch: Any) -> float:  # fmt: skip
+    """Sum of the functions `own` over the distances of `at` to y[:, first:last]."""
+    n = last - first
+    if n <= 0 or len(own) == 0:
+        return 0.0
+    r, u = scratch[0], scratch[1]
+    _distances(y, y, first, last, at, r)
+    for k in range(n):
+        u[k] = 0.0
+    for f in own:
+        values(kinds[f], parameters[starts[f] : starts[f + 1]], r, n, u)
+    total = 0.0
+    for k in range(n):
+        total += u[k]
+    return total
+
+
+@njit(**SUM)  # type: ignore[untyped-decorator]
+def _change_pairs(
+    kinds: Any, starts: Any, parameters: Any, to_up: Any, to_down: Any, n_up: int, x: Any, which: int, places: Any,
+    out: Any,
+) -> None:  # fmt: skip
+    """What the electron-electron terms of one walker change by if an electron goes to each of the places (K, 3)."""
+    n = x.shape[1]
+    scratch = np.empty((2, n))
+    before = 0.0
+    for step in range(len(places) + 1):
+        at = x[:, which] if step == 0 else places[step - 1]
+        total = 0.0
+        for side in range(2):
+            own = to_up if side == 0 else to_down
+            first, last = (0, n_up) if side == 0 else (n_up, n)
+            if first <= which < last:
+                total += _sum_over(kinds, starts, parameters, own, x, first, which, at, scratch)
+                total += _sum_over(kinds, starts, parameters, own, x, which + 1, last, at, scratch)
+            else:
+                total += _sum_over(kinds, starts, parameters, own, x, first, last, at, scratch)
+        if step == 0:
+            before = total
+        else:
+            out[step - 1] += total - before
+
+
+@njit(**SUM)  # type: ignore[untyped-decorator]
+def _change_nuclei(kinds: Any, starts: Any, parameters: Any, own: Any, nuclei: Any, here: Any, places: Any,
+                   out: Any) -> None:  # fmt: skip
+    """The same of one row of an electron-nucleus term."""
+    n = nuclei.shape[1]
+    scratch = np.empty((2, n))
+    before = _sum_over(kinds, starts, parameters, own, nuclei, 0, n, here, scratch)
+    for k in range(len(places)):
+        out[k] += _sum_over(kinds, starts, parameters, own, nuclei, 0, n, places[k], scratch) - before
+
+
+class Jastrow:
+    """All terms of ``/jastrow`` (FORMAT.md, F18 to F27).
+
+    Raises FormatError for terms that `qwfx validate` finds in error, in the same words; UnsupportedError in a periodic
+    system, where J is not defined, and for a form that is not known.
+    """
+
+    def __init__(self, wavefunction: Wavefunction) -> None:
+        system = wavefunction.system
+        self.n_up, self.n_down = system.n_up, system.n_down
+        self.empty = not wavefunction.jastrow
+        """Whether J is 0."""
+        self.terms = dict(wavefunction.jastrow)
+        if not self.empty and system.cell is not None:
+            raise UnsupportedError(
+                "the system is periodic", where="/jastrow", expected="a molecule", remedy="leave the Jastrow terms out"
+            )
+        positions = np.asarray(system.positions, dtype=np.float64).reshape(-1, 3)
+        kinds: list[int] = []
+        parameters: list[NDArray[np.float64]] = []
+        self._pairs: dict[str, list[int]] = {word: [] for word in PAIRS}
+        self._nuclei: list[tuple[int, int, NDArray[np.float64]]] = []  # spin, function, nuclei (3, A)
+        self._three: list[tuple[str, NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]] = []
+        for name, term in self.terms.items():
+            _check(f"/jastrow/{name}", term, len(positions))
+            nuclei = positions[np.asarray(term.members.get("atoms", np.zeros(0))).astype(np.int64)]
+            for row, channel in enumerate(str(word) for word in term.members["channel"]):
+                if term.attributes["body"] == "three-body":
+                    p, gamma = pack_three_body(term.form, term.attributes, term.members, row)
+                    self._three.append((channel, p, gamma, nuclei))
+                    continue
+                kind, p = pack_radial(term.form, term.attributes, term.members, row)
+                if term.attributes["body"] == "electron-electron":
+                    self._pairs[channel].append(len(kinds))
+                else:
+                    spin = 0 if channel == "up" else 1
+                    self._nuclei.append((spin, len(kinds), np.ascontiguousarray(nuclei.T)))
+                kinds.append(kind)
+                parameters.append(p)
+        lengths = [0, *np.cumsum([len(p) for p in parameters]).tolist()]
+        self._functions = (
+            np.array(kinds, dtype=np.int64),
+            np.array(lengths, dtype=np.int64),
+            np.concatenate([np.zeros(0), *parameters]),
+        )
+        self._own = tuple(np.array(self._pairs[word], dtype=np.int64) for word in PAIRS)
+
+    def evaluate(
+        self, electrons: NDArray[np.float64]
+    ) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]:
+        """J (W), its gradients (W, N, 3) and its Laplacians (W, N), not those of exp(J), at electrons (W, N, 3)."""
+        n_walkers, n = electrons.shape[:2]
+        value, gradient, laplacian = np.zeros(n_walkers), np.zeros((n_walkers, n, 3)), np.zeros((n_walkers, n))
+        kinds, starts, parameters = self._functions
+        spans = ((0, self.n_up), (self.n_up, n))
+        for w in range(n_walkers):
+            x = np.ascontiguousarray(electrons[w].T)
+            slope = np.zeros((3, n))
+            value[w] = _all_pairs(*self._functions, *self._own, self.n_up, x, slope, laplacian[w])
+            for spin, f, nuclei in self._nuclei:
+                p = parameters[starts[f] : starts[f + 1]]
+                value[w] += _nuclei(kinds[f], p, nuclei, *spans[spin], x, slope, laplacian[w])
+            gradient[w] = slope.T
+            for channel, p, gamma, nuclei in self._three:
+                like, spins = channel != "up_down", _spins(channel)
+                for nucleus in nuclei:
+                    value[w] += add_three_body(
+                        p, gamma, like, *spans[spins[0]], *spans[spins[1]], nucleus, electrons[w], gradient[w],
+                        laplacian[w],
+                    )  # fmt: skip
+        return value, gradient, laplacian
+
+    def change(self, electrons: NDArray[np.float64], which: int, places: NDArray[np.float64]) -> NDArray[np.float64]:
+        """(W, K) J with electron `which` of each walker (W, N, 3) at its places (W, K, 3), less J as it is."""
+        n_walkers, n = electrons.shape[:2]
+        out = np.zeros(places.shape[:2])
+        kinds, starts, parameters = self._functions
+        spin = 0 if which < self.n_up else 1
+        spans = ((0, self.n_up), (self.n_up, n))
+        to_up, to_down = self._own[:2] if spin == 0 else self._own[1:]
+        for w in range(n_walkers):
+            x = np.ascontiguousarray(electrons[w].T)
+            _change_pairs(*self._functions, to_up, to_down, self.n_up, x, which, places[w], out[w])
+            for of, f, nuclei in self._nuclei:
+                if of == spin:
+                    own = np.array([f])
+                    _change_nuclei(kinds, starts, parameters, own, nuclei, electrons[w, which], places[w], out[w])
+            for channel, p, gamma, nuclei in self._three:
+                spins = _spins(channel)
+                if spin not in spins:
+                    continue
+                first = spins[0] == spin
+                seen = gamma if first else np.ascontiguousarray(gamma.transpose(1, 0, 2))
+                partners = spans[spins[1] if first else spins[0]]
+                change_three_body(p, seen, *partners, nuclei, electrons[w], which, places[w], out[w])
+        return out
+
+    def slopes(self) -> dict[str, float]:
+        """u'(0) of each pair of spins, summed over the electron-electron terms: 1/2 and 1/4 fulfil the cusp."""
+        total = dict.fromkeys(PAIRS, 0.0)
+        for term in self.terms.values():
+            if term.attributes["body"] == "electron-electron":
+                for row, channel in enumerate(str(word) for word in term.members["channel"]):
+                    total[channel] += float(radial_function(term, row)(0.0)[1])
+        return total
+
+
+def _spins(channel: str) -> tuple[int, int]:
+    return {"up_up": (0, 0), "up_down": (0, 1), "down_down": (1, 1)}[channel]
+
+
+def _check(path: str, term: JastrowTerm, n_atoms: int) -> None:
+    """Raise the first fault of a term."""
+    if term.form not in FORMS:
+        raise UnsupportedError(
+            f"the form {term.form!r}", where=path, expected=f"one of {', '.join(FORMS)}",
+            remedy="use a version of qwfx that knows it, or leave the term out",
+        )  # fmt: skip
+    body, members = str(term.attributes["body"]), term.members
+    words = [str(word) for word in members["channel"]]
+    faults = [*channel_faults(path, body, words)]
+    if body != "electron-electron":
+        if "atoms" not in members:
+            raise FormatError(
+                "is missing", where=f"{path}/atoms", expected="the atoms that the term is about", remedy="write them"
+            )
+        faults += atom_faults(path, members["atoms"], n_atoms)
+    faults += parameter_faults(path, dict(term.attributes) | {"form": term.form}, dict(members) | {"channel": words})
+    for fault in faults:
+        raise fault.error()
