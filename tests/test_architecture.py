@@ -17,6 +17,7 @@ FLOORS = [
     {"elements", "model", "points"},
     {"reference", "schema", "schema_check", "storage"},
     {"kernels"},
+    {"trial"},
     {"rules"},
     {"converters"},
     {"conversion", "report", "summary", "validate"},

@@ -19,12 +19,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from qwfx.errors import EvaluationError
-from qwfx.kernels.bilinear import bilinear
-from qwfx.kernels.minors import LANES, add_cofactors, fill_minors
-from qwfx.kernels.strings import SpinStrings
+from qwfx.kernels.bilinear import bilinear, largest_entries
+from qwfx.kernels.minors import NARROW, WIDE, add_cofactors, fill_minors
+from qwfx.kernels.strings import RankClass, SpinStrings
 from qwfx.kernels.tables import Table, gamma_of, make_table
 from qwfx.model import Expansion
-from qwfx.reference.determinants import occupied
 from qwfx.reference.strings import check_expansion
 
 __all__ = ["Determinants", "Values"]
@@ -34,6 +33,9 @@ LARGEST_ENTRY = 1e6
 
 ODD = 256
 """Minors of a class whose elimination breaks down that there is room for at first."""
+
+FEW = 3
+"""Walkers that are faster done one by one than as a block with idle lanes."""
 
 
 @dataclass(frozen=True, eq=False)
@@ -67,21 +69,24 @@ class Determinants:
     def __init__(
         self, expansion: Expansion, n_up: int, n_down: int, n_orbitals_up: int, n_orbitals_down: int
     ) -> None:
-        check_expansion(expansion, (n_up, n_down), (n_orbitals_up, n_orbitals_down))
-        self.row_start = np.asarray(expansion.row_start, dtype=np.int64)
-        n_down_strings = len(expansion.down_strings)
-        self.columns = np.asarray(expansion.columns).astype(np.int32 if n_down_strings < 2**31 else np.int64)
-        self.coefficients = np.ascontiguousarray(np.asarray(expansion.coefficients))
-        weight = np.zeros(len(self.columns))
-        for state in self.coefficients:
-            np.maximum(weight, np.abs(state), out=weight)
-        for_up = np.maximum.reduceat(weight, self.row_start[:-1])
-        for_down = np.zeros(n_down_strings)
-        np.maximum.at(for_down, self.columns, weight)
-        self.spins = (
-            SpinStrings(occupied(np.asarray(expansion.up_strings), n_up), for_up),
-            SpinStrings(occupied(np.asarray(expansion.down_strings), n_down), for_down),
-        )
+        up, down, row_start, columns, coefficients = (
+            np.asarray(member)
+            for member in (
+                expansion.up_strings, expansion.down_strings, expansion.row_start, expansion.columns,
+                expansion.coefficients,
+            )
+        )  # fmt: skip
+        check_expansion(
+            Expansion(expansion.up_set, expansion.down_set, up, down, row_start, columns, coefficients),
+            (n_up, n_down), (n_orbitals_up, n_orbitals_down),
+        )  # fmt: skip
+        kind = np.complex128 if np.iscomplexobj(coefficients) else np.float64
+        self.coefficients = np.ascontiguousarray(coefficients, dtype=kind)
+        self.row_start = row_start.astype(np.int64, copy=False)
+        self.columns = columns.astype(np.int32 if len(down) < 2**31 else np.int64)
+        for_up, for_down = np.zeros(len(up)), np.zeros(len(down))
+        largest_entries(self.row_start, self.columns, self.coefficients, for_up, for_down)
+        self.spins = SpinStrings(up, n_up, for_up), SpinStrings(down, n_down, for_down)
 
     @property
     def n_states(self) -> int:
@@ -112,6 +117,11 @@ class Determinants:
         given where D vanishes or is no number: see `Values`. Without `threads` all processors are taken. Raises
         EvaluationError for arrays of another shape.
         """
+        up, down = self.tables(phi_up, phi_down)
+        return self.from_tables(up, down, gammas=gammas, threads=threads)
+
+    def tables(self, phi_up: NDArray[Any], phi_down: NDArray[Any]) -> tuple[Table, Table]:
+        """The factorised determinants and tables of each spin; arguments and errors as of `evaluate`."""
         for spin, strings, phi in zip(("up", "down"), self.spins, (phi_up, phi_down), strict=True):
             wanted = (len(phi_up), strings.occupied.shape[1], len(strings.used))
             if phi.shape != wanted:
@@ -124,7 +134,7 @@ class Determinants:
             make_table(strings, phi, LARGEST_ENTRY)
             for strings, phi in zip(self.spins, (phi_up, phi_down), strict=True)
         )
-        return self.from_tables(up, down, gammas=gammas, threads=threads)
+        return up, down
 
     def from_tables(self, up: Table, down: Table, *, gammas: bool = True, threads: int | None = None) -> Values:
         """As `evaluate`, from tables that are there already: of the same walkers."""
@@ -144,11 +154,10 @@ class Determinants:
             vanishes = (size == 0) | (scale == 0)  # a spin whose orbitals are dependent has a sign of 0
             log_abs = np.where(vanishes, -np.inf, np.log(size) + up.log + down.log)
             sign = np.where(vanishes, 0, total / size * scale)
-            found = [
-                gamma_of(table, None if self.single or slope is None else slope / total[:, :, None, None], self.n_states)
-                if gammas else np.zeros((self.n_states, 0, 0, 0))
-                for table, slope in zip((up, down), slopes, strict=True)
-            ]  # fmt: skip
+            found = []
+            for table, slope in zip((up, down), slopes, strict=True):
+                x = None if self.single or slope is None else slope / total[:, :, None, None]
+                found.append(gamma_of(table, x, self.n_states) if gammas else np.zeros((self.n_states, 0, 0, 0)))
         singular = ~(np.isfinite(log_abs) & (sign != 0)).all(axis=0)
         return Values(log_abs, sign, found[0], found[1], singular)
 
@@ -160,7 +169,10 @@ class Determinants:
         kinds = np.stack([up.reference_of, down.reference_of], axis=1)
         for kind in np.unique(kinds, axis=0):
             own = np.flatnonzero((kinds == kind).all(axis=1))
-            blocks += [own[start : start + LANES] for start in range(0, len(own), LANES)]
+            rest = len(own) % len(WIDE)
+            whole = len(own) - rest if rest <= FEW else len(own)
+            blocks += [own[start : start + len(WIDE)] for start in range(0, whole, len(WIDE))]
+            blocks += [own[k : k + 1] for k in range(whole, len(own))]
         threads = min(threads, len(blocks))
         if threads <= 1:
             for block in blocks:
@@ -172,41 +184,42 @@ class Determinants:
     def _block(
         self, up: Table, down: Table, block: NDArray[np.int64], total: NDArray[Any], slopes: list[NDArray[Any] | None]
     ) -> None:
-        lanes = np.append(block, np.full(LANES - len(block), block[-1]))  # the last walker fills the block up
+        width = NARROW if len(block) == 1 else WIDE
+        lanes = np.append(block, np.full(len(width) - len(block), block[-1]))  # the last walker fills the block up
         kind = total.dtype
         classes, tables, minors = [], [], []
         for strings, side in zip(self.spins, (up, down), strict=True):
             own = strings.classes(side.references[side.reference_of[block[0]]])
             table = np.ascontiguousarray(np.moveaxis(side.table[lanes], 0, -1), kind)
-            values = np.empty((strings.n_strings, LANES), kind)
+            values = np.empty((strings.n_strings, len(width)), kind)
             for c in own:
-                fill_minors(table, c.string, c.holes, c.particles, c.sign, values)
+                fill_minors(table, c.string, c.holes, c.particles, c.sign, values, width)
             classes.append(own)
             tables.append(table)
             minors.append(values)
         partial = [np.empty((self.n_states, *values.shape), kind) for values in minors]
-        sums = np.empty(LANES, kind)
+        sums = np.empty(len(width), kind)
         for s, coefficients in enumerate(self.coefficients):
-            bilinear(self.row_start, self.columns, coefficients, *minors, sums, partial[0][s], partial[1][s])
+            bilinear(self.row_start, self.columns, coefficients, *minors, sums, partial[0][s], partial[1][s], width)
             total[s, block] = sums[: len(block)]
         for slope, own, table, weight in zip(slopes, classes, tables, partial, strict=True):
             if slope is not None:
                 found = np.zeros((self.n_states, *table.shape), kind)
                 for c in own:
                     if c.rank:
-                        _add(table, c, weight, found)
+                        _add(table, c, weight, found, width)
                 slope[:, block] = np.moveaxis(found, -1, 1)[:, : len(block)]
 
 
-def _add(table: NDArray[Any], c: Any, weight: NDArray[Any], found: NDArray[Any]) -> None:
+def _add(table: NDArray[Any], c: RankClass, weight: NDArray[Any], found: NDArray[Any], width: tuple[int, ...]) -> None:
     """Cofactors of one class; those whose elimination broke down by the singular value decomposition."""
     odd = np.zeros((ODD, 2), dtype=np.int64)
     before = found.copy() if c.rank > 2 else found
-    n_odd = add_cofactors(table, c.string, c.holes, c.particles, c.sign, weight, found, odd)
+    n_odd = add_cofactors(table, c.string, c.holes, c.particles, c.sign, weight, found, odd, width)
     if n_odd > len(odd):
         found[:] = before
         odd = np.zeros((n_odd, 2), dtype=np.int64)
-        add_cofactors(table, c.string, c.holes, c.particles, c.sign, weight, found, odd)
+        add_cofactors(table, c.string, c.holes, c.particles, c.sign, weight, found, odd, width)
     for m, b in odd[:n_odd].tolist():
         grid = np.ix_(c.holes[m], c.particles[m])
         cofactors = _cofactors(table[:, :, b][grid])
@@ -216,6 +229,8 @@ def _add(table: NDArray[Any], c: Any, weight: NDArray[Any], found: NDArray[Any])
 
 def _cofactors(a: NDArray[Any]) -> NDArray[Any]:
     """Cofactors of a matrix that may be singular: with A = U S V+, det(U V+) conj(U) (cofactors of S) conj(V)^T."""
+    if not np.isfinite(a).all():
+        return np.full_like(a, np.nan)
     u, s, vh = np.linalg.svd(a)
     others = np.array([np.prod(np.delete(s, j)) for j in range(len(s))])
     return np.asarray(np.linalg.det(u) * np.linalg.det(vh) * (u.conj() * others) @ vh.conj())

@@ -164,6 +164,45 @@ def _change_nuclei(kinds: Any, starts: Any, parameters: Any, own: Any, nuclei: A
         out[k] += _sum_over(kinds, starts, parameters, own, nuclei, 0, n, places[k], scratch) - before
 
 
+@njit(**SUM)  # type: ignore[untyped-decorator]
+def _walkers_pairs(kinds: Any, starts: Any, parameters: Any, own: Any, n_up: int, electrons: Any, value: Any,
+                   gradient: Any, laplacian: Any) -> None:  # fmt: skip
+    """`_all_pairs` of each walker (W, N, 3)."""
+    for w in range(len(electrons)):
+        x = electrons[w].T.copy()
+        slope = np.zeros(x.shape)
+        value[w] += _all_pairs(kinds, starts, parameters, own[0], own[1], own[2], n_up, x, slope, laplacian[w])
+        gradient[w] += slope.T
+
+
+@njit(**SUM)  # type: ignore[untyped-decorator]
+def _walkers_nuclei(kind: int, p: Any, nuclei: Any, first: int, last: int, electrons: Any, value: Any, gradient: Any,
+                    laplacian: Any) -> None:  # fmt: skip
+    """`_nuclei` of each walker."""
+    for w in range(len(electrons)):
+        x = electrons[w].T.copy()
+        slope = np.zeros(x.shape)
+        value[w] += _nuclei(kind, p, nuclei, first, last, x, slope, laplacian[w])
+        gradient[w] += slope.T
+
+
+@njit(**SUM)  # type: ignore[untyped-decorator]
+def _walkers_change(kinds: Any, starts: Any, parameters: Any, to_up: Any, to_down: Any, n_up: int, electrons: Any,
+                    which: int, places: Any, out: Any) -> None:  # fmt: skip
+    """`_change_pairs` of each walker."""
+    for w in range(len(electrons)):
+        x = electrons[w].T.copy()
+        _change_pairs(kinds, starts, parameters, to_up, to_down, n_up, x, which, places[w], out[w])
+
+
+@njit(**SUM)  # type: ignore[untyped-decorator]
+def _walkers_change_nuclei(kinds: Any, starts: Any, parameters: Any, own: Any, nuclei: Any, electrons: Any, which: int,
+                           places: Any, out: Any) -> None:  # fmt: skip
+    """`_change_nuclei` of each walker."""
+    for w in range(len(electrons)):
+        _change_nuclei(kinds, starts, parameters, own, nuclei, electrons[w, which], places[w], out[w])
+
+
 class Jastrow:
     """All terms of ``/jastrow`` (FORMAT.md, F18 to F27).
 
@@ -215,50 +254,41 @@ class Jastrow:
         self, electrons: NDArray[np.float64]
     ) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]:
         """J (W), its gradients (W, N, 3) and its Laplacians (W, N), not those of exp(J), at electrons (W, N, 3)."""
+        electrons = np.ascontiguousarray(electrons)
         n_walkers, n = electrons.shape[:2]
         value, gradient, laplacian = np.zeros(n_walkers), np.zeros((n_walkers, n, 3)), np.zeros((n_walkers, n))
         kinds, starts, parameters = self._functions
         spans = ((0, self.n_up), (self.n_up, n))
-        for w in range(n_walkers):
-            x = np.ascontiguousarray(electrons[w].T)
-            slope = np.zeros((3, n))
-            value[w] = _all_pairs(*self._functions, *self._own, self.n_up, x, slope, laplacian[w])
-            for spin, f, nuclei in self._nuclei:
-                p = parameters[starts[f] : starts[f + 1]]
-                value[w] += _nuclei(kinds[f], p, nuclei, *spans[spin], x, slope, laplacian[w])
-            gradient[w] = slope.T
-            for channel, p, gamma, nuclei in self._three:
-                like, spins = channel != "up_down", _spins(channel)
-                for nucleus in nuclei:
-                    value[w] += add_three_body(
-                        p, gamma, like, *spans[spins[0]], *spans[spins[1]], nucleus, electrons[w], gradient[w],
-                        laplacian[w],
-                    )  # fmt: skip
-        return value, gradient, laplacian
+        out = value, gradient, laplacian
+        if any(map(len, self._own)):
+            _walkers_pairs(*self._functions, self._own, self.n_up, electrons, *out)
+        for spin, f, nuclei in self._nuclei:
+            _walkers_nuclei(kinds[f], parameters[starts[f] : starts[f + 1]], nuclei, *spans[spin], electrons, *out)
+        for channel, p, gamma, nuclei in self._three:
+            spins = _spins(channel)
+            like = spins[0] == spins[1]
+            add_three_body(p, gamma, like, *spans[spins[0]], *spans[spins[1]], nuclei, electrons, *out)
+        return out
 
     def change(self, electrons: NDArray[np.float64], which: int, places: NDArray[np.float64]) -> NDArray[np.float64]:
         """(W, K) J with electron `which` of each walker (W, N, 3) at its places (W, K, 3), less J as it is."""
-        n_walkers, n = electrons.shape[:2]
+        electrons, places = np.ascontiguousarray(electrons), np.ascontiguousarray(places)
         out = np.zeros(places.shape[:2])
-        kinds, starts, parameters = self._functions
         spin = 0 if which < self.n_up else 1
-        spans = ((0, self.n_up), (self.n_up, n))
+        spans = ((0, self.n_up), (self.n_up, electrons.shape[1]))
         to_up, to_down = self._own[:2] if spin == 0 else self._own[1:]
-        for w in range(n_walkers):
-            x = np.ascontiguousarray(electrons[w].T)
-            _change_pairs(*self._functions, to_up, to_down, self.n_up, x, which, places[w], out[w])
-            for of, f, nuclei in self._nuclei:
-                if of == spin:
-                    own = np.array([f])
-                    _change_nuclei(kinds, starts, parameters, own, nuclei, electrons[w, which], places[w], out[w])
-            for channel, p, gamma, nuclei in self._three:
-                spins = _spins(channel)
-                if spin not in spins:
-                    continue
+        if len(to_up) or len(to_down):
+            _walkers_change(*self._functions, to_up, to_down, self.n_up, electrons, which, places, out)
+        for of, f, nuclei in self._nuclei:
+            if of == spin:
+                _walkers_change_nuclei(*self._functions, np.array([f]), nuclei, electrons, which, places, out)
+        for channel, p, gamma, nuclei in self._three:
+            spins = _spins(channel)
+            if spin in spins:
                 first = spins[0] == spin
                 seen = gamma if first else np.ascontiguousarray(gamma.transpose(1, 0, 2))
                 partners = spans[spins[1] if first else spins[0]]
-                change_three_body(p, seen, *partners, nuclei, electrons[w], which, places[w], out[w])
+                change_three_body(p, seen, *partners, nuclei, electrons, which, places, out)
         return out
 
     def slopes(self) -> dict[str, float]:

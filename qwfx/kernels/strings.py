@@ -3,14 +3,18 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
+from qwfx.reference.determinants import occupied
+from qwfx.reference.strings import popcount
+
 __all__ = ["RankClass", "SpinStrings"]
 
 Ints = NDArray[np.int64]
-PIECE = 1 << 16
+PIECE = 1 << 12
 """Strings that are looked at together."""
 KEPT = 32
 """References other than the usual one whose lists are kept."""
@@ -23,11 +27,11 @@ class RankClass:
     rank: int
     string: NDArray[np.int32]
     """(m) number of the string."""
-    holes: NDArray[np.int32]
+    holes: NDArray[np.int16]
     """(m, k) which of the reference's orbitals are empty, counted within the reference, ascending."""
-    particles: NDArray[np.int32]
+    particles: NDArray[np.int16]
     """(m, k) which other orbitals are filled, counted among the used ones, ascending."""
-    sign: NDArray[np.float64]
+    sign: NDArray[np.int8]
     """(m) ``det Phi[:, string] = sign * det T[holes, particles] * det Phi[:, reference]``."""
 
 
@@ -36,14 +40,18 @@ class SpinStrings:
 
     Parameters
     ----------
-    occupied : (K, n) orbitals of each string, ascending.
+    words : (K, words) of each string (FORMAT.md, F13), each with n bits.
     weight : (K) how much each string matters; the reference is the weightiest.
     """
 
-    def __init__(self, occupied: Ints, weight: NDArray[np.float64]) -> None:
-        self.used: Ints = np.unique(occupied)
-        self.occupied = np.searchsorted(self.used, occupied).astype(np.int32)
+    def __init__(self, words: NDArray[np.uint64], n: int, weight: NDArray[np.float64]) -> None:
+        any_of = np.bitwise_or.reduce(words, axis=0)[None]
+        self.used: Ints = occupied(any_of, int(popcount(any_of)[0]))[0]
+        self.occupied = np.empty((len(words), n), np.min_scalar_type(len(self.used)))
         """(K, n) counted among the used orbitals."""
+        for start in range(0, len(words), PIECE):
+            piece = occupied(words[start : start + PIECE], n)
+            self.occupied[start : start + PIECE] = np.searchsorted(self.used, piece)
         self.reference: Ints = self.occupied[int(np.argmax(weight))].astype(np.int64)
         self._known: dict[bytes, list[RankClass]] = {}
 
@@ -62,11 +70,11 @@ class SpinStrings:
         return self._known[key]
 
 
-def _classes(occupied: NDArray[np.int32], reference: Ints, n_used: int) -> list[RankClass]:
+def _classes(occupied: NDArray[Any], reference: Ints, n_used: int) -> list[RankClass]:
     n = len(reference)
     in_reference = np.zeros(n_used, dtype=bool)
     in_reference[reference] = True
-    parts: dict[int, list[tuple[Ints, Ints, Ints, NDArray[np.float64]]]] = {}
+    parts: dict[int, list[tuple[NDArray[Any], ...]]] = {}
     for start in range(0, len(occupied), PIECE):
         piece = occupied[start : start + PIECE]
         present = np.zeros((len(piece), n_used), dtype=bool)
@@ -80,11 +88,10 @@ def _classes(occupied: NDArray[np.int32], reference: Ints, n_used: int) -> list[
         parity = (empty * position).sum(axis=1) + (new * position).sum(axis=1)
         for k in np.unique(rank).tolist():
             own = np.flatnonzero(rank == k)
-            holes = np.nonzero(empty[own])[1].reshape(len(own), k)
-            particles = piece[own][new[own]].reshape(len(own), k)
-            parts.setdefault(k, []).append((own + start, holes, particles, 1.0 - 2.0 * (parity[own] % 2)))
-    classes = []
-    for k in sorted(parts):
-        string, holes, particles, sign = (np.concatenate(column) for column in zip(*parts[k], strict=True))
-        classes.append(RankClass(k, *(np.ascontiguousarray(a, np.int32) for a in (string, holes, particles)), sign))
-    return classes
+            parts.setdefault(k, []).append((
+                (own + start).astype(np.int32),
+                np.nonzero(empty[own])[1].reshape(len(own), k).astype(np.int16),
+                piece[own][new[own]].reshape(len(own), k).astype(np.int16),
+                (1 - 2 * (parity[own] % 2)).astype(np.int8),
+            ))  # fmt: skip
+    return [RankClass(k, *(np.concatenate(column) for column in zip(*parts[k], strict=True))) for k in sorted(parts)]

@@ -6,11 +6,13 @@ from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
+from numba import njit
 from numpy.typing import NDArray
 
+from qwfx.kernels.radial import SUM
 from qwfx.kernels.strings import SpinStrings
 
-__all__ = ["Table", "gamma_of", "make_table"]
+__all__ = ["Table", "gamma_of", "make_table", "replace_row"]
 
 
 @dataclass(eq=False)
@@ -85,6 +87,58 @@ def _other_reference(made: Table, w: int, phi: NDArray[Any]) -> None:
             return
     made.reference_of[w] = len(made.references)
     made.references.append(reference)
+
+
+@njit(**SUM)  # type: ignore[untyped-decorator]
+def _replace_rows(
+    inverse: Any, table: Any, walkers: Any, rows: Any, own: Any, i: int, ratio: Any, rest: Any, change: Any
+) -> None:
+    """See `replace_row`. `own` (w, n) are the reference's columns of `rows` (w, M); `ratio` (w) is filled."""
+    n = inverse.shape[1]
+    for m in range(len(walkers)):
+        w = walkers[m]
+        for k in range(n):
+            change[k] = 0.0
+        for h in range(n):
+            for k in range(n):
+                change[k] += own[m, h] * inverse[w, h, k]
+        ratio[m] = change[i]
+        change[i] -= 1.0
+        if len(table):
+            for p in range(len(rest)):
+                rest[p] = rows[m, p]
+            for h in range(n):
+                for p in range(len(rest)):
+                    rest[p] -= own[m, h] * table[w, h, p]
+        for h in range(n):
+            factor = inverse[w, h, i] / ratio[m]
+            for k in range(n):
+                inverse[w, h, k] -= factor * change[k]
+            if len(table):
+                for p in range(len(rest)):
+                    table[w, h, p] += factor * rest[p]
+
+
+def replace_row(made: Table, walkers: NDArray[np.int64], i: int, rows: NDArray[Any]) -> None:
+    """Put `rows` (w, M) in the place of row i of Phi of some walkers, by updates of rank one, in place.
+
+    With A^-1 and T = A^-1 Phi before, v the new row and v_ref its columns of the reference: det A grows by ratio =
+    v_ref A^-1 e_i, A^-1 by -(A^-1 e_i)(v_ref A^-1 - e_i)/ratio, T by (A^-1 e_i)(v - v_ref T)/ratio. Source: J. Sherman,
+    W. J. Morrison, Ann. Math. Stat. 21, 124 (1950).
+    """
+    n, n_used = made.inverse.shape[1], rows.shape[1]
+    own = np.empty((len(rows), n), rows.dtype)
+    for number, reference in enumerate(made.references):
+        of = made.reference_of[walkers] == number
+        own[of] = rows[of][:, reference]
+    kind = made.inverse.dtype
+    ratio = np.empty(len(rows), kind)
+    table = made.table if n != n_used else np.empty((0, 0, 0), kind)  # of a single determinant it is a unit matrix
+    with np.errstate(all="ignore"):
+        _replace_rows(made.inverse, table, walkers, rows, own, i, ratio, np.empty(n_used, kind), np.empty(n, kind))
+        size = np.abs(ratio)
+        made.log[walkers] += np.log(size)
+        made.sign[walkers] = made.sign[walkers] * (ratio / size)
 
 
 def gamma_of(made: Table, slope: NDArray[Any] | None, n_states: int) -> NDArray[Any]:

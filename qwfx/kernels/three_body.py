@@ -75,13 +75,24 @@ def _pair(p: Any, r: float, z: Any) -> None:
 
 @njit(**SUM)  # type: ignore[untyped-decorator]
 def add_three_body(
-    p: Any, gamma: Any, like: bool, i0: int, i1: int, j0: int, j1: int, nucleus: Any, x: Any, gradient: Any,
-    laplacian: Any,
-) -> float:  # fmt: skip
-    """One row of a term, one nucleus, one walker: adds to gradient (N, 3) and laplacian (N), returns the value.
+    p: Any, gamma: Any, like: bool, i0: int, i1: int, j0: int, j1: int, nuclei: Any, electrons: Any, value: Any,
+    gradient: Any, laplacian: Any,
+) -> None:  # fmt: skip
+    """Add one row of a term, at nuclei (A, 3), of walkers (W, N, 3) to J, its gradients and its Laplacians.
 
     Electrons i0 to i1 - 1 with j0 to j1 - 1; for `like` spins, which are then the same electrons, each pair once.
     """
+    for w in range(len(electrons)):
+        for nucleus in nuclei:
+            value[w] += _add(p, gamma, like, i0, i1, j0, j1, nucleus, electrons[w], gradient[w], laplacian[w])
+
+
+@njit(**SUM)  # type: ignore[untyped-decorator]
+def _add(
+    p: Any, gamma: Any, like: bool, i0: int, i1: int, j0: int, j1: int, nucleus: Any, x: Any, gradient: Any,
+    laplacian: Any,
+) -> float:  # fmt: skip
+    """One nucleus, one walker: adds to gradient (N, 3) and laplacian (N), returns the value."""
     n_l, n_m, n_n = gamma.shape
     total = 0.0
     n_electrons = len(x)
@@ -148,12 +159,21 @@ def add_three_body(
 
 @njit(**SUM)  # type: ignore[untyped-decorator]
 def change_three_body(
-    p: Any, gamma: Any, j0: int, j1: int, nuclei: Any, x: Any, which: int, places: Any, out: Any
+    p: Any, gamma: Any, j0: int, j1: int, nuclei: Any, electrons: Any, which: int, places: Any, out: Any
 ) -> None:
-    """Add to out[q] what one row of a term, at all its nuclei, changes by if electron `which` goes to places[q].
+    """Add to out[w, q] what one row of a term, at all its nuclei, changes by if electron `which` goes to places[w, q].
 
     The moved electron is the first of gamma's indices; the others are j0 to j1 - 1.
     """
+    for w in range(len(electrons)):
+        _change(p, gamma, j0, j1, nuclei, electrons[w], which, places[w], out[w])
+
+
+@njit(**SUM)  # type: ignore[untyped-decorator]
+def _change(
+    p: Any, gamma: Any, j0: int, j1: int, nuclei: Any, x: Any, which: int, places: Any, out: Any
+) -> None:
+    """One walker: add to out[q] what one row of a term, at all its nuclei, changes by if electron `which` goes to places[q]."""
     n_l, n_m, n_n = gamma.shape
     n_places = len(places)
     a, other = np.empty((n_l, 3)), np.empty((n_m, 3))

@@ -1,0 +1,54 @@
+"""The orbitals that the strings of one spin use, at the electrons of that spin."""
+
+from __future__ import annotations
+
+from typing import Any
+
+import numpy as np
+from numba import njit
+from numpy.typing import NDArray
+
+from qwfx.kernels import evaluate_orbitals
+from qwfx.model import Basis, System
+
+__all__ = ["SpinOrbitals", "contract"]
+
+
+class SpinOrbitals:
+    """Rows of an orbital set, evaluated for batches of walkers."""
+
+    def __init__(self, basis: Basis, system: System, coefficients: NDArray[Any], threads: int | None) -> None:
+        self.basis, self.positions, self.threads = basis, np.asarray(system.positions), threads
+        self.coefficients = np.ascontiguousarray(coefficients)
+
+    def at(self, places: NDArray[np.float64], derivatives: int) -> NDArray[Any]:
+        """(k, M, ...) at places (..., 3), k = 1, 4 or 5: value, gradient, Laplacian. In C order."""
+        shape = places.shape[:-1]
+        if not len(self.coefficients) or not np.prod(shape):
+            return np.zeros(({0: 1, 1: 4, 2: 5}[derivatives], len(self.coefficients), *shape), self.coefficients.dtype)
+        found = evaluate_orbitals(
+            self.basis, self.positions, self.coefficients, places.reshape(-1, 3),
+            derivatives=derivatives, threads=self.threads,
+        )  # fmt: skip
+        return np.ascontiguousarray(found.transpose(0, 2, 1)).reshape(len(found), len(self.coefficients), *shape)
+
+
+@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
+def _contract(phi: Any, gamma: Any, out: Any) -> None:
+    """out[k, w, i] = sum_p phi[k, p, w, i] gamma[w, p, i]."""
+    for w in range(gamma.shape[0]):
+        for k in range(phi.shape[0]):
+            for i in range(gamma.shape[2]):
+                out[k, w, i] = 0
+            for p in range(gamma.shape[1]):
+                for i in range(gamma.shape[2]):
+                    out[k, w, i] += phi[k, p, w, i] * gamma[w, p, i]
+
+
+def contract(phi: NDArray[Any], gamma: NDArray[Any]) -> NDArray[Any]:
+    """(S, k, W, n) of `phi` (k, M, W, n) and `gamma` (S, W, M, n): what replaces row i of Phi, over D."""
+    kind = np.result_type(phi, gamma)
+    out = np.empty((len(gamma), len(phi), *gamma.shape[1:2], gamma.shape[3]), kind)
+    for s in range(len(gamma)):
+        _contract(phi, gamma[s], out[s])
+    return out
