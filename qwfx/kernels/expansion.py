@@ -76,6 +76,7 @@ class Determinants:
                 expansion.coefficients,
             )
         )  # fmt: skip
+        up, down = (np.ascontiguousarray(strings, dtype=np.uint64) for strings in (up, down))
         check_expansion(
             Expansion(expansion.up_set, expansion.down_set, up, down, row_start, columns, coefficients),
             (n_up, n_down), (n_orbitals_up, n_orbitals_down),
