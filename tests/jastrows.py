@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from typing import Any
+
 import numpy as np
 
 from qwfx.model import JastrowTerm
@@ -23,7 +25,7 @@ def random_term(rng: np.random.Generator, form: str, body: str, n_atoms: int, ev
     words = known if every else [known[k] for k in rng.permutation(len(known))[: rng.integers(1, len(known) + 1)]]
     rows = len(words)
     members: dict[str, np.ndarray] = {"channel": np.array(words)}
-    attributes: dict[str, str | int | float] = {"body": body}
+    attributes: dict[str, Any] = {"body": body}
     if body != "electron-electron":
         members["atoms"] = np.sort(rng.permutation(n_atoms)[: rng.integers(1, n_atoms + 1)]).astype(np.int32)
     if form == "pade":
@@ -32,7 +34,9 @@ def random_term(rng: np.random.Generator, form: str, body: str, n_atoms: int, ev
         attributes["smoothness"] = int(rng.integers(2, 4))
         members["cutoff"] = rng.uniform(1.0, 5.0, rows)
         shape = (rows, 3, 3, 4) if body == "three-body" else (rows, int(rng.integers(1, 6)))
-        c = 0.1 * rng.normal(size=shape)
+        c = 0.3 * rng.normal(size=shape)
+        power = attributes["smoothness"] * (2 if body == "three-body" else 1)  # of order 1 at the origin
+        c /= members["cutoff"].reshape(-1, *[1] * (c.ndim - 1)) ** power
         if body == "three-body":
             for row, word in enumerate(words):
                 if word != "up_down":

@@ -78,7 +78,8 @@ class Walkers:
         change = np.zeros(len(there))
         if not self.trial.jastrow.empty:
             change = self.trial.jastrow.change(self.electrons, which, there[:, None])[:, 0]
-            ratio = ratio * np.exp(change)
+            with np.errstate(over="ignore"):  # infinite is what it then is
+                ratio = ratio * np.exp(change)
         self._proposal = _Proposal(which, there, rows, change)
         return np.asarray(ratio)
 
