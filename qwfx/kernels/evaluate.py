@@ -95,6 +95,7 @@ def evaluate_orbitals(
     derivatives: int = 2,
     threshold: float = 0.0,
     threads: int | None = None,
+    plan: Plan | None = None,
 ) -> NDArray[Any]:
     """Orbitals ``phi_p = sum_mu C[p, mu] chi_mu`` at the given points (FORMAT.md, Orbitals).
 
@@ -106,6 +107,7 @@ def evaluate_orbitals(
     coefficients : (M, F), real or complex.
     threshold : as for `evaluate_functions`; the error of an orbital is at most the threshold times the sum of the
         magnitudes of its coefficients.
+    plan : what `make_plan` made of this basis and these positions; saves doing so for a few points.
     basis, positions, points, derivatives, threads : as for `evaluate_functions`.
 
     Returns
@@ -125,7 +127,7 @@ def evaluate_orbitals(
             expected=f"(number of orbitals, {basis.n_functions}), one column per function of the basis",
             remedy="pass orbitals that belong to this basis",
         )
-    plan, columns = _checked(basis, positions, points, derivatives)
+    plan, columns = _checked(basis, positions, points, derivatives, plan)
     k, n = ROWS[derivatives], columns.shape[1]
     is_complex = np.iscomplexobj(matrix)
     stacked = np.concatenate([matrix.real, matrix.imag]) if is_complex else matrix
@@ -158,7 +160,7 @@ def evaluate_orbitals(
 
 
 def _checked(
-    basis: Basis, positions: NDArray[np.float64], points: NDArray[np.float64], derivatives: int
+    basis: Basis, positions: NDArray[np.float64], points: NDArray[np.float64], derivatives: int, plan: Plan | None = None
 ) -> tuple[Plan, NDArray[np.float64]]:
     """The plan, and the points as three rows."""
     if derivatives not in ROWS:
@@ -169,7 +171,7 @@ def _checked(
         if array.ndim != 2 or array.shape[1] != 3:
             raise EvaluationError(f"an array of shape {array.shape}", where=name, expected="(number, 3), in bohr")
         arrays.append(array)
-    return make_plan(basis, arrays[0]), np.ascontiguousarray(arrays[1].T)
+    return plan or make_plan(basis, arrays[0]), np.ascontiguousarray(arrays[1].T)
 
 
 def _over_blocks(plan: Plan, n: int, threads: int | None, work: Callable[[Workspace, int, int], None]) -> None:

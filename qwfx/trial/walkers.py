@@ -103,7 +103,8 @@ class Walkers:
         replace_row(table, moved, i, proposal.rows[moved])
         with np.errstate(all="ignore"):
             sound = np.abs(table.log[moved] - before) < -np.log(SMALLEST)
-            sound &= np.abs(table.table[moved]).max(axis=(1, 2), initial=0.0) < LARGEST
+            if table.table.shape[1] != table.table.shape[2]:  # else it is a unit matrix
+                sound &= np.abs(table.table[moved]).max(axis=(1, 2), initial=0.0) < LARGEST
         if not sound.all():
             self._factorise(spin, moved[~sound])
         self._renew(moved)
@@ -137,12 +138,13 @@ class Walkers:
 
     def _renew(self, moved: NDArray[np.int64]) -> None:
         """D and gamma of the walkers that moved."""
+        if self.trial.determinants.single:  # gamma is A^-1 itself, which is up to date
+            self._values = self.trial.determinants.from_tables(*self._tables)
+            return
         parts = (_taken(table, moved) for table in self._tables)
         found, values = self.trial.determinants.from_tables(*parts), self._values
         gammas = [values.gamma_up, values.gamma_down]
         for spin, new in enumerate((found.gamma_up, found.gamma_down)):
-            if not gammas[spin].flags.writeable:  # of a single determinant it is A^-1 itself, seen for each state
-                gammas[spin] = np.array(gammas[spin])
             gammas[spin][:, moved] = new
         for old, fresh in ((values.log_abs, found.log_abs), (values.sign, found.sign)):
             old[:, moved] = fresh
