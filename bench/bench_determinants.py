@@ -63,9 +63,8 @@ def molecule() -> tuple[Basis, np.ndarray, np.ndarray]:
     atoms = [("C", (0, 0, z)) for z in (-1.9, -0.63, 0.63, 1.9)]
     atoms += [("H", (0, y, z)) for z in (-2.45, 2.45) for y in (-0.93, 0.93)]
     mol = gto.M(atom=atoms, basis={"C": "aug-cc-pvtz", "H": "cc-pvdz"}, verbose=0)
-    _, orbitals = scf.RHF(mol).density_fit().eig(
-        scf.RHF(mol).density_fit().get_fock(dm=scf.RHF(mol).get_init_guess(key="minao")), mol.intor("int1e_ovlp")
-    )
+    field = scf.RHF(mol).density_fit()
+    _, orbitals = field.eig(field.get_fock(dm=field.get_init_guess(key="minao")), mol.intor("int1e_ovlp"))
     return basis_of(mol), mol.atom_coords(), np.ascontiguousarray(orbitals[function_order(mol)].T[: CORE + ACTIVE])
 
 

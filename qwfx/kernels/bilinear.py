@@ -6,6 +6,7 @@ from typing import Any
 
 from numba import njit
 
+from qwfx.kernels.lanes import load, plus_product, same, store
 from qwfx.kernels.numeric import JIT
 
 __all__ = ["bilinear", "largest_entries"]
@@ -16,27 +17,24 @@ def bilinear(
     row_start: Any, columns: Any, coefficients: Any, up: Any, down: Any, total: Any, for_up: Any, for_down: Any,
     width: Any,
 ) -> None:  # fmt: skip
-    """total[b] = sum_IJ C_IJ up[I, b] down[J, b], and its derivatives with respect to up and down.
+    """Row 0 of `total` = sum_IJ C_IJ up[I] down[J], and its derivatives with respect to up and down.
 
     coefficients: (E) of one state. up, for_up: (U, walkers). down, for_down: (D, walkers). An entry is read once for
     the whole block. `width` is a tuple as long as the block, see `qwfx.kernels.minors`.
     """
-    lanes = len(width)
+    zero = same(down, 0.0, width)
     for j in range(len(for_down)):
-        for b in range(lanes):
-            for_down[j, b] = 0.0
-    for b in range(lanes):
-        total[b] = 0.0
+        store(for_down, j, zero)
+    everything = zero
     for i in range(len(row_start) - 1):
-        for b in range(lanes):
-            for_up[i, b] = 0.0
+        own, row = load(up, i, width), zero
         for e in range(row_start[i], row_start[i + 1]):
             c, j = coefficients[e], columns[e]
-            for b in range(lanes):
-                for_up[i, b] += c * down[j, b]
-                for_down[j, b] += c * up[i, b]
-        for b in range(lanes):
-            total[b] += for_up[i, b] * up[i, b]
+            row = plus_product(row, c, load(down, j, width))
+            store(for_down, j, plus_product(load(for_down, j, width), c, own))
+        store(for_up, i, row)
+        everything = plus_product(everything, row, own)
+    store(total, 0, everything)
 
 
 @njit(**JIT)  # type: ignore[untyped-decorator]

@@ -66,9 +66,7 @@ class Determinants:
     Raises FormatError for strings of another number of electrons, or with bits beyond the orbitals.
     """
 
-    def __init__(
-        self, expansion: Expansion, n_up: int, n_down: int, n_orbitals_up: int, n_orbitals_down: int
-    ) -> None:
+    def __init__(self, expansion: Expansion, n_up: int, n_down: int, n_orbitals_up: int, n_orbitals_down: int) -> None:
         up, down, row_start, columns, coefficients = (
             np.asarray(member)
             for member in (
@@ -132,8 +130,7 @@ class Determinants:
                     expected=f"{wanted}: walkers, {spin} electrons, orbitals that occur in {spin} strings",
                 )
         up, down = (
-            make_table(strings, phi, LARGEST_ENTRY)
-            for strings, phi in zip(self.spins, (phi_up, phi_down), strict=True)
+            make_table(strings, phi, LARGEST_ENTRY) for strings, phi in zip(self.spins, (phi_up, phi_down), strict=True)
         )
         return up, down
 
@@ -191,41 +188,43 @@ class Determinants:
         classes, tables, minors = [], [], []
         for strings, side in zip(self.spins, (up, down), strict=True):
             own = strings.classes(side.references[side.reference_of[block[0]]])
-            table = np.ascontiguousarray(np.moveaxis(side.table[lanes], 0, -1), kind)
+            table = np.ascontiguousarray(np.moveaxis(side.table[lanes], 0, -1), kind).reshape(-1, len(width))
             values = np.empty((strings.n_strings, len(width)), kind)
             for c in own:
-                fill_minors(table, c.string, c.holes, c.particles, c.sign, values, width)
+                fill_minors(table, len(strings.used), c.string, c.holes, c.particles, c.sign, values, width)
             classes.append(own)
             tables.append(table)
             minors.append(values)
         partial = [np.empty((self.n_states, *values.shape), kind) for values in minors]
-        sums = np.empty(len(width), kind)
+        sums = np.empty((1, len(width)), kind)
         for s, coefficients in enumerate(self.coefficients):
             bilinear(self.row_start, self.columns, coefficients, *minors, sums, partial[0][s], partial[1][s], width)
-            total[s, block] = sums[: len(block)]
+            total[s, block] = sums[0, : len(block)]
         for slope, own, table, weight in zip(slopes, classes, tables, partial, strict=True):
             if slope is not None:
                 found = np.zeros((self.n_states, *table.shape), kind)
                 for c in own:
                     if c.rank:
-                        _add(table, c, weight, found, width)
-                slope[:, block] = np.moveaxis(found, -1, 1)[:, : len(block)]
+                        _add(table, slope.shape[3], c, weight, found, width)
+                slope[:, block] = np.moveaxis(found[:, :, : len(block)], 2, 1).reshape(slope[:, block].shape)
 
 
-def _add(table: NDArray[Any], c: RankClass, weight: NDArray[Any], found: NDArray[Any], width: tuple[int, ...]) -> None:
+def _add(
+    table: NDArray[Any], n_columns: int, c: RankClass, weight: NDArray[Any], found: NDArray[Any], width: tuple[int, ...]
+) -> None:
     """Cofactors of one class; those whose elimination broke down by the singular value decomposition."""
     odd = np.zeros((ODD, 2), dtype=np.int64)
     before = found.copy() if c.rank > 2 else found
-    n_odd = add_cofactors(table, c.string, c.holes, c.particles, c.sign, weight, found, odd, width)
+    n_odd = add_cofactors(table, n_columns, c.string, c.holes, c.particles, c.sign, weight, found, odd, width)
     if n_odd > len(odd):
         found[:] = before
         odd = np.zeros((n_odd, 2), dtype=np.int64)
-        add_cofactors(table, c.string, c.holes, c.particles, c.sign, weight, found, odd, width)
+        add_cofactors(table, n_columns, c.string, c.holes, c.particles, c.sign, weight, found, odd, width)
     for m, b in odd[:n_odd].tolist():
-        grid = np.ix_(c.holes[m], c.particles[m])
-        cofactors = _cofactors(table[:, :, b][grid])
+        rows = c.holes[m].astype(np.int64)[:, None] * n_columns + c.particles[m]
+        cofactors = _cofactors(table[rows, b])
         for s in range(len(found)):
-            found[s, :, :, b][grid] += c.sign[m] * weight[s, c.string[m], b] * cofactors
+            found[s, rows, b] += c.sign[m] * weight[s, c.string[m], b] * cofactors
 
 
 def _cofactors(a: NDArray[Any]) -> NDArray[Any]:

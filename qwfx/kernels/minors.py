@@ -1,7 +1,7 @@
-"""Minors of a table and their cofactors, for a block of walkers at a time: the walkers are the last axis.
+"""Minors of a table and their cofactors, for a block of walkers at a time.
 
-A block has `WIDE` or `NARROW` walkers. The kernels take that tuple for its length, which is part of its type: loops
-over the walkers have a length that the compiler knows, and become vector instructions.
+Every array has a row for each number of the formula, and in it the numbers of the walkers of a block: `WIDE` or
+`NARROW` of them. Element (h, p) of a table with M columns is row h M + p.
 
 Elimination with pivots chosen for each walker: cofactor expansions would lose most digits where the reference
 determinant is small and the table large.
@@ -14,178 +14,184 @@ from typing import Any
 import numpy as np
 from numba import njit
 
+from qwfx.kernels.lanes import (
+    divide,
+    equal,
+    larger,
+    load,
+    minus_product,
+    plus_product,
+    same,
+    size,
+    store,
+    times,
+)
 from qwfx.kernels.numeric import JIT
 
 __all__ = ["NARROW", "WIDE", "add_cofactors", "fill_minors"]
 
 WIDE = (0,) * 8
-"""A block of walkers: one cache line, and two or four vector registers."""
+"""A block of walkers: one cache line, and one, two or four vector registers."""
 NARROW = (0,)
 """One walker, where there are too few for a block."""
 
+TINY = 1e-290
+"""Pivots below have no inverse that could be used."""
+
 
 @njit(**JIT)  # type: ignore[untyped-decorator]
-def _eliminate(a: Any, k: int, det: Any, last: Any, order: Any, width: Any) -> None:
-    """LU factors of (k, k, walkers) in place, rows exchanged; `det` is the product of all pivots, with its sign.
+def _eliminate(a: Any, k: int, det: Any, order: Any, width: Any) -> None:
+    """LU factors of a (k k, walkers) in place, rows exchanged; row c of `order` is the row that c was exchanged with.
 
-    `last` is that product without the last pivot, and order[c] the row that was exchanged with row c. The exchanges
+    Row 0 of `det` is the product of all pivots, with its sign, row 1 the same without the last pivot. The exchanges
     are selections by walker, without branches, so that they are done for the whole block at once.
     """
-    lanes = len(width)
-    best = np.empty(lanes)
-    for b in range(lanes):
-        det[b] = 1.0
+    product = same(a, 1.0, width)
     for c in range(k):
-        for b in range(lanes):
-            best[b] = abs(a[c, c, b])
-            order[c, b] = c
+        best = size(load(a, c * k + c, width))
+        chosen = same(order, c, width)
         for r in range(c + 1, k):
-            for b in range(lanes):
-                size = abs(a[r, c, b])
-                better = size > best[b]
-                best[b] = size if better else best[b]
-                order[c, b] = r if better else order[c, b]
+            found = size(load(a, r * k + c, width))
+            chosen = larger(found, best, same(order, r, width), chosen)
+            best = larger(found, best, found, best)
+        store(order, c, chosen)
         for r in range(c + 1, k):
+            row = same(order, r, width)
             for j in range(k):
-                for b in range(lanes):
-                    swap = order[c, b] == r
-                    x, y = a[c, j, b], a[r, j, b]
-                    a[c, j, b] = y if swap else x
-                    a[r, j, b] = x if swap else y
-        for b in range(lanes):
-            last[b] = det[b] if order[c, b] == c else -det[b]
-            det[b] = last[b] * a[c, c, b]
+                x, y = load(a, c * k + j, width), load(a, r * k + j, width)
+                store(a, c * k + j, equal(chosen, row, y, x))
+                store(a, r * k + j, equal(chosen, row, x, y))
+        product = equal(chosen, same(order, c, width), product, times(-1.0, product))
+        store(det, 1, product)
+        pivot = load(a, c * k + c, width)
+        product = times(product, pivot)
         for r in range(c + 1, k):
-            for b in range(lanes):
-                pivot = a[c, c, b]
-                a[r, c, b] = a[r, c, b] / pivot if pivot != 0.0 else 0.0 * pivot
+            factor = divide(load(a, r * k + c, width), pivot)
+            store(a, r * k + c, factor)
             for j in range(c + 1, k):
-                for b in range(lanes):
-                    a[r, j, b] -= a[r, c, b] * a[c, j, b]
+                store(a, r * k + j, minus_product(load(a, r * k + j, width), factor, load(a, c * k + j, width)))
+    store(det, 0, product)
 
 
 @njit(**JIT)  # type: ignore[untyped-decorator]
-def _gather(table: Any, holes: Any, particles: Any, a: Any, width: Any) -> None:
-    lanes = len(width)
-    for i in range(len(holes)):
-        for j in range(len(particles)):
-            for b in range(lanes):
-                a[i, j, b] = table[holes[i], particles[j], b]
+def _gather(table: Any, n_columns: int, holes: Any, particles: Any, a: Any, width: Any) -> None:
+    k = len(holes)
+    for i in range(k):
+        for j in range(k):
+            store(a, i * k + j, load(table, holes[i] * n_columns + particles[j], width))
 
 
 @njit(**JIT)  # type: ignore[untyped-decorator]
-def fill_minors(table: Any, string: Any, holes: Any, particles: Any, sign: Any, out: Any, width: Any) -> None:
-    """out[string[m], b] = sign[m] det table[holes[m], particles[m], b], for a table (n, M, walkers)."""
+def fill_minors(
+    table: Any, n_columns: int, string: Any, holes: Any, particles: Any, sign: Any, out: Any, width: Any
+) -> None:
+    """Row string[m] of `out` = sign[m] det table[holes[m], particles[m]]."""
     k, lanes = holes.shape[1], len(width)
-    a = np.empty((k, k, lanes), table.dtype)
-    det, last = np.empty(lanes, table.dtype), np.empty(lanes, table.dtype)
-    order = np.empty((k, lanes), np.int64)
+    a = np.empty((k * k, lanes), table.dtype)
+    det = np.empty((2, lanes), table.dtype)
+    order = np.empty((k, lanes))
     for m in range(len(string)):
         if k == 0:
-            for b in range(lanes):
-                out[string[m], b] = sign[m]
+            store(out, string[m], same(out, sign[m], width))
         elif k == 1:
-            for b in range(lanes):
-                out[string[m], b] = sign[m] * table[holes[m, 0], particles[m, 0], b]
+            store(out, string[m], times(sign[m], load(table, holes[m, 0] * n_columns + particles[m, 0], width)))
         elif k == 2:
-            h0, h1, p0, p1 = holes[m, 0], holes[m, 1], particles[m, 0], particles[m, 1]
-            for b in range(lanes):
-                crossed = table[h0, p1, b] * table[h1, p0, b]
-                out[string[m], b] = sign[m] * (table[h0, p0, b] * table[h1, p1, b] - crossed)
+            upper, lower, p0, p1 = holes[m, 0] * n_columns, holes[m, 1] * n_columns, particles[m, 0], particles[m, 1]
+            minor = times(load(table, upper + p0, width), load(table, lower + p1, width))
+            minor = minus_product(minor, load(table, upper + p1, width), load(table, lower + p0, width))
+            store(out, string[m], times(sign[m], minor))
         else:
-            _gather(table, holes[m], particles[m], a, width)
-            _eliminate(a, k, det, last, order, width)
-            for b in range(lanes):
-                out[string[m], b] = sign[m] * det[b]
+            _gather(table, n_columns, holes[m], particles[m], a, width)
+            _eliminate(a, k, det, order, width)
+            store(out, string[m], times(sign[m], load(det, 0, width)))
 
 
 @njit(**JIT)  # type: ignore[untyped-decorator]
-def _adjugate(a: Any, k: int, det: Any, last: Any, order: Any, x: Any, adjugate: Any, width: Any) -> None:
+def _adjugate(a: Any, k: int, det: Any, order: Any, inverse: Any, x: Any, adjugate: Any, width: Any) -> None:
     """The adjugate from the factors: the inverse times the determinant, without a division by the last pivot.
 
     Column c of it solves A y = det e_c; the factor det is put in as (product of the other pivots) times the last one,
     which cancels, so that a minor that vanishes still has the right cofactors.
     """
-    lanes = len(width)
+    one = same(a, 1.0, width)
+    for r in range(k - 1):
+        store(inverse, r, divide(one, load(a, r * k + r, width)))
     for c in range(k):
         for r in range(k):
-            for b in range(lanes):
-                x[r, b] = 1.0 if r == c else 0.0
+            store(x, r, same(a, 1.0 if r == c else 0.0, width))
         for s in range(k):  # the exchanges of rows, in their order
+            chosen = load(order, s, width)
             for r in range(s + 1, k):
-                for b in range(lanes):
-                    swap = order[s, b] == r
-                    y, z = x[s, b], x[r, b]
-                    x[s, b] = z if swap else y
-                    x[r, b] = y if swap else z
+                row = same(order, r, width)
+                y, z = load(x, s, width), load(x, r, width)
+                store(x, s, equal(chosen, row, z, y))
+                store(x, r, equal(chosen, row, y, z))
         for r in range(1, k):
+            y = load(x, r, width)
             for j in range(r):
-                for b in range(lanes):
-                    x[r, b] -= a[r, j, b] * x[j, b]
-        for b in range(lanes):
-            adjugate[k - 1, c, b] = last[b] * x[k - 1, b]
+                y = minus_product(y, load(a, r * k + j, width), load(x, j, width))
+            store(x, r, y)
+        store(adjugate, (k - 1) * k + c, times(load(det, 1, width), load(x, k - 1, width)))
         for r in range(k - 2, -1, -1):
-            for b in range(lanes):
-                x[r, b] = det[b] * x[r, b]
+            y = times(load(det, 0, width), load(x, r, width))
             for j in range(r + 1, k):
-                for b in range(lanes):
-                    x[r, b] -= a[r, j, b] * adjugate[j, c, b]
-            for b in range(lanes):
-                adjugate[r, c, b] = x[r, b] / a[r, r, b]
+                y = minus_product(y, load(a, r * k + j, width), load(adjugate, j * k + c, width))
+            store(adjugate, r * k + c, times(y, load(inverse, r, width)))
+
+
+@njit(**JIT)  # type: ignore[untyped-decorator]
+def _add(out: Any, row: int, weight: Any, x: Any, width: Any) -> None:
+    store(out, row, plus_product(load(out, row, width), weight, x))
 
 
 @njit(**JIT)  # type: ignore[untyped-decorator]
 def add_cofactors(
-    table: Any, string: Any, holes: Any, particles: Any, sign: Any, weight: Any, out: Any, odd: Any, width: Any
-) -> int:
-    """out[s, h, p, b] += weight[s, string, b] d(sign det table[holes, particles, b]) / d table[h, p, b].
+    table: Any, n_columns: int, string: Any, holes: Any, particles: Any, sign: Any, weight: Any, out: Any, odd: Any,
+    width: Any,
+) -> int:  # fmt: skip
+    """Row h M + p of out[s] += weight[s, string] d(sign det table[holes, particles]) / d table[h, p].
 
-    out: (S, n, M, walkers). Where the elimination meets a pivot of zero before the last, the minor is left out and
-    noted in odd[:, 0] = m, odd[:, 1] = b; returns how many there are (more than fit are counted only).
+    weight: (S, K, walkers). out: (S, n M, walkers). Where the elimination meets a pivot of zero before the last, the
+    minor is left out and noted in odd[:, 0] = m, odd[:, 1] = walker; returns how many there are (more than fit are
+    counted only).
     """
-    k, n_states, n_odd, lanes = holes.shape[1], weight.shape[0], 0, len(width)
-    a = np.empty((k, k, lanes), table.dtype)
-    adjugate = np.empty((k, k, lanes), table.dtype)
-    x = np.empty((k, lanes), table.dtype)
-    det, last = np.empty(lanes, table.dtype), np.empty(lanes, table.dtype)
-    order = np.empty((k, lanes), np.int64)
-    keep = np.ones(lanes)
+    k, n_odd, lanes = holes.shape[1], 0, len(width)
+    a, adjugate = np.empty((k * k, lanes), table.dtype), np.empty((k * k, lanes), table.dtype)
+    x, inverse = np.empty((k, lanes), table.dtype), np.empty((k, lanes), table.dtype)
+    det = np.empty((2, lanes), table.dtype)
+    order, sound = np.empty((k, lanes)), np.empty((1, lanes))
     for m in range(len(string)):
-        if k == 1:
-            for s in range(n_states):
-                for b in range(lanes):
-                    out[s, holes[m, 0], particles[m, 0], b] += sign[m] * weight[s, string[m], b]
-            continue
-        if k == 2:
-            h0, h1, p0, p1 = holes[m, 0], holes[m, 1], particles[m, 0], particles[m, 1]
-            for s in range(n_states):
-                for b in range(lanes):
-                    w = sign[m] * weight[s, string[m], b]
-                    out[s, h0, p0, b] += w * table[h1, p1, b]
-                    out[s, h1, p1, b] += w * table[h0, p0, b]
-                    out[s, h0, p1, b] -= w * table[h1, p0, b]
-                    out[s, h1, p0, b] -= w * table[h0, p1, b]
-            continue
-        _gather(table, holes[m], particles[m], a, width)
-        _eliminate(a, k, det, last, order, width)
-        for b in range(lanes):
-            keep[b] = 1.0
-            for c in range(k - 1):
-                if a[c, c, b] == 0.0:
-                    keep[b] = 0.0
-            if keep[b] == 0.0:
-                if n_odd < len(odd):
-                    odd[n_odd, 0], odd[n_odd, 1] = m, b
-                n_odd += 1
+        if k > 2:
+            _gather(table, n_columns, holes[m], particles[m], a, width)
+            _eliminate(a, k, det, order, width)
+            _adjugate(a, k, det, order, inverse, x, adjugate, width)
+            for b in range(lanes):
+                sound[0, b] = 1.0
                 for c in range(k - 1):
-                    a[c, c, b] = 1.0
-        _adjugate(a, k, det, last, order, x, adjugate, width)
-        for s in range(n_states):
-            for i in range(k):
-                for j in range(k):
-                    for b in range(lanes):
+                    if abs(a[c * k + c, b]) < TINY:
+                        sound[0, b] = 0.0
+                if sound[0, b] == 0.0:
+                    if n_odd < len(odd):
+                        odd[n_odd, 0], odd[n_odd, 1] = m, b
+                    n_odd += 1
+        for s in range(len(weight)):
+            w = times(sign[m], load(weight[s], string[m], width))
+            if k == 1:
+                _add(out[s], holes[m, 0] * n_columns + particles[m, 0], 1.0, w, width)
+            elif k == 2:
+                upper, lower = holes[m, 0] * n_columns, holes[m, 1] * n_columns
+                p0, p1 = particles[m, 0], particles[m, 1]
+                minus = times(-1.0, w)
+                _add(out[s], upper + p0, w, load(table, lower + p1, width), width)
+                _add(out[s], lower + p1, w, load(table, upper + p0, width), width)
+                _add(out[s], upper + p1, minus, load(table, lower + p0, width), width)
+                _add(out[s], lower + p0, minus, load(table, upper + p1, width), width)
+            else:
+                nothing, zero = same(table, 0.0, width), same(sound, 0.0, width)
+                keep = load(sound, 0, width)
+                for i in range(k):
+                    for j in range(k):
                         # The cofactor of element (i, j) is the adjugate's element (j, i).
-                        out[s, holes[m, i], particles[m, j], b] += (
-                            keep[b] * sign[m] * weight[s, string[m], b] * adjugate[j, i, b]
-                        )
+                        cofactor = equal(keep, zero, nothing, load(adjugate, j * k + i, width))
+                        _add(out[s], holes[m, i] * n_columns + particles[m, j], w, cofactor, width)
     return n_odd
