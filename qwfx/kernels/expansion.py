@@ -28,8 +28,12 @@ from qwfx.reference.strings import check_expansion
 
 __all__ = ["Determinants", "Values"]
 
-LARGEST_ENTRY = 1e6
-"""Of the table: beyond, minors have lost so many digits that another reference is taken for the walker."""
+LARGEST_ENTRY = 1e4
+"""Of the table: beyond, another reference is taken for the walker. With entries of size x, log D loses about the digits
+of x, and gamma those of x^2."""
+
+ROOM = 1 << 26
+"""Bytes that the minors of the walkers at work may take in any case; more only up to the size of the expansion."""
 
 ODD = 256
 """Minors of a class whose elimination breaks down that there is room for at first."""
@@ -79,6 +83,7 @@ class Determinants:
             Expansion(expansion.up_set, expansion.down_set, up, down, row_start, columns, coefficients),
             (n_up, n_down), (n_orbitals_up, n_orbitals_down),
         )  # fmt: skip
+        self._stored = sum(member.nbytes for member in (up, down, row_start, columns, coefficients))
         kind = np.complex128 if np.iscomplexobj(coefficients) else np.float64
         self.coefficients = np.ascontiguousarray(coefficients, dtype=kind)
         self.row_start = row_start.astype(np.int64, copy=False)
@@ -163,13 +168,17 @@ class Determinants:
         self, up: Table, down: Table, total: NDArray[Any], slopes: list[NDArray[Any] | None], threads: int
     ) -> None:
         """Blocks of walkers with like references, in threads."""
+        per_walker = sum(x.n_strings for x in self.spins) * (1 + self.n_states) * total.itemsize
+        room = max(ROOM, self._stored) // per_walker
+        threads = max(1, min(threads, room // len(WIDE)))
+        size = len(WIDE) if room >= len(WIDE) else 1
         blocks: list[NDArray[np.int64]] = []
         kinds = np.stack([up.reference_of, down.reference_of], axis=1)
         for kind in np.unique(kinds, axis=0):
             own = np.flatnonzero((kinds == kind).all(axis=1))
-            rest = len(own) % len(WIDE)
+            rest = len(own) % size
             whole = len(own) - rest if rest <= FEW else len(own)
-            blocks += [own[start : start + len(WIDE)] for start in range(0, whole, len(WIDE))]
+            blocks += [own[start : start + size] for start in range(0, whole, size)]
             blocks += [own[k : k + 1] for k in range(whole, len(own))]
         threads = min(threads, len(blocks))
         if threads <= 1:
