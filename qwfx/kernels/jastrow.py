@@ -9,7 +9,7 @@ from numba import njit
 from numpy.typing import NDArray
 
 from qwfx.errors import FormatError, UnsupportedError
-from qwfx.kernels.radial import SUM, derivatives, pack_radial, values
+from qwfx.kernels.radial import CUTOFF, SUM, add_up, add_up_usual, derivatives, pack_radial
 from qwfx.kernels.three_body import add_three_body, change_three_body, pack_three_body
 from qwfx.model import JastrowTerm, Wavefunction
 from qwfx.reference.jastrow import radial_function
@@ -17,14 +17,17 @@ from qwfx.reference.jastrow_faults import PAIRS, atom_faults, channel_faults, pa
 
 __all__ = ["Jastrow"]
 
+BLOCK = 512
+"""Distances at a time: they and what is made of them stay in the fastest cache."""
 FORMS = ("pade", "cutoff-polynomial", "scaled-polynomial", "bspline")
 
 
 @njit(**SUM)  # type: ignore[untyped-decorator]
-def _distances(x: Any, y: Any, first: int, last: int, at: Any, r: Any) -> None:
-    """r[k] = |at - y[first + k]|: of rows of coordinates (3, n)."""
-    for k in range(last - first):
-        dx, dy, dz = at[0] - y[0, first + k], at[1] - y[1, first + k], at[2] - y[2, first + k]
+def _distances(x: Any, y: Any, z: Any, at: Any, r: Any) -> None:
+    """r[k] = |at - (x, y, z)[k]|."""
+    ax, ay, az = at[0], at[1], at[2]
+    for k in range(len(x)):
+        dx, dy, dz = ax - x[k], ay - y[k], az - z[k]
         r[k] = np.sqrt(dx * dx + dy * dy + dz * dz)
 
 
@@ -38,7 +41,7 @@ def _add_pairs(
     if n <= 0 or len(own) == 0:
         return 0.0
     r, u, du, d2u = scratch[0], scratch[1], scratch[2], scratch[3]
-    _distances(x, x, first, last, x[:, i], r)
+    _distances(x[0, first:last], x[1, first:last], x[2, first:last], x[:, i], r)
     for k in range(n):
         u[k] = du[k] = d2u[k] = 0.0
     for f in own:
@@ -90,7 +93,7 @@ def _nuclei(kind: int, p: Any, nuclei: Any, first: int, last: int, x: Any, gradi
     r, u, du, d2u = np.empty(n), np.empty(n), np.empty(n), np.empty(n)
     total = 0.0
     for i in range(first, last):
-        _distances(x, nuclei, 0, n, x[:, i], r)
+        _distances(nuclei[0], nuclei[1], nuclei[2], x[:, i], r)
         u[:], du[:], d2u[:] = 0.0, 0.0, 0.0
         derivatives(kind, p, r, n, u, du, d2u)
         curve = gx = gy = gz = 0.0
@@ -111,57 +114,64 @@ def _nuclei(kind: int, p: Any, nuclei: Any, first: int, last: int, x: Any, gradi
 @njit(**SUM)  # type: ignore[untyped-decorator]
 def _sum_over(kinds: Any, starts: Any, parameters: Any, own: Any, y: Any, first: int, last: int, at: Any,
               scratch: Any) -> float:  # fmt: skip
-    """Sum of the functions `own` over the distances of `at` to y[:, first:last]."""
-    n = last - first
-    if n <= 0 or len(own) == 0:
-        return 0.0
-    r, u = scratch[0], scratch[1]
-    _distances(y, y, first, last, at, r)
-    for k in range(n):
-        u[k] = 0.0
-    for f in own:
-        values(kinds[f], parameters[starts[f] : starts[f + 1]], r, n, u)
+    """Sum of the functions `own` over the distances of `at` to y[:, first:last], in blocks that stay in the cache."""
     total = 0.0
-    for k in range(n):
-        total += u[k]
+    if len(own) == 0 or first >= last:
+        return total
+    if len(own) == 1 and kinds[own[0]] == CUTOFF:
+        p = parameters[starts[own[0]] : starts[own[0] + 1]]
+        if len(p) == 10 and p[1] == 3.0:
+            return add_up_usual(p, y[0, first:last], y[1, first:last], y[2, first:last], at)
+    for start in range(first, last, BLOCK):
+        stop = min(start + BLOCK, last)
+        r = scratch[0]
+        _distances(y[0, start:stop], y[1, start:stop], y[2, start:stop], at, r)
+        for f in own:
+            total += add_up(
+                kinds[f], parameters[starts[f] : starts[f + 1]], r, stop - start, scratch[1], scratch[2]
+            )  # fmt: skip
     return total
 
 
 @njit(**SUM)  # type: ignore[untyped-decorator]
 def _change_pairs(
-    kinds: Any, starts: Any, parameters: Any, to_up: Any, to_down: Any, n_up: int, x: Any, which: int, places: Any,
+    kinds: Any, starts: Any, parameters: Any, to_up: Any, to_down: Any, n_up: int, rows: Any, which: int, places: Any,
     out: Any,
 ) -> None:  # fmt: skip
-    """What the electron-electron terms of one walker change by if an electron goes to each of the places (K, 3)."""
-    n = x.shape[1]
-    scratch = np.empty((2, n))
-    before = 0.0
-    for step in range(len(places) + 1):
-        at = x[:, which] if step == 0 else places[step - 1]
-        total = 0.0
-        for side in range(2):
-            own = to_up if side == 0 else to_down
-            first, last = (0, n_up) if side == 0 else (n_up, n)
-            if first <= which < last:
-                total += _sum_over(kinds, starts, parameters, own, x, first, which, at, scratch)
-                total += _sum_over(kinds, starts, parameters, own, x, which + 1, last, at, scratch)
+    """What the electron-electron terms of walkers (W, 3, N) change by if an electron goes to each place (W, K, 3)."""
+    n = rows.shape[2]
+    scratch = np.empty((3, BLOCK))
+    for w in range(len(rows)):
+        x = rows[w]
+        before = 0.0
+        for step in range(places.shape[1] + 1):
+            at = x[:, which].copy() if step == 0 else places[w, step - 1]
+            total = 0.0
+            for side in range(2):
+                own = to_up if side == 0 else to_down
+                first, last = (0, n_up) if side == 0 else (n_up, n)
+                if first <= which < last:
+                    total += _sum_over(kinds, starts, parameters, own, x, first, which, at, scratch)
+                    total += _sum_over(kinds, starts, parameters, own, x, which + 1, last, at, scratch)
+                else:
+                    total += _sum_over(kinds, starts, parameters, own, x, first, last, at, scratch)
+            if step == 0:
+                before = total
             else:
-                total += _sum_over(kinds, starts, parameters, own, x, first, last, at, scratch)
-        if step == 0:
-            before = total
-        else:
-            out[step - 1] += total - before
+                out[w, step - 1] += total - before
 
 
 @njit(**SUM)  # type: ignore[untyped-decorator]
-def _change_nuclei(kinds: Any, starts: Any, parameters: Any, own: Any, nuclei: Any, here: Any, places: Any,
+def _change_nuclei(kinds: Any, starts: Any, parameters: Any, own: Any, nuclei: Any, rows: Any, which: int, places: Any,
                    out: Any) -> None:  # fmt: skip
-    """The same of one row of an electron-nucleus term."""
+    """The same of one row of an electron-nucleus term, with nuclei (3, A)."""
     n = nuclei.shape[1]
-    scratch = np.empty((2, n))
-    before = _sum_over(kinds, starts, parameters, own, nuclei, 0, n, here, scratch)
-    for k in range(len(places)):
-        out[k] += _sum_over(kinds, starts, parameters, own, nuclei, 0, n, places[k], scratch) - before
+    scratch = np.empty((3, BLOCK))
+    for w in range(len(rows)):
+        here = rows[w, :, which].copy()
+        before = _sum_over(kinds, starts, parameters, own, nuclei, 0, n, here, scratch)
+        for k in range(places.shape[1]):
+            out[w, k] += _sum_over(kinds, starts, parameters, own, nuclei, 0, n, places[w, k], scratch) - before
 
 
 @njit(**SUM)  # type: ignore[untyped-decorator]
@@ -184,23 +194,6 @@ def _walkers_nuclei(kind: int, p: Any, nuclei: Any, first: int, last: int, elect
         slope = np.zeros(x.shape)
         value[w] += _nuclei(kind, p, nuclei, first, last, x, slope, laplacian[w])
         gradient[w] += slope.T
-
-
-@njit(**SUM)  # type: ignore[untyped-decorator]
-def _walkers_change(kinds: Any, starts: Any, parameters: Any, to_up: Any, to_down: Any, n_up: int, electrons: Any,
-                    which: int, places: Any, out: Any) -> None:  # fmt: skip
-    """`_change_pairs` of each walker."""
-    for w in range(len(electrons)):
-        x = electrons[w].T.copy()
-        _change_pairs(kinds, starts, parameters, to_up, to_down, n_up, x, which, places[w], out[w])
-
-
-@njit(**SUM)  # type: ignore[untyped-decorator]
-def _walkers_change_nuclei(kinds: Any, starts: Any, parameters: Any, own: Any, nuclei: Any, electrons: Any, which: int,
-                           places: Any, out: Any) -> None:  # fmt: skip
-    """`_change_nuclei` of each walker."""
-    for w in range(len(electrons)):
-        _change_nuclei(kinds, starts, parameters, own, nuclei, electrons[w, which], places[w], out[w])
 
 
 class Jastrow:
@@ -272,23 +265,29 @@ class Jastrow:
 
     def change(self, electrons: NDArray[np.float64], which: int, places: NDArray[np.float64]) -> NDArray[np.float64]:
         """(W, K) J with electron `which` of each walker (W, N, 3) at its places (W, K, 3), less J as it is."""
-        electrons, places = np.ascontiguousarray(electrons), np.ascontiguousarray(places)
+        return self.change_in_rows(np.ascontiguousarray(electrons.transpose(0, 2, 1)), which, places)
+
+    def change_in_rows(
+        self, rows: NDArray[np.float64], which: int, places: NDArray[np.float64]
+    ) -> NDArray[np.float64]:
+        """As `change`, of electrons (W, 3, N): for who moves them often, as it saves turning them round."""
+        places = np.ascontiguousarray(places)
         out = np.zeros(places.shape[:2])
         spin = 0 if which < self.n_up else 1
-        spans = ((0, self.n_up), (self.n_up, electrons.shape[1]))
+        spans = ((0, self.n_up), (self.n_up, rows.shape[2]))
         to_up, to_down = self._own[:2] if spin == 0 else self._own[1:]
         if len(to_up) or len(to_down):
-            _walkers_change(*self._functions, to_up, to_down, self.n_up, electrons, which, places, out)
+            _change_pairs(*self._functions, to_up, to_down, self.n_up, rows, which, places, out)
         for of, f, nuclei in self._nuclei:
             if of == spin:
-                _walkers_change_nuclei(*self._functions, np.array([f]), nuclei, electrons, which, places, out)
+                _change_nuclei(*self._functions, np.array([f]), nuclei, rows, which, places, out)
         for channel, p, gamma, nuclei in self._three:
             spins = _spins(channel)
             if spin in spins:
                 first = spins[0] == spin
                 seen = gamma if first else np.ascontiguousarray(gamma.transpose(1, 0, 2))
                 partners = spans[spins[1] if first else spins[0]]
-                change_three_body(p, seen, *partners, nuclei, electrons, which, places, out)
+                change_three_body(p, seen, *partners, np.ascontiguousarray(nuclei.T), rows, which, places, out)
         return out
 
     def slopes(self) -> dict[str, float]:

@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 
 from qwfx.kernels.numeric import JIT
 
-__all__ = ["SUM", "derivatives", "pack_radial", "values"]
+__all__ = ["CUTOFF", "SUM", "add_up", "add_up_usual", "derivatives", "pack_radial"]
 
 SUM: dict[str, Any] = JIT | {"fastmath": {"contract", "nsz", "reassoc"}}
 """Sums may be taken in any order, so that they are done in vectors; NaN stays NaN."""
@@ -23,12 +23,12 @@ def pack_radial(form: str, attributes: Any, members: Any, row: int) -> tuple[int
         return PADE, np.array([members["a"][row], members["b"][row]])
     if form == "cutoff-polynomial":
         head = [members["cutoff"][row], float(attributes["smoothness"])]
-        return CUTOFF, np.concatenate([head, np.asarray(members["coefficients"][row], dtype=float)])
+        return CUTOFF, np.concatenate([head, _in_fours(np.asarray(members["coefficients"][row], dtype=float))])
     if form == "scaled-polynomial":
         powers = np.asarray(members["powers"])
         dense = np.zeros(int(powers.max(initial=0)) + 1)
         dense[powers] = members["coefficients"][row]
-        return SCALED, np.concatenate([[members["scale"][row]], dense])
+        return SCALED, np.concatenate([[members["scale"][row]], _in_fours(dense)])
     c = np.concatenate([members["coefficients"][row], np.zeros(3)])
     # F25 and F26 on interval k, by powers of t = r/h - k: the splines with coefficients k, k+1, k+2 and k+3.
     weights = np.array([[1, 4, 1, 0], [-3, 0, 3, 0], [3, -6, 3, 0], [-1, 3, -3, 1]]) / 6.0
@@ -36,36 +36,78 @@ def pack_radial(form: str, attributes: Any, members: Any, row: int) -> tuple[int
     return SPLINE, np.concatenate([[members["cutoff"][row], float(len(pieces))], pieces.ravel()])
 
 
+def _in_fours(coefficients: NDArray[np.float64]) -> NDArray[np.float64]:
+    """With zeros up to a multiple of four."""
+    return np.concatenate([coefficients, np.zeros(-len(coefficients) % 4)])
+
+
 @njit(**JIT)  # type: ignore[untyped-decorator]
-def values(kind: int, p: Any, r: Any, n: int, out: Any) -> None:
-    """Add u(r[k]) to out[k], k < n."""
+def _horner(p: Any, first: int, x: Any, n: int, f: Any) -> None:
+    """f[k] = sum_c p[first + c] x[k]^c, four coefficients at a time: a loop over all of them is not done in vectors."""
+    for k in range(n):
+        f[k] = 0.0
+    for c in range(len(p) - 4, first - 1, -4):
+        q0, q1, q2, q3 = p[c], p[c + 1], p[c + 2], p[c + 3]
+        for k in range(n):
+            f[k] = (((f[k] * x[k] + q3) * x[k] + q2) * x[k] + q1) * x[k] + q0
+
+
+@njit(**SUM)  # type: ignore[untyped-decorator]
+def add_up_usual(p: Any, x: Any, y: Any, z: Any, at: Any) -> float:
+    """Sum of a polynomial with a cutoff of the usual length, C = 3 and up to 8 coefficients, over distances to `at`.
+
+    The same as `add_up`, but each distance is used while it is there: square roots overlap with the polynomials.
+    """
+    L, q0, q1, q2, q3, q4, q5, q6, q7 = p[0], p[2], p[3], p[4], p[5], p[6], p[7], p[8], p[9]
+    ax, ay, az = at[0], at[1], at[2]
+    total = 0.0
+    for k in range(len(x)):
+        dx, dy, dz = ax - x[k], ay - y[k], az - z[k]
+        r = np.sqrt(dx * dx + dy * dy + dz * dz)
+        f = ((((((q7 * r + q6) * r + q5) * r + q4) * r + q3) * r + q2) * r + q1) * r + q0
+        edge = min(r - L, 0.0)
+        total += f * edge * edge * edge
+    return total
+
+
+@njit(**SUM)  # type: ignore[untyped-decorator]
+def add_up(kind: int, p: Any, r: Any, n: int, f: Any, s: Any) -> float:
+    """Sum of u(r[k]), k < n; `f` and `s` are scratch."""
+    total = 0.0
     if kind == PADE:
+        a, b = p[0], p[1]
         for k in range(n):
-            out[k] += p[0] * r[k] / (1.0 + p[1] * r[k])
+            total += a * r[k] / (1.0 + b * r[k])
     elif kind == CUTOFF:
-        smooth = int(p[1])
-        for k in range(n):
-            f = 0.0
-            for c in range(len(p) - 1, 1, -1):
-                f = f * r[k] + p[c]
-            x = min(r[k] - p[0], 0.0)
-            for _ in range(smooth):
-                f *= x
-            out[k] += f
+        L, smooth = p[0], int(p[1])
+        _horner(p, 2, r, n, f)
+        if smooth == 3:
+            for k in range(n):
+                x = min(r[k] - L, 0.0)
+                total += f[k] * x * x * x
+        elif smooth == 2:
+            for k in range(n):
+                x = min(r[k] - L, 0.0)
+                total += f[k] * x * x
+        else:
+            for k in range(n):
+                total += f[k] * min(r[k] - L, 0.0) ** smooth
     elif kind == SCALED:
+        b = p[0]
         for k in range(n):
-            s, f = p[0] * r[k] / (1.0 + p[0] * r[k]), 0.0
-            for c in range(len(p) - 1, 0, -1):
-                f = f * s + p[c]
-            out[k] += f
+            s[k] = b * r[k] / (1.0 + b * r[k])
+        _horner(p, 1, s, n, f)
+        for k in range(n):
+            total += f[k]
     else:
-        pieces, inverse = int(p[1]), p[1] / p[0]
+        L, last, inverse = p[0], int(p[1]) - 1, p[1] / p[0]
         for k in range(n):
-            if r[k] < p[0]:
-                x = r[k] * inverse
-                piece = min(int(x), pieces - 1)
-                t, q = x - piece, 2 + 4 * piece
-                out[k] += ((p[q + 3] * t + p[q + 2]) * t + p[q + 1]) * t + p[q]
+            x = min(r[k] * inverse, last + 1.0)
+            piece = min(int(x), last)
+            t, q = x - piece, 2 + 4 * piece
+            y = ((p[q + 3] * t + p[q + 2]) * t + p[q + 1]) * t + p[q]
+            total += y if r[k] < L else 0.0
+    return total
 
 
 @njit(**JIT)  # type: ignore[untyped-decorator]

@@ -45,6 +45,7 @@ class Walkers:
         self.trial = trial
         self.electrons = electrons.copy()
         """(W, N, 3) bohr; changed by accepted moves only."""
+        self._rows = np.ascontiguousarray(electrons.transpose(0, 2, 1))  # the same, as the Jastrow factor wants them
         self._proposal: _Proposal | None = None
         self._tables, self._values, self._jastrow = self._anew(self.electrons)
         warn(events_of({"Psi vanishes or is no number": self.log_abs}))
@@ -77,7 +78,7 @@ class Walkers:
         ratio = np.einsum("wp,swp->sw", rows, gamma)
         change = np.zeros(len(there))
         if not self.trial.jastrow.empty:
-            change = self.trial.jastrow.change(self.electrons, which, there[:, None])[:, 0]
+            change = self.trial.jastrow.change_in_rows(self._rows, which, there[:, None])[:, 0]
             with np.errstate(over="ignore"):  # infinite is what it then is
                 ratio = ratio * np.exp(change)
         self._proposal = _Proposal(which, there, rows, change)
@@ -96,6 +97,7 @@ class Walkers:
         if not len(moved):
             return
         self.electrons[moved, proposal.which] = proposal.places[moved]
+        self._rows[moved, :, proposal.which] = proposal.places[moved]
         self._jastrow[moved] += proposal.change[moved]
         spin, i = self.trial.spin_of(proposal.which)
         table = self._tables[spin]
