@@ -21,7 +21,7 @@ from numpy.typing import NDArray
 from qwfx.errors import EvaluationError
 from qwfx.kernels.bilinear import bilinear, largest_entries
 from qwfx.kernels.minors import NARROW, WIDE, add_cofactors, fill_minors
-from qwfx.kernels.strings import RankClass, SpinStrings
+from qwfx.kernels.strings import SpinStrings
 from qwfx.kernels.tables import Table, gamma_of, make_table
 from qwfx.model import Expansion
 from qwfx.reference.strings import check_expansion
@@ -34,9 +34,6 @@ of x, and gamma those of x^2."""
 
 ROOM = 1 << 26
 """Bytes that the minors of the walkers at work may take in any case; more only up to the size of the expansion."""
-
-ODD = 256
-"""Minors of a class whose elimination breaks down that there is room for at first."""
 
 FEW = 3
 """Walkers that are faster done one by one than as a block with idle lanes."""
@@ -214,32 +211,7 @@ class Determinants:
                 found = np.zeros((self.n_states, *table.shape), kind)
                 for c in own:
                     if c.rank:
-                        _add(table, slope.shape[3], c, weight, found, width)
+                        add_cofactors(
+                            table, slope.shape[3], c.string, c.holes, c.particles, c.sign, weight, found, width
+                        )
                 slope[:, block] = np.moveaxis(found[:, :, : len(block)], 2, 1).reshape(slope[:, block].shape)
-
-
-def _add(
-    table: NDArray[Any], n_columns: int, c: RankClass, weight: NDArray[Any], found: NDArray[Any], width: tuple[int, ...]
-) -> None:
-    """Cofactors of one class; those whose elimination broke down by the singular value decomposition."""
-    odd = np.zeros((ODD, 2), dtype=np.int64)
-    before = found.copy() if c.rank > 2 else found
-    n_odd = add_cofactors(table, n_columns, c.string, c.holes, c.particles, c.sign, weight, found, odd, width)
-    if n_odd > len(odd):
-        found[:] = before
-        odd = np.zeros((n_odd, 2), dtype=np.int64)
-        add_cofactors(table, n_columns, c.string, c.holes, c.particles, c.sign, weight, found, odd, width)
-    for m, b in odd[:n_odd].tolist():
-        rows = c.holes[m].astype(np.int64)[:, None] * n_columns + c.particles[m]
-        cofactors = _cofactors(table[rows, b])
-        for s in range(len(found)):
-            found[s, rows, b] += c.sign[m] * weight[s, c.string[m], b] * cofactors
-
-
-def _cofactors(a: NDArray[Any]) -> NDArray[Any]:
-    """Cofactors of a matrix that may be singular: with A = U S V+, det(U V+) conj(U) (cofactors of S) conj(V)^T."""
-    if not np.isfinite(a).all():
-        return np.full_like(a, np.nan)
-    u, s, vh = np.linalg.svd(a)
-    others = np.array([np.prod(np.delete(s, j)) for j in range(len(s))])
-    return np.asarray(np.linalg.det(u) * np.linalg.det(vh) * (u.conj() * others) @ vh.conj())

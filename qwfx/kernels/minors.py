@@ -28,15 +28,15 @@ from qwfx.kernels.lanes import (
 )
 from qwfx.kernels.numeric import JIT
 
-__all__ = ["NARROW", "WIDE", "add_cofactors", "fill_minors"]
+__all__ = ["NARROW", "WIDE", "add_cofactors", "careful_cofactors", "fill_minors"]
 
 WIDE = (0,) * 8
 """A block of walkers: one cache line, and one, two or four vector registers."""
 NARROW = (0,)
 """One walker, where there are too few for a block."""
 
-TINY = 1e-290
-"""Pivots below have no inverse that could be used."""
+SMALL = 1e-3
+"""A pivot, not the last, so much smaller than what is beside it costs cofactors digits: then `careful_cofactors`."""
 
 
 @njit(**JIT)  # type: ignore[untyped-decorator]
@@ -44,9 +44,11 @@ def _eliminate(a: Any, k: int, det: Any, order: Any, width: Any) -> None:
     """LU factors of a (k k, walkers) in place, rows exchanged; row c of `order` is the row that c was exchanged with.
 
     Row 0 of `det` is the product of all pivots, with its sign, row 1 the same without the last pivot. The exchanges
-    are selections by walker, without branches, so that they are done for the whole block at once.
+    are selections by walker, without branches, so that they are done for the whole block at once. Row k of `order` is
+    1 where a pivot before the last is small, else 0.
     """
     product = same(a, 1.0, width)
+    small = same(order, 0.0, width)
     for c in range(k):
         best = size(load(a, c * k + c, width))
         chosen = same(order, c, width)
@@ -63,6 +65,12 @@ def _eliminate(a: Any, k: int, det: Any, order: Any, width: Any) -> None:
                 store(a, r * k + j, equal(chosen, row, x, y))
         product = equal(chosen, same(order, c, width), product, times(-1.0, product))
         store(det, 1, product)
+        if c < k - 1:
+            beside = same(order, 0.0, width)
+            for j in range(c + 1, k):
+                found = size(load(a, c * k + j, width))
+                beside = larger(found, beside, found, beside)
+            small = larger(best, times(SMALL, beside), small, same(order, 1.0, width))
         pivot = load(a, c * k + c, width)
         product = times(product, pivot)
         for r in range(c + 1, k):
@@ -71,6 +79,7 @@ def _eliminate(a: Any, k: int, det: Any, order: Any, width: Any) -> None:
             for j in range(c + 1, k):
                 store(a, r * k + j, minus_product(load(a, r * k + j, width), factor, load(a, c * k + j, width)))
     store(det, 0, product)
+    store(order, k, small)
 
 
 @njit(**JIT)  # type: ignore[untyped-decorator]
@@ -89,7 +98,7 @@ def fill_minors(
     k, lanes = holes.shape[1], len(width)
     a = np.empty((k * k, lanes), table.dtype)
     det = np.empty((2, lanes), table.dtype)
-    order = np.empty((k, lanes))
+    order = np.empty((k + 1, lanes))
     for m in range(len(string)):
         if k == 0:
             store(out, string[m], same(out, sign[m], width))
@@ -145,35 +154,82 @@ def _add(out: Any, row: int, weight: Any, x: Any, width: Any) -> None:
 
 
 @njit(**JIT)  # type: ignore[untyped-decorator]
+def careful_cofactors(a: Any, cofactors: Any) -> None:
+    """Cofactors of one matrix (k, k), which is overwritten, by elimination with rows and columns exchanged.
+
+    As `_adjugate`, with the largest element that is left as the pivot: small pivots come last, and the part of U beside
+    a pivot is not larger than it, so that nothing is divided by less than it was multiplied with.
+    """
+    k = len(a)
+    row, column, y = np.arange(k), np.arange(k), np.empty(k, a.dtype)
+    last = det = a[0, 0] * 0 + 1
+    for c in range(k):
+        r0, j0 = c, c
+        for r in range(c, k):
+            for j in range(c, k):
+                if abs(a[r, j]) > abs(a[r0, j0]):
+                    r0, j0 = r, j
+        if r0 != c:
+            row[c], row[r0] = row[r0], row[c]
+            det = -det
+            for j in range(k):
+                a[c, j], a[r0, j] = a[r0, j], a[c, j]
+        if j0 != c:
+            column[c], column[j0] = column[j0], column[c]
+            det = -det
+            for r in range(k):
+                a[r, c], a[r, j0] = a[r, j0], a[r, c]
+        last = det
+        det = det * a[c, c]
+        if a[c, c] != 0:
+            for r in range(c + 1, k):
+                a[r, c] = a[r, c] / a[c, c]
+                for j in range(c + 1, k):
+                    a[r, j] -= a[r, c] * a[c, j]
+    for unit in range(k):
+        for r in range(k):
+            y[r] = 1.0 if row[r] == unit else 0.0
+            for j in range(r):
+                y[r] -= a[r, j] * y[j]
+        y[k - 1] *= last
+        for r in range(k - 2, -1, -1):
+            y[r] *= det
+            for j in range(r + 1, k):
+                y[r] -= a[r, j] * y[j]
+            # A pivot of zero before the last: nothing but zeros is left, and no cofactor either.
+            y[r] = y[r] / a[r, r] if a[r, r] != 0 else 0 * y[r]
+        for r in range(k):
+            cofactors[unit, column[r]] = y[r]
+
+
+@njit(**JIT)  # type: ignore[untyped-decorator]
 def add_cofactors(
-    table: Any, n_columns: int, string: Any, holes: Any, particles: Any, sign: Any, weight: Any, out: Any, odd: Any,
-    width: Any,
-) -> int:  # fmt: skip
+    table: Any, n_columns: int, string: Any, holes: Any, particles: Any, sign: Any, weight: Any, out: Any, width: Any
+) -> None:
     """Row h M + p of out[s] += weight[s, string] d(sign det table[holes, particles]) / d table[h, p].
 
-    weight: (S, K, walkers). out: (S, n M, walkers). Where the elimination meets a pivot of zero before the last, the
-    minor is left out and noted in odd[:, 0] = m, odd[:, 1] = walker; returns how many there are (more than fit are
-    counted only).
+    weight: (S, K, walkers). out: (S, n M, walkers).
     """
-    k, n_odd, lanes = holes.shape[1], 0, len(width)
+    k, lanes = holes.shape[1], len(width)
     a, adjugate = np.empty((k * k, lanes), table.dtype), np.empty((k * k, lanes), table.dtype)
     x, inverse = np.empty((k, lanes), table.dtype), np.empty((k, lanes), table.dtype)
+    one, cofactors = np.empty((k, k), table.dtype), np.empty((k, k), table.dtype)
     det = np.empty((2, lanes), table.dtype)
-    order, sound = np.empty((k, lanes)), np.empty((1, lanes))
+    order = np.empty((k + 1, lanes))
     for m in range(len(string)):
         if k > 2:
             _gather(table, n_columns, holes[m], particles[m], a, width)
             _eliminate(a, k, det, order, width)
             _adjugate(a, k, det, order, inverse, x, adjugate, width)
             for b in range(lanes):
-                sound[0, b] = 1.0
-                for c in range(k - 1):
-                    if abs(a[c * k + c, b]) < TINY:
-                        sound[0, b] = 0.0
-                if sound[0, b] == 0.0:
-                    if n_odd < len(odd):
-                        odd[n_odd, 0], odd[n_odd, 1] = m, b
-                    n_odd += 1
+                if order[k, b] != 0.0:
+                    for i in range(k):
+                        for j in range(k):
+                            one[i, j] = table[holes[m, i] * n_columns + particles[m, j], b]
+                    careful_cofactors(one, cofactors)
+                    for i in range(k):
+                        for j in range(k):
+                            adjugate[j * k + i, b] = cofactors[i, j]
         for s in range(len(weight)):
             w = times(sign[m], load(weight[s], string[m], width))
             if k == 1:
@@ -187,11 +243,8 @@ def add_cofactors(
                 _add(out[s], upper + p1, minus, load(table, lower + p0, width), width)
                 _add(out[s], lower + p0, minus, load(table, upper + p1, width), width)
             else:
-                nothing, zero = same(table, 0.0, width), same(sound, 0.0, width)
-                keep = load(sound, 0, width)
                 for i in range(k):
                     for j in range(k):
                         # The cofactor of element (i, j) is the adjugate's element (j, i).
-                        cofactor = equal(keep, zero, nothing, load(adjugate, j * k + i, width))
-                        _add(out[s], holes[m, i] * n_columns + particles[m, j], w, cofactor, width)
-    return n_odd
+                        where = holes[m, i] * n_columns + particles[m, j]
+                        _add(out[s], where, w, load(adjugate, j * k + i, width), width)

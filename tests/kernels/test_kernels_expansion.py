@@ -295,11 +295,6 @@ def test_where_it_is_no_number() -> None:
             assert np.array_equal(values.gamma_up[0, w], sound.gamma_up[0, w])
 
 
-def test_many_odd_minors_are_done_again_in_full(monkeypatch: pytest.MonkeyPatch) -> None:
-    monkeypatch.setattr(module, "ODD", 1)
-    test_minors_that_vanish_have_the_right_cofactors()
-
-
 @pytest.mark.parametrize(
     ("change", "where", "words"),
     [
