@@ -35,8 +35,8 @@ WIDE = (0,) * 8
 NARROW = (0,)
 """One walker, where there are too few for a block."""
 
-SMALL = 1e-3
-"""A pivot, not the last, so much smaller than what is beside it costs cofactors digits: then `careful_cofactors`."""
+TINY = 1e-290
+"""Pivots below, but for the last, have no inverse that could be used."""
 
 
 @njit(**JIT)  # type: ignore[untyped-decorator]
@@ -45,10 +45,10 @@ def _eliminate(a: Any, k: int, det: Any, order: Any, width: Any) -> None:
 
     Row 0 of `det` is the product of all pivots, with its sign, row 1 the same without the last pivot. The exchanges
     are selections by walker, without branches, so that they are done for the whole block at once. Row k of `order` is
-    1 where a pivot before the last is small, else 0.
+    1 where a pivot before the last vanishes, else 0.
     """
     product = same(a, 1.0, width)
-    small = same(order, 0.0, width)
+    broken = same(order, 0.0, width)
     for c in range(k):
         best = size(load(a, c * k + c, width))
         chosen = same(order, c, width)
@@ -66,11 +66,7 @@ def _eliminate(a: Any, k: int, det: Any, order: Any, width: Any) -> None:
         product = equal(chosen, same(order, c, width), product, times(-1.0, product))
         store(det, 1, product)
         if c < k - 1:
-            beside = same(order, 0.0, width)
-            for j in range(c + 1, k):
-                found = size(load(a, c * k + j, width))
-                beside = larger(found, beside, found, beside)
-            small = larger(best, times(SMALL, beside), small, same(order, 1.0, width))
+            broken = larger(best, same(order, TINY, width), broken, same(order, 1.0, width))
         pivot = load(a, c * k + c, width)
         product = times(product, pivot)
         for r in range(c + 1, k):
@@ -79,7 +75,7 @@ def _eliminate(a: Any, k: int, det: Any, order: Any, width: Any) -> None:
             for j in range(c + 1, k):
                 store(a, r * k + j, minus_product(load(a, r * k + j, width), factor, load(a, c * k + j, width)))
     store(det, 0, product)
-    store(order, k, small)
+    store(order, k, broken)
 
 
 @njit(**JIT)  # type: ignore[untyped-decorator]
@@ -120,7 +116,8 @@ def _adjugate(a: Any, k: int, det: Any, order: Any, inverse: Any, x: Any, adjuga
     """The adjugate from the factors: the inverse times the determinant, without a division by the last pivot.
 
     Column c of it solves A y = det e_c; the factor det is put in as (product of the other pivots) times the last one,
-    which cancels, so that a minor that vanishes still has the right cofactors.
+    which cancels, so that a minor that vanishes still has the right cofactors. A small pivot before the last costs no
+    digits either: all that is divided by it is proportional to it. Only pivots of zero do not cancel.
     """
     one = same(a, 1.0, width)
     for r in range(k - 1):
@@ -157,8 +154,8 @@ def _add(out: Any, row: int, weight: Any, x: Any, width: Any) -> None:
 def careful_cofactors(a: Any, cofactors: Any) -> None:
     """Cofactors of one matrix (k, k), which is overwritten, by elimination with rows and columns exchanged.
 
-    As `_adjugate`, with the largest element that is left as the pivot: small pivots come last, and the part of U beside
-    a pivot is not larger than it, so that nothing is divided by less than it was multiplied with.
+    As `_adjugate`, with the largest element that is left as the pivot: where that is zero before the last, nothing but
+    zeros is left.
     """
     k = len(a)
     row, column, y = np.arange(k), np.arange(k), np.empty(k, a.dtype)
@@ -196,7 +193,7 @@ def careful_cofactors(a: Any, cofactors: Any) -> None:
             y[r] *= det
             for j in range(r + 1, k):
                 y[r] -= a[r, j] * y[j]
-            # A pivot of zero before the last: nothing but zeros is left, and no cofactor either.
+            # With a pivot of zero before the last, there is no cofactor but zero.
             y[r] = y[r] / a[r, r] if a[r, r] != 0 else 0 * y[r]
         for r in range(k):
             cofactors[unit, column[r]] = y[r]

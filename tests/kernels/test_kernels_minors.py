@@ -18,9 +18,9 @@ def random(rng: np.random.Generator, shape: tuple[int, ...], is_complex: bool) -
 
 
 def exactly(a: NDArray[Any]) -> tuple[Any, NDArray[Any]]:
-    """Determinant and cofactors, in 60 digits, rounded at the end."""
+    """Determinant and cofactors, in 40 digits, rounded at the end."""
     k = len(a)
-    with mp.workdps(60):
+    with mp.workdps(40):
 
         def det(rows: list[int], columns: list[int]) -> Any:
             return mp.det(mp.matrix(a[np.ix_(rows, columns)].tolist())) if rows else mp.mpf(1)
@@ -42,6 +42,8 @@ def awkward(rng: np.random.Generator, k: int, is_complex: bool, case: str) -> ND
         a[:, 1] = 0.3 * a[:, 0] + 1e-9 * a[:, 1]
     elif case == "zeros":
         a[:, 0] = 0
+    elif case == "late zeros":
+        a[:, k - 2] = 0
     elif case == "small":
         a[:, 0] *= 1e-9
     elif case == "two zeros":
@@ -62,16 +64,16 @@ def sensitivity(a: NDArray[Any], order: int) -> float:
     return float(values[0] * np.prod(values[: len(a) - order])) if len(a) >= order else 1.0
 
 
-CASES = ["any", "dependent", "nearly", "zeros", "small", "two zeros", "two dependent", "large"]
+CASES = ["any", "dependent", "nearly", "zeros", "late zeros", "small", "two zeros", "two dependent", "large"]
 
 
-@pytest.mark.parametrize(("case", "k"), [("any", 1), ("any", 2), *((case, k) for case in CASES for k in (3, 4, 6))])
+@pytest.mark.parametrize(("case", "k"), [("any", 1), ("any", 2), *((case, k) for case in CASES for k in (3, 5))])
 @pytest.mark.parametrize("is_complex", [False, True])
 def test_minors_and_cofactors(case: str, is_complex: bool, k: int) -> None:
     """One table of k by k: a block of eight walkers of which each has the matrix that it asks for."""
     rng = np.random.default_rng(k)
     for width in (WIDE, NARROW):
-        matrices = [awkward(rng, k, is_complex, case if b % 2 == 0 else "any") for b in range(len(width))]
+        matrices = [awkward(rng, k, is_complex, case if b in (0, 5) else "any") for b in range(len(width))]
         table = np.ascontiguousarray(np.array(matrices).reshape(len(width), k * k).T)
         every = np.arange(k, dtype=np.int16)[None]
         string, sign = np.array([1], dtype=np.int32), np.array([-1], dtype=np.int8)
