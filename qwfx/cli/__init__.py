@@ -24,6 +24,7 @@ VERBS = {
     "convert": "Turn a PySCF checkpoint, Molden or FCIDUMP file into a .qwfx file, or back.",
     "validate": "Check files: structure, consistency, algebra, witness, digests.",
     "explain": "Print the page of a rule of the validator.",
+    "amend": "Put Jastrow terms or determinants into a file.",
     "roundtrip": "Convert and convert back, and compare the orbital values.",
     "show": "What is in a file, at a glance.",
     "diff": "Compare two files member by member.",
