@@ -119,7 +119,8 @@ def main() -> None:
             _arithmetic(x, r, *counts)
 
         side_by_side(
-            f"{n} electrons, {len(nuclei)} atoms, {MOVES} moves of {WALKERS} walkers", {"moves": all_moves, "bound": bound},
+            f"{n} electrons, {len(nuclei)} atoms, {MOVES} moves of {WALKERS} walkers",
+            {"moves": all_moves, "bound": bound},
             wanted="at most 2",
         )  # fmt: skip
         evaluations[f"{n} electrons"] = lambda jastrow=jastrow, electrons=electrons: jastrow.evaluate(electrons)

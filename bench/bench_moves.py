@@ -61,8 +61,8 @@ def main() -> None:
             ("Psi from scratch", lambda trial=trial, walkers=walkers: trial.log(walkers.electrons)),
             ("local energy from scratch", lambda trial=trial, walkers=walkers: trial.evaluate(walkers.electrons)),
         ):
-            side_by_side(f"{ELECTRONS} electrons, {WALKERS} walkers, {what}", {name: scratch, "one move": move}, runs=25,
-                         wanted="at least 20")  # fmt: skip
+            title = f"{ELECTRONS} electrons, {WALKERS} walkers, {what}"
+            side_by_side(title, {name: scratch, "one move": move}, runs=25, wanted="at least 20")
 
 
 if __name__ == "__main__":

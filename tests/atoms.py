@@ -19,7 +19,7 @@ def _expansion(up: int, down: int) -> Expansion:
 
 
 def hydrogenic(charge: float, orbital: str, exponent: float | None = None) -> Wavefunction:
-    """One electron at a nucleus: ``1s``, ``2s`` or ``2p`` (its three components are orbitals; the second is occupied)."""
+    """One electron at a nucleus: ``1s``, ``2s`` or ``2p`` (all three components are orbitals, the second occupied)."""
     Z = charge
     zero = np.zeros(1, "i4")
     if orbital == "1s":

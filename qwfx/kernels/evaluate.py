@@ -160,8 +160,9 @@ def evaluate_orbitals(
 
 
 def _checked(
-    basis: Basis, positions: NDArray[np.float64], points: NDArray[np.float64], derivatives: int, plan: Plan | None = None
-) -> tuple[Plan, NDArray[np.float64]]:
+    basis: Basis, positions: NDArray[np.float64], points: NDArray[np.float64], derivatives: int,
+    plan: Plan | None = None,
+) -> tuple[Plan, NDArray[np.float64]]:  # fmt: skip
     """The plan, and the points as three rows."""
     if derivatives not in ROWS:
         raise EvaluationError(f"derivatives = {derivatives!r}", where="derivatives", expected="0, 1 or 2")

@@ -58,7 +58,8 @@ def parameter_faults(path: str, attributes: Mapping[str, Any], members: Mapping[
         for name in ("scale", "scale_electron"):
             if name in members:
                 below = "below 0 the distance has a pole"
-                yield from _bad(f"{path}/{name}", members[name], np.less(members[name], 0), "a scale of 0 or more", below)
+                negative = np.less(members[name], 0)
+                yield from _bad(f"{path}/{name}", members[name], negative, "a scale of 0 or more", below)
         yield from _powers(path, np.asarray(members["powers"]).astype(np.int64))
 
 

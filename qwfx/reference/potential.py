@@ -77,5 +77,6 @@ def projected(
         cosine = directions @ (d / r)
         for l in channels(potentials, center):
             kernel = (2 * l + 1) * legendre.legval(cosine, [0.0] * l + [1.0])
-            total += float(radial_potential(potentials, center, l, r)[0]) * float((rule.weights * kernel * values).sum())
+            strength = float(radial_potential(potentials, center, l, r)[0])
+            total += strength * float((rule.weights * kernel * values).sum())
     return total

@@ -205,7 +205,6 @@ def row_slices(file: Inspection) -> Iterator[Piece]:
     summary="columns are strictly ascending within a row and name down strings that exist",
 )
 def column_order(file: Inspection) -> Iterator[Remark]:
-    member = "/expansion/columns"
     n_down = file.shape("/expansion/down_strings")[0]
     outside = disorder = entries = 0
     first_outside, first_disorder = (0, 0), (0, 0, 0)

@@ -139,7 +139,8 @@ class Trial:
         return (0, electron) if electron < self.n_up else (1, electron - self.n_up)
 
     def _batches(self, n_walkers: int, rows: int) -> NDArray[np.int64]:
-        per_walker = 8 * rows * self.n_electrons * max(len(o.coefficients) for o in self._orbitals) * (self.n_states + 1)
+        most = max(len(o.coefficients) for o in self._orbitals)
+        per_walker = 8 * rows * self.n_electrons * most * (self.n_states + 1)
         step = max(BATCH_BYTES // max(per_walker, 1), 1)
         return np.append(np.arange(0, max(n_walkers, 1), step), n_walkers)
 
@@ -183,7 +184,8 @@ class Trial:
             mine = np.flatnonzero((points.electron >= part.start) & (points.electron < part.stop))
             walker, electron = points.walker[mine], points.electron[mine]
             phi = self.orbitals(points.places[mine], spin, 0)[0]  # (M, q, K)
-            weights = points.weights[mine] * np.exp(self._jastrow_changes(places, walker, electron, points.places[mine]))
+            change = self._jastrow_changes(places, walker, electron, points.places[mine])
+            weights = points.weights[mine] * np.exp(change)
             rows = gammas[spin][:, walker, :, electron - part.start]  # (q, S, M): two lists of indices come first
             np.add.at(total.T, walker, np.einsum("qk,mqk,qsm->qs", weights, phi, rows, optimize=True))
         return total

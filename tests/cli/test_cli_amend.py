@@ -15,7 +15,7 @@ from qwfx.converters.pyscf import from_pyscf
 from qwfx.kernels.jastrow import Jastrow
 from qwfx.model import WitnessConfigurations
 from qwfx.storage import load, save
-from qwfx.validate import validate_file
+from qwfx.validate import validate
 
 PAIRS = """
 [pairs]
@@ -95,7 +95,7 @@ def test_to_another_file_and_in_the_place_of_others(file: Path, tmp_path: Path, 
 def test_a_factor_to_start_from_fulfils_the_cusps(file: Path, capsys: Any) -> None:
     assert amend(capsys, file, "--start-jastrow")[0] == 0
     assert Jastrow(load(file)).slopes() == {"up_up": 0.25, "up_down": 0.5, "down_down": 0.25}
-    assert not [f for f in validate_file(file).findings if "jastrow" in f.rule]
+    assert not [f for f in validate(file).findings if "jastrow" in f.rule]
 
 
 @pytest.mark.parametrize(
@@ -103,9 +103,12 @@ def test_a_factor_to_start_from_fulfils_the_cusps(file: Path, capsys: Any) -> No
     [
         ("[pairs\n", "is no TOML"), ("", "there are no terms"), ("pairs = 3\n", "a table with form"),
         (PAIRS.replace('"pade"', '"own"'), "the form 'own'"), (PAIRS.replace("b =", "c ="), "pairs/b"),
-        (PAIRS.replace("[1, 1.2, 1.0]", "[-1, 1.2, 1.0]"), "pairs/b[0]"), (PAIRS.replace("b = [1, 1.2, 1.0]", "b = [1]"), "b"),
-        (PAIRS.replace("[1, 1.2, 1.0]", '["x", "y", "z"]'), "numbers"), (NUCLEI.replace("[0]", "[5]"), "nuclei/atoms[0]"),
-        (NUCLEI.replace("[0]", "[0.5]"), "whole numbers"), (NUCLEI.replace("0.01, 0.0075], [", "0.01], ["), "one length"),
+        (PAIRS.replace("[1, 1.2, 1.0]", "[-1, 1.2, 1.0]"), "pairs/b[0]"),
+        (PAIRS.replace("b = [1, 1.2, 1.0]", "b = [1]"), "b"),
+        (PAIRS.replace("[1, 1.2, 1.0]", '["x", "y", "z"]'), "numbers"),
+        (NUCLEI.replace("[0]", "[5]"), "nuclei/atoms[0]"),
+        (NUCLEI.replace("[0]", "[0.5]"), "whole numbers"),
+        (NUCLEI.replace("0.01, 0.0075], [", "0.01], ["), "one length"),
         (NUCLEI.replace("smoothness = 3", "smoothness = true"), "smoothness"),
         (NUCLEI.replace("atoms = [0]\n", ""), "atoms"), (PAIRS.replace('"up_up"', '"up"'), "channel"),
     ],

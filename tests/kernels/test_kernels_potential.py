@@ -72,7 +72,7 @@ def test_electrons_far_away_are_left_out() -> None:
 
 
 # (2l+1) i_l(2 a r R) P_l(cos g) exp(-2 a r R cos g), a = 0.5, r = 0.6, R = 1.4, cos g = 0.3: what a projector with
-# V_l = 1 makes of exp(-a |r - R|^2), by the expansion of a Gaussian in spherical Bessel functions (DLMF, section 10.60).
+# V_l = 1 makes of exp(-a |r - R|^2), from its expansion in spherical Bessel functions (DLMF, section 10.60).
 EXACT = {0: 0.871928161569, 1: 0.210038814486, 2: -0.070154464560}
 
 

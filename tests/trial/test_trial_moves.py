@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import replace
+from functools import partial
 from typing import Any
 
 import numpy as np
@@ -47,8 +48,8 @@ def random_wavefunction(
     potentials = None
     if core:
         potentials = Potentials(
-            np.array([1, 1, 1], "i4"), np.array([-1, 0, 1], "i4"), np.array([0, 0, -1], "i4"), np.array([1.1, 0.9, 1.4]),
-            np.array([-1.0, 2.0, 1.5]),
+            np.array([1, 1, 1], "i4"), np.array([-1, 0, 1], "i4"), np.array([0, 0, -1], "i4"),
+            np.array([1.1, 0.9, 1.4]), np.array([-1.0, 2.0, 1.5]),
         )  # fmt: skip
     system = System(n_up, n_down, ("A", "B"), np.array([6, 6], "i4"), np.array([6.0, 4.0]), NUCLEI)
     return Wavefunction(system, potentials, basis, sets, expansion, terms)
@@ -130,19 +131,21 @@ def test_projectors_act_on_psi_with_its_factor() -> None:
         values = trial.evaluate(x)
         assert wf.potentials is not None
         for w in range(3):
-            log_abs, sign = trial.log(x[w : w + 1])
             total = float(coulomb(x[w : w + 1], NUCLEI, wf.system.effective_charges)[0])
             total += float(local_part(wf.potentials, NUCLEI, x[w : w + 1])[0])
             for i in range(4):
-
-                def ratio(points: np.ndarray, i: int = i, w: int = w) -> np.ndarray:
-                    moved = np.repeat(x[w : w + 1], len(points), axis=0)
-                    moved[:, i] = points
-                    there, there_sign = trial.log(moved)
-                    return np.asarray((there_sign / sign * np.exp(there - log_abs))[0])
-
+                ratio = partial(ratio_of, trial, x[w], i)
                 total += projected(wf.potentials, NUCLEI, x[w, i], sphere_rule(18), ratio)
             assert values.potential[0, w] == pytest.approx(total, rel=1e-10)
+
+
+def ratio_of(trial: Trial, walker: np.ndarray, i: int, points: np.ndarray) -> np.ndarray:
+    """Psi with electron i at each of the points, over Psi as it is, both from scratch."""
+    log_abs, sign = trial.log(walker[None])
+    moved = np.repeat(walker[None], len(points), axis=0)
+    moved[:, i] = points
+    there, there_sign = trial.log(moved)
+    return np.asarray((there_sign / sign * np.exp(there - log_abs))[0])
 
 
 def test_rotations_average_to_the_same_and_are_reproducible() -> None:
