@@ -97,3 +97,14 @@ def test_only_storage_imports_h5py_and_only_the_command_line_prints(room: str, n
 def test_modules_stay_short(room: str, name: str, path: Path) -> None:
     lines = len(path.read_text("utf-8").splitlines())
     assert lines <= LONGEST or name in LONGER_FOR_A_REASON, f"{path} has {lines} lines: split it, or give the reason"
+
+
+def test_every_room_goes_into_the_wheel() -> None:
+    """An editable installation finds a room that is not listed, the wheel does not."""
+    listed = (TOP / "pyproject.toml").read_text("utf-8").partition("packages = [")[2].partition("]")[0]
+    rooms = {"qwfx"} | {
+        ".".join(("qwfx", *path.parent.relative_to(TOP).parts)).replace("qwfx.qwfx", "qwfx")
+        for root in ("qwfx", "converters", "schema")
+        for path in (TOP / root).rglob("__init__.py")
+    }
+    assert {line.strip(' ",') for line in listed.splitlines() if line.strip()} == rooms

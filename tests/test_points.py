@@ -22,9 +22,20 @@ def test_regions_lie_where_they_say() -> None:
     assert len(set(np.linalg.norm(near[:, None] - WATER, axis=-1).argmin(axis=1))) == 3
     tail = probe_points(WATER, 200, rng, ("tail",))
     assert np.linalg.norm(tail - WATER[0], axis=1).max() > 5
+    alone = np.linalg.norm(probe_points(WATER[:1], 200, rng, ("tail",)) - WATER[0], axis=1)
+    assert alone.min() >= 2.0
+    assert alone.max() <= 8.0
+    assert np.median(alone) == pytest.approx(5.0, abs=0.6)
     bonds = probe_points(WATER, 200, rng, ("bonds",))
     assert np.median(nearest(bonds, WATER)) > 0.4
     assert nearest(bonds, WATER).max() < 3
+    pair = np.array([[0.0, 0.0, 0.0], [0.0, 0.0, 2.0], [0.0, 0.0, 30.0]])  # one bond, and an atom far away
+    along = probe_points(pair, 300, rng, ("bonds",))
+    bonded = along[along[:, 2] < 15]
+    assert len(bonded) == 200
+    assert np.abs(bonded[:, :2]).max() < 1.5
+    assert ((bonded[:, 2] > -0.7) & (bonded[:, 2] < 2.7)).all()
+    assert np.mean((bonded[:, 2] > 0.4) & (bonded[:, 2] < 1.6)) > 0.75
 
 
 def test_same_seed_same_points_and_no_symmetry_plane() -> None:

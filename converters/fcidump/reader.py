@@ -17,7 +17,7 @@ from qwfx.converters.fcidump.fill import Filled, fill
 from qwfx.converters.fcidump.header import LARGEST, LONGEST, Header, read_header
 from qwfx.converters.fcidump.layout import Layout, choose_layout, looks_interleaved, survey
 from qwfx.converters.fcidump.records import PIECE, Source, compiled
-from qwfx.converters.fcidump.store import BLOCK_CORE, BLOCKS, INTERLEAVED, RESTRICTED, Places
+from qwfx.converters.fcidump.store import BLOCK_CORE, BLOCKS, RESTRICTED, Places
 from qwfx.converters.fcidump.symmetry import symmetry_of
 from qwfx.converters.plugin import Progress, Reading
 from qwfx.errors import ConversionError, UnsupportedError
@@ -60,8 +60,8 @@ def _read(
     )
     symmetry = symmetry_of(header, hamiltonian, options.get("isym", "like-orbsym"), source.name)
     hamiltonian = replace(hamiltonian, orbital_symmetry=symmetry.orbitals, state_symmetry=symmetry.state)
-    notes = [*layout.notes, *header_notes, *_doubt(header, layout, filled), *spin_notes, *symmetry.notes, *_notes(filled)]
-    notes += [*energy_notes, *storage_notes]
+    notes = [*layout.notes, *_doubt(header, layout, filled), *header_notes, *spin_notes, *symmetry.notes]
+    notes += [*_notes(filled), *energy_notes, *storage_notes]
     nothing = np.zeros(0)
     system = System(n_up, n_down, (), nothing.astype(np.int32), nothing, nothing.reshape(0, 3))
     step = {

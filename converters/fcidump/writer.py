@@ -11,7 +11,6 @@ from numpy.typing import NDArray
 
 from qwfx.atomic import replacing
 from qwfx.converters.fcidump.lines import format_records
-from qwfx.converters.fcidump.store import RESTRICTED, Places
 from qwfx.converters.plugin import Progress, Writing
 from qwfx.errors import ConversionError, UnsupportedError
 from qwfx.kernels.packing import indices

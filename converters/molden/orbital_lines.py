@@ -18,6 +18,8 @@ if TYPE_CHECKING:
 
 __all__ = ["count_functions", "read_orbitals"]
 
+PIECE = 1 << 20
+"""Bytes that are searched at a time: whoever needs the first orbital alone does not wait for the last."""
 FINE, BAD_INDEX, BAD_VALUE, OUT_OF_RANGE, MORE, TWICE = range(6)
 
 
@@ -31,21 +33,21 @@ class _Orbital:
     end: int
 
 
-@njit(**JIT)  # type: ignore[untyped-decorator]
-def _headings(text: Any, start: int, end: int, where: Any) -> int:
-    """Offsets of the lines that contain ``=``; how many there are (`where` may be too short to hold all)."""
-    n, i = 0, start
-    while i < end:
-        begin, equals = i, False
-        while i < end and text[i] != 10:
-            equals = equals or text[i] == 61
-            i += 1
-        if equals:
-            if n < len(where):
-                where[n] = begin
-            n += 1
-        i += 1
-    return n
+def _headings(text: NDArray[np.uint8], start: int, end: int) -> Iterator[int]:
+    """Offsets of the lines that contain ``=``, ascending."""
+    last = -1
+    for piece in range(start, end, PIECE):
+        for equals in (np.flatnonzero(text[piece : min(piece + PIECE, end)] == 61) + piece).tolist():
+            if last >= 0 and not (text[last:equals] == 10).any():
+                continue  # a second one on the same line
+            last, step = equals, 64
+            while last > start:
+                newlines = np.flatnonzero(text[max(last - step, start) : last] == 10)
+                if len(newlines):
+                    last = max(last - step, start) + int(newlines[-1]) + 1
+                    break
+                last, step = max(last - step, start), 4 * step
+            yield last
 
 
 @njit(**JIT)  # type: ignore[untyped-decorator]
@@ -136,12 +138,9 @@ def read_orbitals(
 
 def _orbitals(text: NDArray[np.uint8], start: int, end: int, first_line: int) -> Iterator[_Orbital]:
     """The orbitals of one section. One begins with a heading after coefficients, or with a key that it has already."""
-    count = _headings(text, start, end, np.zeros(0, dtype=np.int64))
-    offsets = np.zeros(count, dtype=np.int64)
-    _headings(text, start, end, offsets)
     line, counted = first_line, start
     orbital: _Orbital | None = None
-    for offset in offsets.tolist():
+    for offset in _headings(text, start, end):
         stop = _end_of_line(text, offset, end)
         key, _, value = bytes(text[offset:stop]).decode("latin-1").partition("=")
         key = key.strip().lower()[:3]

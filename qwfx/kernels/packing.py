@@ -7,7 +7,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from qwfx.reference.packing import packed_length
+from qwfx.reference.packing import packed_length, split_triangle
 
 __all__ = ["dense", "indices", "pack", "positions", "unpack"]
 
@@ -30,26 +30,17 @@ def positions(packing: str, n: int, index: NDArray[Any], like_spins: bool = True
     return _triangle(first, second) if like_spins else np.asarray(first * n * n + second)
 
 
-def _split_triangle(position: Ints) -> tuple[Ints, Ints]:
-    """The pair (high, low) at a position of a lower triangle."""
-    high = ((np.sqrt(8.0 * position + 1.0) - 1.0) / 2.0).astype(np.int64)
-    # The square root is rounded, and off by one near perfect squares of big numbers.
-    high += (high + 1) * (high + 2) // 2 <= position
-    high -= high * (high + 1) // 2 > position
-    return high, position - high * (high + 1) // 2
-
-
 def indices(packing: str, n: int, position: NDArray[Any], like_spins: bool = True) -> Ints:
     """(m, 4) indices from 0 of the integrals at these positions: p >= q and r >= s for real orbitals."""
     place = np.asarray(position, dtype=np.int64)
     pairs = n * n if packing == "pairs" else n * (n + 1) // 2
     if packing == "eightfold" or (packing == "pairs" and like_spins):
-        first, second = _split_triangle(place)
+        first, second = split_triangle(place)
     else:
         first, second = np.divmod(place, max(pairs, 1))
     if packing == "pairs":
         return np.stack([*np.divmod(first, n), *np.divmod(second, n)], axis=1)
-    return np.stack([*_split_triangle(first), *_split_triangle(second)], axis=1)
+    return np.stack([*split_triangle(first), *split_triangle(second)], axis=1)
 
 
 def dense(values: Any, index: Any, packing: str, n: int, like_spins: bool = True) -> NDArray[Any]:

@@ -7,7 +7,7 @@ The format normalises nothing; converters from sources that do normalise take th
 from __future__ import annotations
 
 import math
-from typing import TypeVar
+from typing import Any, TypeVar
 
 import numpy as np
 from numpy.typing import NDArray
@@ -88,5 +88,12 @@ def one_center_overlap(one: Shell, other: Shell) -> NDArray[np.float64]:
 
 def self_overlaps(basis: Basis) -> NDArray[np.float64]:
     """(F) ``int chi^2`` of each function of a basis: the diagonal of its overlap matrix."""
-    blocks = [np.diag(one_center_overlap(shell, shell)) for shell in shells(basis)]
+    known: dict[tuple[Any, ...], NDArray[np.float64]] = {}  # atoms of one element have the same shells
+    blocks = []
+    for shell in shells(basis):
+        radial = (shell.exponents.tobytes(), shell.coefficients.tobytes(), shell.powers.tobytes())
+        key = (shell.l, shell.monomial, shell.q, radial)
+        if key not in known:
+            known[key] = np.diag(one_center_overlap(shell, shell))
+        blocks.append(known[key])
     return np.concatenate([np.zeros(0), *blocks])

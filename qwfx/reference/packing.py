@@ -8,13 +8,22 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-__all__ = ["pack", "packed_length", "position", "unpack"]
+__all__ = ["pack", "packed_length", "position", "split_triangle", "unpack"]
 
 
 def triangle(p: int, q: int) -> int:
     """Position of the pair {p, q} in a lower triangle: ``p (p+1)/2 + q`` for p >= q."""
     high, low = max(p, q), min(p, q)
     return high * (high + 1) // 2 + low
+
+
+def split_triangle(position: NDArray[np.int64]) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
+    """The pairs (high, low) at positions of a lower triangle."""
+    high = ((np.sqrt(8.0 * position + 1.0) - 1.0) / 2.0).astype(np.int64)
+    # The square root is rounded, and off by one near perfect squares of big numbers.
+    high += (high + 1) * (high + 2) // 2 <= position
+    high -= high * (high + 1) // 2 > position
+    return high, position - high * (high + 1) // 2
 
 
 def position(packing: str, n: int, p: int, q: int, r: int, s: int, like_spins: bool = True) -> int:

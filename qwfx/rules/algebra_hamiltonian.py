@@ -9,6 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from qwfx.findings import Severity
+from qwfx.reference.packing import split_triangle
 from qwfx.rules.inspection import Inspection
 from qwfx.rules.registry import Covered, Measured, Premise, PremiseError, Problem, Purpose, Remark, rule
 from qwfx.rules.wording import at, every, figure, listed
@@ -63,19 +64,10 @@ def _values(file: Inspection, key: str) -> tuple[NDArray[np.int64], NDArray[Any]
     return np.arange(stored, dtype=np.int64), values
 
 
-def _triangle_row(position: NDArray[np.int64]) -> NDArray[np.int64]:
-    """Row of each position in a packed lower triangle, exact in integers beyond the digits of the square root."""
-    row = ((np.sqrt(8.0 * position + 1.0) - 1.0) / 2.0).astype(np.int64)
-    row -= row * (row + 1) // 2 > position
-    row += (row + 1) * (row + 2) // 2 <= position
-    return np.asarray(row, dtype=np.int64)
-
-
 def _pairs(position: NDArray[np.int64], n_pairs: int, like: bool) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
     """Pair indices (bra, ket) of packed positions."""
     if like:
-        bra = _triangle_row(position)
-        return bra, position - bra * (bra + 1) // 2
+        return split_triangle(position)
     return position // n_pairs, position % n_pairs
 
 
@@ -223,7 +215,7 @@ BOUND_SLACK = 1e-7
 def _pair_name(k: int, n: int, is_complex: bool) -> str:
     if is_complex:
         return f"p = {k // n}, q = {k % n}"
-    p = int(_triangle_row(np.array([k]))[0])
+    p = int(split_triangle(np.array([k]))[0][0])
     return f"p = {p}, q = {k - p * (p + 1) // 2}"
 
 

@@ -7,21 +7,14 @@ from collections.abc import Iterator
 import numpy as np
 
 from qwfx.findings import Severity
+from qwfx.reference.packing import packed_length
 from qwfx.rules.inspection import Inspection
 from qwfx.rules.registry import Covered, Measured, Premise, PremiseError, Problem, Purpose, Remark, rule
 from qwfx.rules.wording import at, every
 
-__all__ = ["packed_length"]
-
 HAMILTONIAN: tuple[Purpose, ...] = ("hamiltonian",)
 IRREPS = 8
 """Irreps of D2h, the largest group whose products are a bitwise exclusive-or in FCIDUMP order."""
-
-
-def packed_length(n: int, packing: str, key: str) -> int:
-    """Length of the packed vector of two-electron integrals (FORMAT.md, Hamiltonian)."""
-    pairs = n * n if packing == "complex" else n * (n + 1) // 2
-    return pairs * pairs if key == "up_down" else pairs * (pairs + 1) // 2
 
 
 @rule(
@@ -41,7 +34,8 @@ def sparse_index(file: Inspection) -> Iterator[Remark]:
         if not file.usable(member):
             continue
         sparse += 1
-        length = packed_length(n, packing, key)
+        like = key != "up_down"
+        length = packed_length("pairs" if packing == "complex" else "eightfold" if like else "fourfold", n, like)
         outside = disorder = 0
         first_outside, first_disorder = (0, 0), (0, 0, 0)
         for start, block in file.blocks(member, overlap=1):

@@ -319,7 +319,9 @@ def save(
         )
     if target.is_dir():
         raise FileError("is a folder", where=str(target), expected="a file name", remedy="choose another name")
-    with replacing(target, PART_SUFFIX, (OSError, RuntimeError)) as part:  # h5py raises either on a full disk
+    with replacing(
+        target, PART_SUFFIX, (OSError, RuntimeError), overwrite=overwrite  # h5py raises either on a full disk
+    ) as part:
         _write_whole(wavefunction, part, str(target), progress)
 
 

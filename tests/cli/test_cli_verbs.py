@@ -16,6 +16,7 @@ from click.testing import CliRunner
 
 import qwfx
 from qwfx.cli import VERBS, main
+from qwfx.storage import load
 
 
 class Said:
@@ -86,6 +87,12 @@ def test_convert_says_what_it_did_and_never_overwrites(checkpoint: Path, tmp_pat
     assert "--force" in again.err
     assert target.read_bytes() == before
     assert run("convert", checkpoint, target, "--force", "--quiet").out == ""
+    same = run("convert", target, target.parent / "." / target.name, "--to", "qwfx")
+    assert same.code == 2
+    assert "the same file" in same.err
+    positions = load(target).system.positions
+    assert run("convert", target, target, "--to", "qwfx", "--force").code == 0
+    assert np.array_equal(load(target).system.positions, positions)
 
 
 @pytest.mark.parametrize(

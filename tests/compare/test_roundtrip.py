@@ -10,7 +10,7 @@ from typing import Any
 import numpy as np
 import pytest
 
-from qwfx.compare.roundtrip import compare_integrals, compare_orbitals, roundtrip
+from qwfx.compare.roundtrip import compare_integrals, compare_orbitals, compare_witness, roundtrip
 from qwfx.converters import registry
 from qwfx.converters.plugin import Reading, Writing
 from qwfx.converters.pyscf import from_pyscf, with_hamiltonian
@@ -107,6 +107,10 @@ def test_integrals_are_compared_dense_and_sparse(nitrogen: Wavefunction) -> None
     same, missing = compare_integrals(h, dataclasses.replace(h, two_body={"both": sparse}))
     assert max(same.values()) == 0.0
     assert not missing
+    for one, two in ((sparse, sparse), (h.two_body["both"], sparse), (sparse, h.two_body["both"])):
+        less = dataclasses.replace(two, values=np.where(np.arange(len(two.values)) == 5, 0, np.asarray(two.values)))
+        pair = (dataclasses.replace(h, two_body={"both": part}) for part in (one, less))
+        assert compare_integrals(*pair)[0]["two-body both"] == pytest.approx(abs(np.asarray(two.values)[5]))
     values[17] += 1e-6
     other = dataclasses.replace(h.two_body["both"], values=values)
     found, _ = compare_integrals(h, dataclasses.replace(h, two_body={"both": other}, core_energy=h.core_energy + 1e-3))
@@ -152,6 +156,13 @@ def test_what_cannot_be_compared_is_said(nitrogen: Wavefunction, tmp_path: Path)
         roundtrip(bare, tmp_path, through="molden")
     with pytest.raises(EvaluationError, match="neither"):
         roundtrip(bare, tmp_path, through="qwfx")
+
+
+def test_a_witness_without_a_basis_is_not_compared(nitrogen: Wavefunction) -> None:
+    assert nitrogen.witness is not None
+    assert compare_witness(dataclasses.replace(nitrogen, basis=None)) == {}
+    assert compare_witness(dataclasses.replace(nitrogen, witness=None)) == {}
+    assert compare_witness(nitrogen)["spatial"] < 1e-11
 
 
 def test_unrestricted_sets_keep_their_names(tmp_path: Path) -> None:

@@ -210,6 +210,26 @@ def test_cutoffs_are_where_the_bound_meets_the_threshold() -> None:
         assert plan._bound(s, 2 * r) < 1e-10
 
 
+@settings(deadline=None, max_examples=80)
+@given(
+    seed=st.integers(0, 2**32 - 1), l=st.integers(0, 6), power=st.integers(0, 3), monomial=st.booleans(),
+    radial=st.sampled_from(["gaussian", "slater"]), r=st.floats(0.05, 6.0),
+)  # fmt: skip
+def test_the_bound_holds_at_every_distance(
+    seed: int, l: int, power: int, monomial: bool, radial: str, r: float
+) -> None:
+    """Of one primitive, whose terms cannot make up for each other, so that a bound that is too low would show."""
+    one = np.array([1], dtype=np.int32)
+    basis = Basis(
+        radial, 0 * one, l * one, (monomial * one).astype(np.int8), np.array([0, 1]), np.array([0.8]), np.ones(1),
+        power * one,
+    )  # type: ignore[arg-type]  # fmt: skip
+    directions = np.random.default_rng(seed).normal(size=(200, 3))
+    points = r * directions / np.linalg.norm(directions, axis=1, keepdims=True)
+    exact = reference.evaluate_functions(basis, np.zeros((1, 3)), points)
+    assert np.abs(exact).max() <= plan_module.make_plan(basis, np.zeros((1, 3)))._bound(0, r) * (1 + 1e-12)
+
+
 def test_compilation_is_known_and_done_once() -> None:
     kernels.prepare()
     assert kernels.compiled()

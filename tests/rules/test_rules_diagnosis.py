@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import replace
+from types import SimpleNamespace
 from typing import Any
 
 import numpy as np
@@ -11,6 +12,7 @@ from corpus.valid import POINTS, triplet, water
 
 from qwfx.model import Basis
 from qwfx.reference import evaluate_orbitals
+from qwfx.rules.algebra_orbitals import _pattern
 from qwfx.rules.diagnosis import explain_mismatch
 from qwfx.rules.elements import BOHR
 
@@ -128,3 +130,21 @@ def test_what_is_none_of_them_stays_unnamed(molecule: Any) -> None:
     assert explain(molecule, noise, "gradients") == ""
     noise["laplacians"] = noise["laplacians"] + np.random.default_rng(4).normal(size=noise["laplacians"].shape)
     assert explain(molecule, noise, "laplacians") == ""
+
+
+def test_what_orbitals_that_are_not_orthonormal_have_in_common() -> None:
+    """A d function of the wrong scale touches just the orbitals that hold it."""
+    basis = Basis(
+        "gaussian", np.zeros(3, "i4"), np.arange(3, dtype="i4"), np.zeros(3, "i1"), np.arange(4), np.ones(3), np.ones(3)
+    )
+    file: Any = SimpleNamespace(basis=basis)
+    C = np.eye(9)
+    C[2, :] = C[1:4].sum(axis=0)  # still no d function
+    residual = np.zeros((9, 9))
+    assert _pattern(file, C, residual + 0.1 * np.eye(9)) == "; the orbitals are orthogonal but not normalised"
+    residual[4:, 4:] = 0.1
+    assert _pattern(file, C, residual).endswith("just those with functions of l = 2")
+    residual[3, 4] = residual[4, 3] = 0.1
+    assert _pattern(file, C, residual) == ""
+    residual[:] = 0.1
+    assert _pattern(file, C, residual) == ""

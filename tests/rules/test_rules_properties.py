@@ -10,9 +10,9 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
+from qwfx.reference.packing import packed_length, split_triangle
 from qwfx.rules import consistency_expansion as expansion
-from qwfx.rules.algebra_hamiltonian import _pairs, _triangle_row, coulomb_bounds
-from qwfx.rules.consistency_hamiltonian import packed_length
+from qwfx.rules.algebra_hamiltonian import _pairs, coulomb_bounds
 from qwfx.rules.inspection import Inspection
 from qwfx.rules.registry import Problem
 
@@ -99,19 +99,19 @@ def test_column_order_and_unused_strings_against_loops(rows: list[list[int]], at
 @given(st.integers(0, 2**31), st.integers(-2, 2))
 def test_row_of_a_packed_triangle_is_exact_beyond_the_digits_of_a_square_root(row: int, off: int) -> None:
     position = max(row * (row + 1) // 2 + off, 0)
-    k = int(_triangle_row(np.array([position], dtype=np.int64))[0])
+    k = int(split_triangle(np.array([position], dtype=np.int64))[0][0])
     assert k * (k + 1) // 2 <= position < (k + 1) * (k + 2) // 2
 
 
 @pytest.mark.parametrize("n", [1, 2, 3, 5])
 def test_positions_and_pairs_are_inverse(n: int) -> None:
-    for packing in ("real", "complex"):
-        n_pairs = n * n if packing == "complex" else n * (n + 1) // 2
+    for like_packing, packing in (("eightfold", "fourfold"), ("pairs", "pairs")):
+        n_pairs = n * n if packing == "pairs" else n * (n + 1) // 2
         like = [(a, b) for a in range(n_pairs) for b in range(a + 1)]
-        bra, ket = _pairs(np.arange(packed_length(n, packing, "both")), n_pairs, True)
+        bra, ket = _pairs(np.arange(packed_length(like_packing, n)), n_pairs, True)
         assert list(zip(bra.tolist(), ket.tolist(), strict=True)) == like
         unlike = [(a, b) for a in range(n_pairs) for b in range(n_pairs)]
-        bra, ket = _pairs(np.arange(packed_length(n, packing, "up_down")), n_pairs, False)
+        bra, ket = _pairs(np.arange(packed_length(packing, n, False)), n_pairs, False)
         assert list(zip(bra.tolist(), ket.tolist(), strict=True)) == unlike
 
 

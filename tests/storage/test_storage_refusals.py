@@ -11,21 +11,10 @@ import h5py
 import numpy as np
 import pytest
 from h5py import h5d, h5p, h5s, h5t
+from storage_cases import valid
 
-from qwfx import model
 from qwfx.errors import FileError, FormatError, QwfxError, UnsafeFileError
 from qwfx.storage import check_digests, load, open_raw, outline, save
-
-
-def valid() -> model.Wavefunction:
-    one = np.zeros(1, "i4")
-    rng = np.random.default_rng(1)
-    return model.Wavefunction(
-        model.System(1, 1, ("He",), np.array([2], "i4"), np.array([2.0]), np.zeros((1, 3))),
-        basis=model.Basis("gaussian", one, one, one.astype("i1"), np.array([0, 1]), np.ones(1), np.ones(1)),
-        orbitals={"spatial": model.OrbitalSet("both", rng.normal(size=(30, 1)))},
-        energies=model.Energies(one, ("RHF",), np.ones(1), np.zeros(1), ("total",)),
-    )
 
 
 def external_link(file: h5py.File) -> None:
@@ -137,6 +126,31 @@ def bad_name(file: h5py.File) -> None:
     h5d.create(file["basis"].id, b"\xff\xfe", h5t.IEEE_F64LE, h5s.create_simple((0,)))
 
 
+def missing_chunk(file: h5py.File) -> None:
+    dataset = file.create_dataset("basis/holes", shape=(5000,), dtype="f8", chunks=(10,), compression=1)
+    dataset[:4990] = np.random.default_rng(1).normal(size=4990)  # the last chunk would be made up
+
+
+def half_precision(file: h5py.File) -> None:
+    file["basis/half"] = np.zeros(3, "f2")
+
+
+def filter_twice(file: h5py.File) -> None:
+    plist = h5p.create(h5p.DATASET_CREATE)
+    plist.set_chunk((10,))
+    plist.set_deflate(1)
+    plist.set_deflate(1)
+    h5d.create(file["basis"].id, b"twice", h5t.IEEE_F64LE, h5s.create_simple((10,)), plist)
+
+
+def huge_attribute(file: h5py.File) -> None:
+    file["basis"].attrs.create("wide", np.zeros((0, 2**40), "i1"))
+
+
+def array_type(file: h5py.File) -> None:
+    file.create_dataset("basis/array", shape=(2,), dtype=np.dtype(("f8", (3,))))
+
+
 REFUSALS: list[tuple[Callable[[h5py.File], None], str]] = [
     (external_link, "external link"), (soft_link, "soft link"), (soft_cycle, "soft link"), (hard_cycle, "cycle"),
     (root_cycle, "cycle"), (twice, "same object"), (external_storage, "another file"), (virtual, "other datasets"),
@@ -145,6 +159,8 @@ REFUSALS: list[tuple[Callable[[h5py.File], None], str]] = [
     (variable_length, "variable-length"), (compound, "compound"), (enumeration, "enumeration"), (opaque, "opaque"),
     (named_type, "named datatype"), (null_space, "no data space"), (promised_contiguous, "declares"),
     (promised_chunks, "declares"), (deep, "deep"), (many, "attributes"), (bad_name, "UTF-8"),
+    (missing_chunk, "499 of its 500 chunks"), (half_precision, "float16"), (filter_twice, "repeatedly"),
+    (huge_attribute, "bytes"), (array_type, "array type"),
 ]  # fmt: skip
 
 

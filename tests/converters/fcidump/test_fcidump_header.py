@@ -150,7 +150,7 @@ def test_logical_keys_decide_nothing_else(tmp_path: Path) -> None:
         assert not h.spin_resolved
 
 
-@pytest.mark.parametrize("text", ["&FCI &END\n", "&FCI /\n", "$FCI\n$END\n", "&FCI ,, &END\n", "&FCI NORB=,NELEC=, /\n"])
+@pytest.mark.parametrize("text", ["&FCI &END\n", "&FCI /\n", "$FCI\n$END\n", "&FCI ,, &END\n", "&FCI NORB=, /\n"])
 def test_an_empty_namelist(text: str) -> None:
     with pytest.raises(ConversionError, match="has no NORB"):
         read_header(text.encode(), "x")
