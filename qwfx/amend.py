@@ -15,7 +15,7 @@ import numpy as np
 from qwfx._version import __version__
 from qwfx.determinant_list import read_list
 from qwfx.errors import ConversionError, FormatError, UnsupportedError
-from qwfx.jastrow_terms import read_terms, starting_terms
+from qwfx.jastrow_terms import read_terms
 from qwfx.model import Array, Expansion, JastrowTerm, System, Wavefunction, Witness
 
 __all__ = ["Amendment", "amend"]
@@ -64,7 +64,9 @@ def amend(
         terms |= read_terms(jastrow)
         used.append(jastrow)
     if start_jastrow:
-        terms |= starting_terms(wavefunction.system)
+        from qwfx.trial.starting import starting_jastrow
+
+        terms |= starting_jastrow(wavefunction.system)
     if terms:
         wavefunction = _with_terms(wavefunction, terms, replacing, notes, jastrow or source)
     if determinants is not None:

@@ -1,4 +1,4 @@
-"""Jastrow terms from a TOML file, and a factor to start from."""
+"""Jastrow terms from a TOML file."""
 
 from __future__ import annotations
 
@@ -9,14 +9,14 @@ from typing import Any
 import numpy as np
 
 from qwfx.errors import ConversionError, FileError
-from qwfx.model import JastrowTerm, System
+from qwfx.model import JastrowTerm
 
 if sys.version_info >= (3, 11):
     import tomllib
 else:
     import tomli as tomllib
 
-__all__ = ["read_terms", "starting_terms"]
+__all__ = ["read_terms"]
 
 INTEGERS = ("atoms", "powers")
 
@@ -74,19 +74,3 @@ def _array(name: str, value: list[Any], where: str) -> Any:
             f"{value!r:.60}", where=where, expected=f"{expected}, rows of one length", remedy="mend the array"
         )
     return array if kinds == "U" else array.astype(np.int32 if kinds == "i" else np.float64)
-
-
-def starting_terms(system: System, b: float = 1.0) -> dict[str, JastrowTerm]:
-    """A factor to begin an optimisation from: electron-electron Pade terms with the right cusps and no more.
-
-    u'(0) is 1/2 for unlike and 1/4 for like spins (T. Kato 1957; R. T. Pack, W. Byers Brown 1966). `b`, in 1/bohr, sets
-    the range; 1 is common practice for valence electrons.
-    """
-    present = {"up_up": system.n_up > 1, "up_down": system.n_up > 0 and system.n_down > 0,
-               "down_down": system.n_down > 1}  # fmt: skip
-    channels = [word for word, there in present.items() if there]
-    if not channels:
-        return {}
-    slope = np.array([0.5 if word == "up_down" else 0.25 for word in channels])
-    members = {"channel": np.array(channels), "a": slope, "b": np.full(len(channels), b)}
-    return {"electron_pairs": JastrowTerm("pade", {"body": "electron-electron"}, members)}

@@ -121,7 +121,8 @@ def _sum_over(kinds: Any, starts: Any, parameters: Any, own: Any, y: Any, first:
     if len(own) == 1 and kinds[own[0]] == CUTOFF:
         p = parameters[starts[own[0]] : starts[own[0] + 1]]
         if len(p) == 10 and p[1] == 3.0:
-            return add_up_usual(p, y[0, first:last], y[1, first:last], y[2, first:last], at)
+            total += add_up_usual(p, y[0, first:last], y[1, first:last], y[2, first:last], at)
+            return total
     for start in range(first, last, BLOCK):
         stop = min(start + BLOCK, last)
         r = scratch[0]

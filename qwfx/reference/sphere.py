@@ -42,7 +42,7 @@ def _orbit(*numbers: float) -> NDArray[np.float64]:
 def _icosahedron() -> NDArray[np.float64]:
     golden = (1.0 + np.sqrt(5.0)) / 2.0
     corners = [np.roll([0.0, a, b * golden], turn) for turn in range(3) for a in (1, -1) for b in (1, -1)]
-    return np.array(corners) / np.sqrt(1.0 + golden**2)
+    return np.asarray(np.array(corners) / np.sqrt(1.0 + golden**2))
 
 
 def _rule(degree: int, *parts: tuple[NDArray[np.float64], float]) -> SphereRule:

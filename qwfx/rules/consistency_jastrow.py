@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterator
+from typing import Any
 
 from qwfx.findings import Severity
 from qwfx.reference.jastrow_faults import CHANNELS, atom_faults, channel_faults, parameter_faults
@@ -83,7 +84,8 @@ def jastrow_atoms(file: Inspection) -> Iterator[Remark]:
 def jastrow_parameters(file: Inspection) -> Iterator[Remark]:
     for path in _terms(file):
         attributes = dict(file.raw.attributes(path))
-        members = {name: file.read(f"{path}/{name}") for name in file.members(path) if name != "channel"}
+        parameters = [name for name in file.members(path) if name != "channel"]
+        members: dict[str, Any] = {name: file.read(f"{path}/{name}") for name in parameters}
         members["channel"] = file.strings(f"{path}/channel")
         yield from map(Problem.of, parameter_faults(path, attributes, members))
         if attributes["form"] == "cutoff-polynomial" and attributes["smoothness"] < 3:

@@ -2,8 +2,9 @@
 
 from __future__ import annotations
 
+from qwfx.trial.starting import starting_jastrow
 from qwfx.trial.trial import Trial
 from qwfx.trial.values import Event, TrialValues, TrialWarning
 from qwfx.trial.walkers import Walkers
 
-__all__ = ["Event", "Trial", "TrialValues", "TrialWarning", "Walkers"]
+__all__ = ["Event", "Trial", "TrialValues", "TrialWarning", "Walkers", "starting_jastrow"]

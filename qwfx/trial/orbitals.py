@@ -5,14 +5,13 @@ from __future__ import annotations
 from typing import Any
 
 import numpy as np
-from numba import njit
 from numpy.typing import NDArray
 
 from qwfx.kernels import evaluate_orbitals
 from qwfx.kernels.plan import make_plan
 from qwfx.model import Basis, System
 
-__all__ = ["SpinOrbitals", "contract"]
+__all__ = ["SpinOrbitals"]
 
 
 class SpinOrbitals:
@@ -33,24 +32,3 @@ class SpinOrbitals:
             derivatives=derivatives, threads=self.threads, plan=self.plan,
         )  # fmt: skip
         return np.ascontiguousarray(found.transpose(0, 2, 1)).reshape(len(found), len(self.coefficients), *shape)
-
-
-@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
-def _contract(phi: Any, gamma: Any, out: Any) -> None:
-    """out[k, w, i] = sum_p phi[k, p, w, i] gamma[w, p, i]."""
-    for w in range(gamma.shape[0]):
-        for k in range(phi.shape[0]):
-            for i in range(gamma.shape[2]):
-                out[k, w, i] = 0
-            for p in range(gamma.shape[1]):
-                for i in range(gamma.shape[2]):
-                    out[k, w, i] += phi[k, p, w, i] * gamma[w, p, i]
-
-
-def contract(phi: NDArray[Any], gamma: NDArray[Any]) -> NDArray[Any]:
-    """(S, k, W, n) of `phi` (k, M, W, n) and `gamma` (S, W, M, n): what replaces row i of Phi, over D."""
-    kind = np.result_type(phi, gamma)
-    out = np.empty((len(gamma), len(phi), *gamma.shape[1:2], gamma.shape[3]), kind)
-    for s in range(len(gamma)):
-        _contract(phi, gamma[s], out[s])
-    return out

@@ -9,13 +9,14 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from qwfx.errors import EvaluationError, FormatError, UnsupportedError
+from qwfx.kernels.contract import contract
 from qwfx.kernels.expansion import Determinants
 from qwfx.kernels.jastrow import Jastrow
 from qwfx.kernels.potential import Potential
 from qwfx.kernels.tables import Table
 from qwfx.model import Expansion, OrbitalSet, Wavefunction
 from qwfx.reference.sphere import random_rotations
-from qwfx.trial.orbitals import SpinOrbitals, contract
+from qwfx.trial.orbitals import SpinOrbitals
 from qwfx.trial.values import TrialValues, events_of, warn
 from qwfx.trial.walkers import Walkers
 
