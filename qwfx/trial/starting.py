@@ -11,7 +11,8 @@ __all__ = ["SLOPES", "starting_jastrow"]
 
 SLOPES = {"up_up": 0.25, "up_down": 0.5, "down_down": 0.25}
 """u'(0) by the cusp conditions of FORMAT.md, F19 (Kato 1957; Pack and Byers Brown 1966)."""
-CUTOFF = 3.0
+CUTOFF = 1.0
+"""Short on purpose: nothing here holds the electrons at the nuclei, and a longer factor drives them away."""
 SMOOTHNESS = 3
 
 
@@ -25,7 +26,8 @@ def starting_jastrow(system: System, cutoff: float = CUTOFF) -> dict[str, Jastro
     Parameters
     ----------
     system : electrons of which spins there are. Only pairs that it has get a row.
-    cutoff : L in bohr.
+    cutoff : L in bohr. 1 bohr lowers the energy of helium, of neon and of the nitrogen molecule from that of their
+        Hartree-Fock determinants; 3 bohr, without electron-nucleus terms, raises it for all but the lightest atoms.
 
     Returns
     -------
