@@ -13,8 +13,10 @@ import numpy as np
 from numpy.typing import NDArray
 
 from qwfx.model import Basis
+from qwfx.reference.determinants import DeterminantSum, occupied
+from qwfx.rules.inspection import Inspection
 
-__all__ = ["evaluate_orbitals", "overlap"]
+__all__ = ["evaluate_orbitals", "expansion_of", "overlap"]
 
 PLAIN_PRIMITIVE_PAIRS = 3_000
 """Pairs of primitives up to which the plain overlap integrals take less time than loading the compiled ones."""
@@ -57,3 +59,19 @@ def _implementation(plain: bool, progress: Callable[[str, float], None] | None) 
     if not kernels.compiled():
         kernels.prepare(progress)
     return kernels
+
+
+def expansion_of(file: Inspection) -> DeterminantSum:
+    """The expansion of a file, read in full."""
+    row_start = file.read("/expansion/row_start").astype(np.int64)
+    strings = {
+        spin: occupied(file.read(f"/expansion/{spin}_strings").astype(np.uint64), file.integer("/system", f"n_{spin}"))
+        for spin in ("up", "down")
+    }
+    return DeterminantSum(
+        strings["up"],
+        strings["down"],
+        np.repeat(np.arange(len(row_start) - 1), np.diff(row_start)),
+        file.read("/expansion/columns").astype(np.int64),
+        np.asarray(file.read("/expansion/coefficients")),
+    )

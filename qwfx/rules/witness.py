@@ -9,11 +9,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from qwfx.findings import Severity
-from qwfx.reference.determinants import DeterminantSum, evaluate_determinants, occupied
+from qwfx.reference.determinants import evaluate_determinants
 from qwfx.reference.potential import coulomb
 from qwfx.rules.algebra_orbitals import BASIS_RULES
 from qwfx.rules.diagnosis import explain_mismatch
-from qwfx.rules.evaluator import evaluate_orbitals
+from qwfx.rules.evaluator import evaluate_orbitals, expansion_of
 from qwfx.rules.inspection import Inspection
 from qwfx.rules.registry import Covered, Measured, Premise, PremiseError, Problem, Purpose, Remark, rule
 from qwfx.rules.wording import at, figure
@@ -139,21 +139,6 @@ OPERATIONS = 2e10
 """Floating-point operations that the comparison of configurations may take; the rest is left out and said."""
 
 
-def _expansion(file: Inspection) -> DeterminantSum:
-    row_start = file.read("/expansion/row_start").astype(np.int64)
-    strings = {
-        spin: occupied(file.read(f"/expansion/{spin}_strings").astype(np.uint64), file.integer("/system", f"n_{spin}"))
-        for spin in ("up", "down")
-    }
-    return DeterminantSum(
-        strings["up"],
-        strings["down"],
-        np.repeat(np.arange(len(row_start) - 1), np.diff(row_start)),
-        file.read("/expansion/columns").astype(np.int64),
-        np.asarray(file.read("/expansion/coefficients")),
-    )
-
-
 @rule(
     name="witness-configurations",
     tier="witness",
@@ -173,7 +158,7 @@ def witness_configurations(file: Inspection) -> Iterator[Remark]:
     entries = file.shape("/expansion/columns")[0]
     if entries > MANY_ENTRIES:
         raise PremiseError(f"{entries} entries; whole configurations are evaluated for up to {MANY_ENTRIES}")
-    total = _expansion(file)
+    total = expansion_of(file)
     affordable = min(len(positions), int(OPERATIONS / max(total.cost, 1.0)))
     if not affordable:
         raise PremiseError(f"{len(total.up)} up and {len(total.down)} down strings are too many to evaluate here")

@@ -232,7 +232,7 @@ def dressed() -> Wavefunction:
                     "atoms": np.array([0, 1], dtype=np.int32),
                     "scale": np.ones(3),
                     "scale_electron": np.ones(3),
-                    "powers": np.array([[1, 1, 2], [2, 0, 2]], dtype=np.int32),
+                    "powers": np.array([[2, 2, 2], [2, 0, 2]], dtype=np.int32),  # which touch no cusp
                     "coefficients": np.full((3, 2), -0.05),
                 },
             ),
@@ -242,7 +242,8 @@ def dressed() -> Wavefunction:
                 {
                     "channel": np.array(["up_down", "up_up", "down_down"]),
                     "cutoff": np.full(3, 5.0),
-                    "coefficients": np.tile([0.2, 0.1, 0.05, 0.02], (3, 1)),
+                    # No slope at 0, but for down_down, for which there is no other term: (c_2 - c_0) / (2 L / 4).
+                    "coefficients": np.array([[0.2, 0.1, 0.2, 0.02]] * 2 + [[0.2, 0.1, 0.2 + 0.25 * 2.5, 0.02]]),
                 },
             ),
         },
@@ -322,8 +323,9 @@ def square() -> Wavefunction:
     C = lowdin(S)
     strings = np.array([[0b0011], [0b0101], [0b1010], [0b1100]], dtype=np.uint64)
     entries = [(0, 0), (0, 3), (1, 1), (1, 2), (2, 1), (2, 2), (3, 0), (3, 3)]
-    first = np.array([0.8, -0.2, 0.3, 0.1, 0.1, 0.3, -0.2, 0.3])
-    second = np.array([0.1, 0.5, -0.2, 0.6, 0.5, 0.2, -0.3, 0.2])
+    # Singlets: the determinants with four singly occupied orbitals belong together.
+    first = np.array([0.8, -0.2, 0.3, -0.2, -0.2, 0.3, -0.2, 0.3])
+    second = np.array([0.1, 0.5, -0.2, 0.5, 0.5, 0.2, 0.5, 0.2])
     first /= np.linalg.norm(first)
     second -= first * (first @ second)
     second /= np.linalg.norm(second)
