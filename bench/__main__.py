@@ -1,4 +1,4 @@
-"""Run every benchmark, or those that are named: ``python -m bench [orbitals fcidump molden start]``."""
+"""Run every benchmark, or those that are named: ``python -m bench [determinants fcidump jastrow molden moves orbitals start]``."""
 
 from __future__ import annotations
 

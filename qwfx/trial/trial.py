@@ -45,6 +45,7 @@ class Trial:
         expansion = _expansion(wavefunction)
         assert wavefunction.basis is not None
         self.wavefunction = wavefunction
+        self.threads = threads
         self.n_up, self.n_down = wavefunction.system.n_up, wavefunction.system.n_down
         up, down = (_orbital_set(wavefunction, spin, expansion) for spin in ("up", "down"))
         self.determinants = Determinants(expansion, self.n_up, self.n_down, up.n_orbitals, down.n_orbitals)
@@ -151,7 +152,8 @@ class Trial:
 
     def _log(self, places: NDArray[np.float64]) -> tuple[NDArray[np.float64], NDArray[Any]]:
         up, down = self._phi(places, 0)
-        found = self.determinants.evaluate(up[0].transpose(1, 2, 0), down[0].transpose(1, 2, 0), gammas=False)
+        phi = up[0].transpose(1, 2, 0), down[0].transpose(1, 2, 0)
+        found = self.determinants.evaluate(*phi, gammas=False, threads=self.threads)
         if self.jastrow.empty:
             return found.log_abs, found.sign
         return found.log_abs + self.jastrow.evaluate(places)[0], found.sign
@@ -160,7 +162,7 @@ class Trial:
         self, places: NDArray[np.float64], rotations: NDArray[np.float64] | None
     ) -> tuple[NDArray[np.float64], NDArray[Any], NDArray[Any], NDArray[Any], NDArray[Any]]:
         up, down = self._phi(places, 2)
-        found = self.determinants.evaluate(up[0].transpose(1, 2, 0), down[0].transpose(1, 2, 0))
+        found = self.determinants.evaluate(up[0].transpose(1, 2, 0), down[0].transpose(1, 2, 0), threads=self.threads)
         ratios = np.concatenate([contract(up[1:], found.gamma_up), contract(down[1:], found.gamma_down)], axis=3)
         gradients, laplacians = np.moveaxis(ratios[:, :3], 1, 3), ratios[:, 3]
         log_abs = found.log_abs

@@ -123,7 +123,7 @@ class Walkers:
         value = np.zeros(len(electrons))
         if not self.trial.jastrow.empty:
             value = self.trial.jastrow.evaluate(electrons)[0]
-        return (up, down), self.trial.determinants.from_tables(up, down), value
+        return (up, down), self.trial.determinants.from_tables(up, down, threads=self.trial.threads), value
 
     def _factorise(self, spin: int, walkers: NDArray[np.int64]) -> None:
         """Tables of one spin of some walkers from their electrons."""
@@ -141,10 +141,10 @@ class Walkers:
     def _renew(self, moved: NDArray[np.int64]) -> None:
         """D and gamma of the walkers that moved."""
         if self.trial.determinants.single:  # gamma is A^-1 itself, which is up to date
-            self._values = self.trial.determinants.from_tables(*self._tables)
+            self._values = self.trial.determinants.from_tables(*self._tables, threads=self.trial.threads)
             return
         parts = (_taken(table, moved) for table in self._tables)
-        found, values = self.trial.determinants.from_tables(*parts), self._values
+        found, values = self.trial.determinants.from_tables(*parts, threads=self.trial.threads), self._values
         gammas = [values.gamma_up, values.gamma_down]
         for spin, new in enumerate((found.gamma_up, found.gamma_down)):
             gammas[spin][:, moved] = new
