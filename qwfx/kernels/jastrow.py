@@ -9,20 +9,19 @@ from numba import njit
 from numpy.typing import NDArray
 
 from qwfx.errors import FormatError, UnsupportedError
-from qwfx.kernels.radial import CUTOFF, SUM, add_up, add_up_usual, derivatives, pack_radial
-from qwfx.kernels.three_body import add_three_body, change_three_body, pack_three_body
+from qwfx.kernels.jastrow_moves import change
+from qwfx.kernels.radial import LEAN, SUM, derivatives, length_of, pack_radial
+from qwfx.kernels.three_body import NO_CUTOFF, add_three_body, pack_three_body
 from qwfx.model import JastrowTerm, Wavefunction
 from qwfx.reference.jastrow import radial_function
 from qwfx.reference.jastrow_faults import PAIRS, atom_faults, channel_faults, parameter_faults
 
 __all__ = ["Jastrow"]
 
-BLOCK = 512
-"""Distances at a time: they and what is made of them stay in the fastest cache."""
 FORMS = ("pade", "cutoff-polynomial", "scaled-polynomial", "bspline")
 
 
-@njit(**SUM)  # type: ignore[untyped-decorator]
+@njit(**LEAN)  # type: ignore[untyped-decorator]
 def _distances(x: Any, y: Any, z: Any, at: Any, r: Any) -> None:
     """r[k] = |at - (x, y, z)[k]|."""
     ax, ay, az = at[0], at[1], at[2]
@@ -31,7 +30,7 @@ def _distances(x: Any, y: Any, z: Any, at: Any, r: Any) -> None:
         r[k] = np.sqrt(dx * dx + dy * dy + dz * dz)
 
 
-@njit(**SUM)  # type: ignore[untyped-decorator]
+@njit(**LEAN)  # type: ignore[untyped-decorator]
 def _add_pairs(
     kinds: Any, starts: Any, parameters: Any, own: Any, i: int, first: int, last: int, x: Any, gradient: Any,
     laplacian: Any, scratch: Any,
@@ -112,70 +111,6 @@ def _nuclei(kind: int, p: Any, nuclei: Any, first: int, last: int, x: Any, gradi
 
 
 @njit(**SUM)  # type: ignore[untyped-decorator]
-def _sum_over(kinds: Any, starts: Any, parameters: Any, own: Any, y: Any, first: int, last: int, at: Any,
-              scratch: Any) -> float:  # fmt: skip
-    """Sum of the functions `own` over the distances of `at` to y[:, first:last], in blocks that stay in the cache."""
-    total = 0.0
-    if len(own) == 0 or first >= last:
-        return total
-    if len(own) == 1 and kinds[own[0]] == CUTOFF:
-        p = parameters[starts[own[0]] : starts[own[0] + 1]]
-        if len(p) == 10 and p[1] == 3.0:
-            total += add_up_usual(p, y[0, first:last], y[1, first:last], y[2, first:last], at)
-            return total
-    for start in range(first, last, BLOCK):
-        stop = min(start + BLOCK, last)
-        r = scratch[0]
-        _distances(y[0, start:stop], y[1, start:stop], y[2, start:stop], at, r)
-        for f in own:
-            total += add_up(
-                kinds[f], parameters[starts[f] : starts[f + 1]], r, stop - start, scratch[1], scratch[2]
-            )  # fmt: skip
-    return total
-
-
-@njit(**SUM)  # type: ignore[untyped-decorator]
-def _change_pairs(
-    kinds: Any, starts: Any, parameters: Any, to_up: Any, to_down: Any, n_up: int, rows: Any, which: int, places: Any,
-    out: Any,
-) -> None:  # fmt: skip
-    """What the electron-electron terms of walkers (W, 3, N) change by if an electron goes to each place (W, K, 3)."""
-    n = rows.shape[2]
-    scratch = np.empty((3, BLOCK))
-    for w in range(len(rows)):
-        x = rows[w]
-        before = 0.0
-        for step in range(places.shape[1] + 1):
-            at = x[:, which].copy() if step == 0 else places[w, step - 1]
-            total = 0.0
-            for side in range(2):
-                own = to_up if side == 0 else to_down
-                first, last = (0, n_up) if side == 0 else (n_up, n)
-                if first <= which < last:
-                    total += _sum_over(kinds, starts, parameters, own, x, first, which, at, scratch)
-                    total += _sum_over(kinds, starts, parameters, own, x, which + 1, last, at, scratch)
-                else:
-                    total += _sum_over(kinds, starts, parameters, own, x, first, last, at, scratch)
-            if step == 0:
-                before = total
-            else:
-                out[w, step - 1] += total - before
-
-
-@njit(**SUM)  # type: ignore[untyped-decorator]
-def _change_nuclei(kinds: Any, starts: Any, parameters: Any, own: Any, nuclei: Any, rows: Any, which: int, places: Any,
-                   out: Any) -> None:  # fmt: skip
-    """The same of one row of an electron-nucleus term, with nuclei (3, A)."""
-    n = nuclei.shape[1]
-    scratch = np.empty((3, BLOCK))
-    for w in range(len(rows)):
-        here = rows[w, :, which].copy()
-        before = _sum_over(kinds, starts, parameters, own, nuclei, 0, n, here, scratch)
-        for k in range(places.shape[1]):
-            out[w, k] += _sum_over(kinds, starts, parameters, own, nuclei, 0, n, places[w, k], scratch) - before
-
-
-@njit(**SUM)  # type: ignore[untyped-decorator]
 def _walkers_pairs(kinds: Any, starts: Any, parameters: Any, own: Any, n_up: int, electrons: Any, value: Any,
                    gradient: Any, laplacian: Any) -> None:  # fmt: skip
     """`_all_pairs` of each walker (W, N, 3)."""
@@ -243,6 +178,7 @@ class Jastrow:
             np.concatenate([np.zeros(0), *parameters]),
         )
         self._own = tuple(np.array(self._pairs[word], dtype=np.int64) for word in PAIRS)
+        self._plans = self._plan(0), self._plan(1)
 
     def evaluate(
         self, electrons: NDArray[np.float64]
@@ -268,28 +204,46 @@ class Jastrow:
         """(W, K) J with electron `which` of each walker (W, N, 3) at its places (W, K, 3), less J as it is."""
         return self.change_in_rows(np.ascontiguousarray(electrons.transpose(0, 2, 1)), which, places)
 
-    def change_in_rows(
-        self, rows: NDArray[np.float64], which: int, places: NDArray[np.float64]
-    ) -> NDArray[np.float64]:
+    def change_in_rows(self, rows: NDArray[np.float64], which: int, places: NDArray[np.float64]) -> NDArray[np.float64]:
         """As `change`, of electrons (W, 3, N): for who moves them often, as it saves turning them round."""
-        places = np.ascontiguousarray(places)
         out = np.zeros(places.shape[:2])
-        spin = 0 if which < self.n_up else 1
-        spans = ((0, self.n_up), (self.n_up, rows.shape[2]))
-        to_up, to_down = self._own[:2] if spin == 0 else self._own[1:]
-        if len(to_up) or len(to_down):
-            _change_pairs(*self._functions, to_up, to_down, self.n_up, rows, which, places, out)
-        for of, f, nuclei in self._nuclei:
-            if of == spin:
-                _change_nuclei(*self._functions, np.array([f]), nuclei, rows, which, places, out)
+        plan = self._plans[0 if which < self.n_up else 1]
+        rows, places = np.ascontiguousarray(rows), np.ascontiguousarray(places)
+        change(self._functions, *plan, self.n_up, rows, which, places, out)
+        return out
+
+    def _plan(self, spin: int) -> tuple[Any, ...]:
+        """What `change` takes for a moved electron of one spin, as arrays."""
+        kinds, starts, parameters = self._functions
+        partners = self._own[:2] if spin == 0 else self._own[1:]
+        nuclear = [(f, nuclei) for of, f, nuclei in self._nuclei if of == spin]
+        three = []
         for channel, p, gamma, nuclei in self._three:
             spins = _spins(channel)
             if spin in spins:
-                first = spins[0] == spin
-                seen = gamma if first else np.ascontiguousarray(gamma.transpose(1, 0, 2))
-                partners = spans[spins[1] if first else spins[0]]
-                change_three_body(p, seen, *partners, np.ascontiguousarray(nuclei.T), rows, which, places, out)
-        return out
+                first = spins[0] == spin  # else the moved electron is the second of the powers
+                seen = gamma if first else gamma.transpose(1, 0, 2)
+                three.append((p, seen, spins[1] if first else spins[0], nuclei.T))
+        lengths = [length_of(int(kind), parameters[first:]) for kind, first in zip(kinds, starts, strict=False)]
+        reach = [lengths[f] for f in np.concatenate(partners)]
+        reach += [2 * p[0] if p[0] < NO_CUTOFF else np.inf for p, *_ in three]  # both are near the same nucleus
+        return (
+            partners,
+            (
+                np.array([f for f, _ in nuclear], dtype=np.int64),
+                np.array([lengths[f] for f, _ in nuclear]),
+                *_joined([nuclei for _, nuclei in nuclear]),
+            ),
+            (
+                np.array([p for p, *_ in three]).reshape(-1, 4),
+                np.array([gamma.shape for _, gamma, *_ in three], dtype=np.int64).reshape(-1, 3),
+                np.cumsum([0, *(gamma.size for _, gamma, *_ in three)]),
+                np.concatenate([np.zeros(0), *(gamma.ravel() for _, gamma, *_ in three)]),
+                np.array([side for *_, side, _ in three], dtype=np.int64),
+                *_joined([nuclei for *_, nuclei in three]),
+            ),
+            float(max(reach, default=0.0)),
+        )
 
     def slopes(self) -> dict[str, float]:
         """u'(0) of each pair of spins, summed over the electron-electron terms: 1/2 and 1/4 fulfil the cusp."""
@@ -299,6 +253,11 @@ class Jastrow:
                 for row, channel in enumerate(str(word) for word in term.members["channel"]):
                     total[channel] += float(radial_function(term, row)(0.0)[1])
         return total
+
+
+def _joined(parts: list[NDArray[np.float64]]) -> tuple[NDArray[np.int64], NDArray[np.float64]]:
+    """Where each of some arrays (3, .) starts in the whole, and the whole."""
+    return np.cumsum([0, *(part.shape[1] for part in parts)]), np.concatenate([np.zeros((3, 0)), *parts], axis=1)
 
 
 def _spins(channel: str) -> tuple[int, int]:

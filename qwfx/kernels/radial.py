@@ -10,10 +10,13 @@ from numpy.typing import NDArray
 
 from qwfx.kernels.numeric import JIT
 
-__all__ = ["CUTOFF", "SUM", "add_up", "add_up_usual", "derivatives", "pack_radial"]
+__all__ = ["CUTOFF", "LEAN", "SUM", "add_up", "add_up_usual", "derivatives", "length_of", "pack_radial"]
 
 SUM: dict[str, Any] = JIT | {"fastmath": {"contract", "nsz", "reassoc"}}
 """Sums may be taken in any order, so that they are done in vectors; NaN stays NaN."""
+LEAN: dict[str, Any] = SUM | {"_nrt": False}
+"""Of functions that make no array: without counting references to the arrays that they pass on, which takes longer
+than the work itself where a walker has few electrons."""
 PADE, CUTOFF, SCALED, SPLINE = range(4)
 
 
@@ -36,12 +39,17 @@ def pack_radial(form: str, attributes: Any, members: Any, row: int) -> tuple[int
     return SPLINE, np.concatenate([[members["cutoff"][row], float(len(pieces))], pieces.ravel()])
 
 
+def length_of(kind: int, p: NDArray[np.float64]) -> float:
+    """Where a function ends, from what `pack_radial` makes of it; infinite for one that does not."""
+    return float(p[0]) if kind in (CUTOFF, SPLINE) else np.inf
+
+
 def _in_fours(coefficients: NDArray[np.float64]) -> NDArray[np.float64]:
     """With zeros up to a multiple of four."""
     return np.concatenate([coefficients, np.zeros(-len(coefficients) % 4)])
 
 
-@njit(**JIT)  # type: ignore[untyped-decorator]
+@njit(**LEAN)  # type: ignore[untyped-decorator]
 def _horner(p: Any, first: int, x: Any, n: int, f: Any) -> None:
     """f[k] = sum_c p[first + c] x[k]^c, four coefficients at a time: a loop over all of them is not done in vectors."""
     for k in range(n):
@@ -52,7 +60,7 @@ def _horner(p: Any, first: int, x: Any, n: int, f: Any) -> None:
             f[k] = (((f[k] * x[k] + q3) * x[k] + q2) * x[k] + q1) * x[k] + q0
 
 
-@njit(**SUM)  # type: ignore[untyped-decorator]
+@njit(**LEAN)  # type: ignore[untyped-decorator]
 def add_up_usual(p: Any, x: Any, y: Any, z: Any, at: Any) -> float:
     """Sum of a polynomial with a cutoff of the usual length, C = 3 and up to 8 coefficients, over distances to `at`.
 
@@ -70,7 +78,7 @@ def add_up_usual(p: Any, x: Any, y: Any, z: Any, at: Any) -> float:
     return total
 
 
-@njit(**SUM)  # type: ignore[untyped-decorator]
+@njit(**LEAN)  # type: ignore[untyped-decorator]
 def add_up(kind: int, p: Any, r: Any, n: int, f: Any, s: Any) -> float:
     """Sum of u(r[k]), k < n; `f` and `s` are scratch."""
     total = 0.0
@@ -103,14 +111,14 @@ def add_up(kind: int, p: Any, r: Any, n: int, f: Any, s: Any) -> float:
         L, last, inverse = p[0], int(p[1]) - 1, p[1] / p[0]
         for k in range(n):
             x = min(r[k] * inverse, last + 1.0)
-            piece = min(int(x), last)
+            piece = int(x) if x < last else last  # NaN has no integer
             t, q = x - piece, 2 + 4 * piece
             y = ((p[q + 3] * t + p[q + 2]) * t + p[q + 1]) * t + p[q]
-            total += y if r[k] < L else 0.0
+            total += 0.0 if r[k] >= L else y
     return total
 
 
-@njit(**JIT)  # type: ignore[untyped-decorator]
+@njit(**LEAN)  # type: ignore[untyped-decorator]
 def derivatives(kind: int, p: Any, r: Any, n: int, u: Any, du: Any, d2u: Any) -> None:
     """Add u, u' and u'' at r[k] to u[k], du[k] and d2u[k], k < n."""
     if kind == PADE:
@@ -152,9 +160,9 @@ def derivatives(kind: int, p: Any, r: Any, n: int, u: Any, du: Any, d2u: Any) ->
     else:
         pieces, inverse = int(p[1]), p[1] / p[0]
         for k in range(n):
-            if r[k] < p[0]:
+            if not r[k] >= p[0]:  # NaN goes on
                 x = r[k] * inverse
-                piece = min(int(x), pieces - 1)
+                piece = int(x) if x < pieces - 1 else pieces - 1
                 t, q = x - piece, 2 + 4 * piece
                 u[k] += ((p[q + 3] * t + p[q + 2]) * t + p[q + 1]) * t + p[q]
                 du[k] += ((3.0 * p[q + 3] * t + 2.0 * p[q + 2]) * t + p[q + 1]) * inverse

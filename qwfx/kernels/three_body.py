@@ -15,10 +15,9 @@ from numpy.typing import NDArray
 
 from qwfx.kernels.radial import SUM
 
-__all__ = ["add_three_body", "change_three_body", "pack_three_body"]
+__all__ = ["NO_CUTOFF", "add_three_body", "outer_values", "pack_three_body"]
 
 NO_CUTOFF = 1e300
-GROUP = 32
 
 
 def pack_three_body(
@@ -60,7 +59,7 @@ def _outer(p: Any, r: float, a: Any) -> None:
 
 
 @njit(inline="always", **SUM)  # type: ignore[untyped-decorator]
-def _outer_values(p: Any, r: float, a: Any) -> None:
+def outer_values(p: Any, r: float, a: Any) -> None:
     """a[l] = a_l(r)."""
     y, power = r, 1.0
     if p[0] < NO_CUTOFF:
@@ -116,7 +115,7 @@ def _add(
     outer = np.zeros((n_electrons, max(n_l, n_m), 3))
     for k in range(min(i0, j0), max(i1, j1)):
         r = np.sqrt((x[k, 0] - nucleus[0]) ** 2 + (x[k, 1] - nucleus[1]) ** 2 + (x[k, 2] - nucleus[2]) ** 2)
-        distance[k], inside[k] = r, r < p[0]
+        distance[k], inside[k] = r, not r >= p[0]
         if inside[k]:
             _outer(p, r, outer[k])
     c, z = np.empty((3, n_m, n_n)), np.empty((n_n, 3))
@@ -170,90 +169,3 @@ def _add(
             laplacian[i] += f11 + 2.0 * f1 / ri + pair + 2.0 * f13 * along_i
             laplacian[j] += f22 + 2.0 * f2 / rj + pair - 2.0 * f23 * along_j
     return total
-
-
-@njit(**SUM)  # type: ignore[untyped-decorator]
-def _squares(x: Any, y: Any, z: Any, at: Any, out: Any) -> None:
-    """Squares of the distances of `at` to (x, y, z)[k]."""
-    ax, ay, az = at[0], at[1], at[2]
-    for k in range(len(x)):
-        dx, dy, dz = x[k] - ax, y[k] - ay, z[k] - az
-        out[k] = dx * dx + dy * dy + dz * dz
-
-
-@njit(**SUM)  # type: ignore[untyped-decorator]
-def _inside(squares: Any, square: float, but: int, out: Any) -> int:
-    """Numbers of the squares below one, without number `but`; how many. Few are, so that most groups have none."""
-    n, end = 0, len(squares)
-    for start in range(0, end, GROUP):
-        stop = min(start + GROUP, end)
-        part = squares[start:stop]
-        least = square
-        for k in range(len(part)):
-            least = min(least, part[k])
-        if least < square:
-            for k in range(start, stop):
-                out[n] = k
-                n += 1 if squares[k] < square and k != but else 0
-    return n
-
-
-@njit(**SUM)  # type: ignore[untyped-decorator]
-def change_three_body(
-    p: Any, gamma: Any, j0: int, j1: int, nuclei: Any, rows: Any, which: int, places: Any, out: Any
-) -> None:
-    """Add to out[w, q] what one row of a term, at all its nuclei, changes by if electron `which` goes to places[w, q].
-
-    nuclei: (3, A). rows: (W, 3, N). The moved electron is the first of gamma's indices; the others are j0 to j1 - 1.
-    """
-    n_l, n_m, n_n = gamma.shape
-    n_places, n_nuclei = places.shape[1], nuclei.shape[1]
-    a, other = np.empty(n_l), np.empty(n_m)
-    c = np.zeros((n_places + 1, n_m, n_n))
-    to_nuclei = np.empty((n_places + 2, n_nuclei))  # of each place, of where it is, the least of all
-    squares, inside, close = np.empty(j1 - j0), np.empty(j1 - j0, np.int64), np.empty(n_nuclei, np.int64)
-    at = np.empty((n_places + 1, 3))
-    square = p[0] * p[0]
-    for w in range(len(rows)):
-        at[:n_places] = places[w]
-        at[n_places] = rows[w, :, which]
-        least = to_nuclei[n_places + 1]
-        for q in range(n_places + 1):
-            _squares(nuclei[0], nuclei[1], nuclei[2], at[q], to_nuclei[q])
-        for k in range(n_nuclei):
-            least[k] = to_nuclei[0, k]
-        for q in range(1, n_places + 1):
-            for k in range(n_nuclei):
-                least[k] = min(least[k], to_nuclei[q, k])
-        x, y, z = rows[w, 0, j0:j1], rows[w, 1, j0:j1], rows[w, 2, j0:j1]
-        for number in range(_inside(least, square, -1, close)):
-            nucleus = close[number]
-            for q in range(n_places + 1):
-                c[q] = 0.0
-                if to_nuclei[q, nucleus] < square:
-                    _outer_values(p, np.sqrt(to_nuclei[q, nucleus]), a)
-                    for l in range(n_l):
-                        for m in range(n_m):
-                            for n in range(n_n):
-                                c[q, m, n] += gamma[l, m, n] * a[l]
-            _squares(x, y, z, nuclei[:, nucleus], squares)
-            for place in range(_inside(squares, square, which - j0, inside)):
-                k = inside[place]
-                _outer_values(p, np.sqrt(squares[k]), other)
-                before = 0.0
-                for step in range(n_places + 1):
-                    q = n_places if step == 0 else step - 1
-                    f = 0.0
-                    if to_nuclei[q, nucleus] < square:
-                        d = np.sqrt((at[q, 0] - x[k]) ** 2 + (at[q, 1] - y[k]) ** 2 + (at[q, 2] - z[k]) ** 2)
-                        if p[0] >= NO_CUTOFF:
-                            d = p[3] * d / (1.0 + p[3] * d)
-                        for m in range(n_m):
-                            s = 0.0
-                            for n in range(n_n - 1, -1, -1):
-                                s = s * d + c[q, m, n]
-                            f += s * other[m]
-                    if step == 0:
-                        before = f
-                    else:
-                        out[w, q] += f - before

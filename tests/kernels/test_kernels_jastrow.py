@@ -6,6 +6,7 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
+from jastrow_sizes import sizes
 from jastrows import KINDS, random_term
 
 from qwfx.errors import FormatError, QwfxError, UnsupportedError
@@ -14,6 +15,9 @@ from qwfx.model import Cell, JastrowTerm, System, Wavefunction
 from qwfx.reference.jastrow import evaluate
 
 NUCLEI = np.array([[0.0, 0.0, 0.0], [1.3, -0.4, 0.7], [-0.9, 1.6, 0.2]])
+
+
+WITH_CUTOFF = [kind for kind in KINDS if kind[0] in ("cutoff-polynomial", "bspline")]
 
 
 def wavefunction(terms: dict[str, JastrowTerm], n_up: int, n_down: int, cell: Cell | None = None) -> Wavefunction:
@@ -26,40 +30,101 @@ def wavefunction(terms: dict[str, JastrowTerm], n_up: int, n_down: int, cell: Ce
     seed=st.integers(0, 2**32 - 1), kinds=st.lists(st.sampled_from(KINDS), min_size=1, max_size=4),
     n_up=st.integers(0, 5), n_down=st.integers(0, 5), spread=st.sampled_from([0.7, 2.0, 5.0]),
 )  # fmt: skip
-def test_equals_the_formulas(
-    seed: int, kinds: list[tuple[str, str]], n_up: int, n_down: int, spread: float
-) -> None:
+def test_equals_the_formulas(seed: int, kinds: list[tuple[str, str]], n_up: int, n_down: int, spread: float) -> None:
     rng = np.random.default_rng(seed)
     terms = {f"t{k}": random_term(rng, *kind, len(NUCLEI)) for k, kind in enumerate(kinds)}
     electrons = spread * rng.normal(size=(3, n_up + n_down, 3))
     jastrow = Jastrow(wavefunction(terms, n_up, n_down))
-    for mine, told in zip(jastrow.evaluate(electrons), evaluate(terms, n_up, NUCLEI, electrons), strict=True):
-        assert mine.shape == told.shape
-        assert np.allclose(mine, told, rtol=1e-11, atol=1e-11 * np.abs(told).max(initial=1.0))
+    told = evaluate(terms, n_up, NUCLEI, electrons)
+    for mine, other, size in zip(jastrow.evaluate(electrons), told, sizes(terms, n_up, NUCLEI, electrons), strict=True):
+        assert mine.shape == other.shape
+        assert np.all(np.abs(mine - other) <= 1e-12 * size)
 
 
 @settings(deadline=None, max_examples=120)
 @given(
     seed=st.integers(0, 2**32 - 1), kinds=st.lists(st.sampled_from(KINDS), min_size=1, max_size=4),
-    n_up=st.integers(0, 4), n_down=st.integers(0, 4), n_places=st.integers(0, 3), far=st.booleans(),
+    n_up=st.integers(0, 4), n_down=st.integers(0, 4), n_places=st.integers(0, 3), far=st.sampled_from([0.0, 4.0, 90.0]),
 )  # fmt: skip
 def test_a_move_changes_j_by_the_difference(
-    seed: int, kinds: list[tuple[str, str]], n_up: int, n_down: int, n_places: int, far: bool
+    seed: int, kinds: list[tuple[str, str]], n_up: int, n_down: int, n_places: int, far: float
 ) -> None:
     rng = np.random.default_rng(seed)
     terms = {f"t{k}": random_term(rng, *kind, len(NUCLEI)) for k, kind in enumerate(kinds)}
     n = n_up + n_down
-    electrons, places = 1.5 * rng.normal(size=(2, n, 3)), 1.5 * rng.normal(size=(2, n_places, 3)) + 9 * far
+    electrons, places = 1.5 * rng.normal(size=(2, n, 3)), 1.5 * rng.normal(size=(2, n_places, 3)) + far
     jastrow = Jastrow(wavefunction(terms, n_up, n_down))
-    before = jastrow.evaluate(electrons)[0]
+    before, size = evaluate(terms, n_up, NUCLEI, electrons)[0], sizes(terms, n_up, NUCLEI, electrons)[0]
     for which in range(n):
         change = jastrow.change(electrons, which, places)
         assert change.shape == (2, n_places)
         for k in range(n_places):
             moved = electrons.copy()
             moved[:, which] = places[:, k]
-            after = jastrow.evaluate(moved)[0]
-            assert np.allclose(change[:, k], after - before, rtol=0, atol=1e-11 * (1 + np.abs(before) + np.abs(after)))
+            after = evaluate(terms, n_up, NUCLEI, moved)[0]
+            allowed = 1e-12 * (size + sizes(terms, n_up, NUCLEI, moved)[0])
+            assert np.all(np.abs(change[:, k] - (after - before)) <= allowed)
+
+
+def cluster(rng: np.random.Generator, kinds: list[tuple[str, str]], n_up: int, n_down: int) -> Jastrow:
+    """A factor of electrons and nuclei spread over more than its cutoffs."""
+    nuclei = 12 * rng.random((40, 3))
+    labels = tuple(f"A{i}" for i in range(len(nuclei)))
+    system = System(n_up, n_down, labels, np.ones(40, "i4"), np.ones(40), nuclei)
+    terms = {f"t{k}": random_term(rng, *kind, len(nuclei), every=True) for k, kind in enumerate(kinds)}
+    return Jastrow(Wavefunction(system, jastrow=terms))
+
+
+@settings(deadline=None, max_examples=60)
+@given(
+    seed=st.integers(0, 2**32 - 1),
+    kinds=st.lists(st.sampled_from(WITH_CUTOFF), min_size=1, max_size=3),
+    n_up=st.integers(1, 150), n_down=st.integers(0, 150), long=st.booleans(),
+)  # fmt: skip
+def test_moves_among_many(seed: int, kinds: list[tuple[str, str]], n_up: int, n_down: int, long: bool) -> None:
+    """What is out of reach is left out of moves, not of evaluations, which know no lists."""
+    rng = np.random.default_rng(seed)
+    jastrow = cluster(rng, kinds, n_up, n_down)
+    electrons = 12 * rng.random((2, n_up + n_down, 3))
+    which = int(rng.integers(n_up + n_down))
+    places = 12 * rng.random((2, 3, 3)) if long else electrons[:, which, None] + 0.4 * rng.normal(size=(2, 3, 3))
+    change = jastrow.change(electrons, which, places)
+    before = jastrow.evaluate(electrons)[0]
+    for k in range(3):
+        moved = electrons.copy()
+        moved[:, which] = places[:, k]
+        after = jastrow.evaluate(moved)[0]
+        assert np.allclose(change[:, k], after - before, rtol=1e-12, atol=1e-12 * (n_up + n_down) ** 2)
+
+
+@pytest.mark.parametrize("kind", KINDS)
+def test_no_number_stays_none(kind: tuple[str, str]) -> None:
+    """An electron at no place makes J no number, and moves from or to it, or near it, too: not 0, and no exception."""
+    nan = float("nan")
+    rng = np.random.default_rng(4)
+    jastrow = cluster(rng, [kind], 20, 15)
+    electrons, places = 12 * rng.random((1, 35, 3)), 12 * rng.random((1, 2, 3))
+    lost = electrons.copy()
+    lost[0, 17, 1] = nan
+    assert np.isnan(jastrow.evaluate(lost)[0]).all()
+    assert np.isnan(jastrow.change(lost, 17, places)).all()
+    to_nowhere = places.copy()
+    to_nowhere[0, 1, 2] = nan
+    change = jastrow.change(electrons, 17, to_nowhere)[0]
+    assert np.isnan(change[1])
+    assert change[0] == pytest.approx(jastrow.change(electrons, 17, places)[0, 0], rel=1e-12, abs=1e-13)
+    if kind[1] != "electron-nucleus":  # there an electron does not see the others
+        assert np.isnan(jastrow.change(lost, 3, places)).all()
+
+
+def test_rows_that_are_not_in_one_piece() -> None:
+    rng = np.random.default_rng(5)
+    jastrow = cluster(rng, [("cutoff-polynomial", "electron-electron"), ("bspline", "electron-nucleus")], 20, 15)
+    electrons, places = 12 * rng.random((2, 35, 3)), 12 * rng.random((2, 2, 3))
+    told = jastrow.change(electrons, 4, places)
+    assert np.abs(told).min() > 0
+    assert np.array_equal(jastrow.change_in_rows(electrons.transpose(0, 2, 1), 4, places), told)
+    assert np.array_equal(jastrow.change(np.asfortranarray(electrons), 4, np.asfortranarray(places)), told)
 
 
 def test_slopes_at_coalescence() -> None:
