@@ -122,7 +122,9 @@ def summarise(wavefunction: Wavefunction, path: Path | None = None) -> list[tupl
     if w.witness is not None:
         independent = "independent of qwfx" if w.witness.independent else "not independent of qwfx"
         evaluator = f"{w.witness.evaluator} {w.witness.evaluator_version}"
-        lines.append(("witness", f"{len(w.witness.points)} points by {evaluator}, {independent}"))
+        whole = w.witness.configurations
+        places = f"{len(w.witness.points)} points" + (f", {len(whole.positions)} configurations" if whole else "")
+        lines.append(("witness", f"{places} by {evaluator}, {independent}"))
     for step in w.provenance.steps[-3:]:
         lines.append(("made by", f"{step.get('activity', '?')}, {step.get('agent', '?')}, {step.get('time', '?')}"))
     lines += [("extension", f"{name} (carried along, not interpreted)") for name in w.extensions]

@@ -11,11 +11,12 @@ import numpy as np
 from numpy.typing import NDArray
 
 from qwfx._version import __version__
+from qwfx.converters.configurations import configurations_by_sum
 from qwfx.converters.determinant import bit_string, single_determinant
 from qwfx.converters.pyscf.from_mole import basis_of, check_molecule, function_order, potentials_of, system_of
 from qwfx.converters.witness import orbitals_by_pyscf, witness_points
 from qwfx.errors import ConversionError
-from qwfx.model import Energies, Expansion, OrbitalSet, Provenance, Spin, Wavefunction, Witness
+from qwfx.model import Energies, Expansion, OrbitalSet, Provenance, Spin, System, Wavefunction, Witness
 
 __all__ = ["Parts", "assemble", "bit_string", "energies_table", "per_spin", "provenance_step", "single_determinant"]
 
@@ -93,6 +94,7 @@ def assemble(
         expansion = single_determinant(orbitals, system.n_up, system.n_down)
     if orbitals and expansion is None and parts.occupations is not None:
         parts.notes.append("the occupations are not those of a single determinant, so no expansion is written")
+    proof = _witness(parts, system, expansion, potentials is None) if witness and orbitals else None
     return Wavefunction(
         system=system,
         potentials=potentials,
@@ -100,7 +102,7 @@ def assemble(
         orbitals=orbitals,
         expansion=expansion,
         energies=energies_table(parts.method, parts.totals, float(parts.mol.energy_nuc())),
-        witness=_witness(parts) if witness and orbitals else None,
+        witness=proof,
         provenance=Provenance(steps=(provenance_step(activity, used, parts.notes),)),
     )
 
@@ -178,9 +180,20 @@ def _irreps(parts: Parts, coefficients: NDArray[Any]) -> tuple[str, ...] | None:
     return tuple(str(label) for label in labels)
 
 
-def _witness(parts: Parts) -> Witness:
+def _witness(parts: Parts, system: System, expansion: Expansion | None, coulomb_alone: bool) -> Witness:
     import pyscf
 
+    places = {name: index for index, (name, _) in enumerate(parts.sets)}
+
+    def orbitals(name: str, points: NDArray[np.float64]) -> NDArray[Any]:
+        seen = orbitals_by_pyscf(parts.mol, parts.coefficients[places[name]], points)
+        return np.concatenate([seen.values[None], np.moveaxis(seen.gradients, -1, 0), seen.laplacians[None]])
+
+    configurations = None
+    if expansion is not None:
+        configurations = configurations_by_sum(system, expansion, orbitals, with_energies=coulomb_alone)
+        if configurations is None:
+            parts.notes.append("the expansion is too long for a witness at whole configurations of electrons")
     points = witness_points(parts.mol.atom_coords())
     return Witness(
         evaluator="pyscf",
@@ -191,4 +204,5 @@ def _witness(parts: Parts) -> Witness:
             name: orbitals_by_pyscf(parts.mol, coefficients, points)
             for (name, _), coefficients in zip(parts.sets, parts.coefficients, strict=True)
         },
+        configurations=configurations,
     )
