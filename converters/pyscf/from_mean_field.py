@@ -22,6 +22,7 @@ def from_pyscf(
     method: str | None = None,
     witness: bool = True,
     hamiltonian: bool = False,
+    ci_threshold: float = 0.0,
     used: tuple[dict[str, str], ...] = (),
 ) -> Wavefunction:
     """The wave function of a PySCF calculation, with a witness evaluated by PySCF.
@@ -35,6 +36,7 @@ def from_pyscf(
     method : text of the method, where the object does not tell (see `methods`).
     witness : whether to evaluate the witness.
     hamiltonian : whether to add the second-quantised Hamiltonian over these orbitals.
+    ci_threshold : CI coefficients of a smaller magnitude in every state are left out; their weight is stored.
     used : entities for the provenance, such as the file that the object came from.
 
     Returns
@@ -52,7 +54,7 @@ def from_pyscf(
     if isinstance(calculation, MoleBase):
         parts = Parts(calculation, [], method=method)
     elif is_active_space(calculation):
-        parts = active_space_parts(calculation)
+        parts = active_space_parts(calculation, ci_threshold)
     else:
         parts = _mean_field_parts(calculation)
     if not parts.mol._built:
