@@ -83,10 +83,16 @@ def recognise(path: Path) -> Converter:
             "the file is empty", where=str(path), expected="a wave function", remedy="check how it was made"
         )
     found, failed = _load()
-    names = [name for name, converter in found.items() if converter.recognises(path, head)]
+    names = []
+    for name, converter in found.items():
+        try:
+            if converter.recognises(path, head):
+                names.append(name)
+        except Exception as error:  # of a plug-in that fails the others must not suffer
+            failed = {**failed, name: f"{type(error).__name__}: {error}"}
     if len(names) == 1:
         return found[names[0]]
-    unloaded = f" (not loaded: {', '.join(failed)})" if failed else ""
+    unloaded = f" (converters that failed: {', '.join(failed)})" if failed else ""
     if names:
         raise ConversionError(
             f"more than one format fits the content: {', '.join(names)}",

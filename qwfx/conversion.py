@@ -2,13 +2,20 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
-from dataclasses import dataclass
+import hashlib
+from collections.abc import Iterator, Mapping
+from contextlib import contextmanager
+from dataclasses import dataclass, replace
+from datetime import datetime, timezone
 from pathlib import Path
 
-from qwfx.converters.plugin import Progress, Reading, Writing
+import numpy as np
+
+from qwfx._version import __version__
+from qwfx.converters.plugin import Converter, Progress, Reading, Writing
 from qwfx.converters.registry import by_name, check_options, for_target, recognise
-from qwfx.errors import FileError, UnsupportedError
+from qwfx.errors import ConversionError, FileError, QwfxError, UnsupportedError
+from qwfx.model import Provenance, Wavefunction
 
 __all__ = ["Conversion", "convert", "format_of", "read_any", "target_of", "write_any"]
 
@@ -79,7 +86,63 @@ def read_any(
         return source, Reading(load(path))
     converter = by_name(source)
     check_options(converter, options or {})
-    return source, converter.read(path, options or {}, progress)
+    with _faults_of(converter, path):
+        reading = converter.read(path, options or {}, progress)
+    _check_model(reading.wavefunction, path, source)
+    return source, replace(reading, wavefunction=_with_origin(reading, path, source))
+
+
+@contextmanager
+def _faults_of(converter: Converter, path: Path) -> Iterator[None]:
+    """Name the plug-in whose code fails, where it is not qwfx's own."""
+    try:
+        yield
+    except (QwfxError, MemoryError):
+        raise
+    except Exception as error:
+        if type(converter).__module__.startswith("qwfx."):
+            raise
+        raise ConversionError(
+            f"the converter {converter.name!r} ({type(converter).__module__}) failed: {type(error).__name__}: {error}",
+            where=str(path),
+            expected="a converter that says what is wrong with a file",
+            remedy="report it to those who made the converter",
+        ) from error
+
+
+def _check_model(wavefunction: Wavefunction, path: Path, converter: str) -> None:
+    """Raise ConversionError where a converter made orbitals that are not over its own basis."""
+    if wavefunction.basis is None:
+        return
+    for name, orbitals in wavefunction.orbitals.items():
+        shape, n = np.shape(orbitals.coefficients), wavefunction.basis.n_functions
+        if len(shape) != 2 or shape[1] != n:
+            raise ConversionError(
+                f"the converter {converter!r} made orbitals {name!r} of shape {shape}",
+                where=str(path),
+                expected=f"(orbitals, {n}): a coefficient for each function of its basis",
+                remedy="report it to those who made the converter",
+            )
+
+
+def _with_origin(reading: Reading, path: Path, converter: str) -> Wavefunction:
+    """The model with a step that says what it was read from, if its converter has not said so."""
+    wavefunction = reading.wavefunction
+    if wavefunction.provenance.steps:
+        return wavefunction
+    digest = hashlib.sha256()
+    with open(path, "rb") as stream:
+        while piece := stream.read(1 << 20):
+            digest.update(piece)
+    step = {
+        "activity": f"read by the converter {converter}",
+        "agent": f"qwfx {__version__}",
+        "time": datetime.now(timezone.utc).isoformat(timespec="seconds"),
+        "used": [{"entity": path.name, "sha256": digest.hexdigest()}],
+        "generated": [],
+        "notes": list(reading.notes),
+    }
+    return replace(wavefunction, provenance=Provenance((step,)))
 
 
 def write_any(
@@ -107,7 +170,8 @@ def write_any(
         return target, Writing()
     converter = by_name(target)
     check_options(converter, options or {})
-    return target, converter.write(reading.wavefunction, path, options or {}, progress)
+    with _faults_of(converter, path):
+        return target, converter.write(reading.wavefunction, path, options or {}, progress)
 
 
 def convert(

@@ -14,6 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from qwfx.converters.plugin import Option, Progress, Reading, Writing
+from qwfx.converters.pyscf.checkpoint_ci import expansion_of_checkpoint
 from qwfx.converters.pyscf.checkpoint_mole import molecule_from_text
 from qwfx.converters.pyscf.describe import ORBITAL_QUANTITIES
 from qwfx.converters.pyscf.energies import energy
@@ -50,6 +51,7 @@ class CheckpointConverter:
         Option(
             "part", "which orbitals of a checkpoint that has both; the default is mcscf if there", ("scf", "mcscf")
         ),
+        Option("ci-threshold", "CI coefficients of a smaller magnitude in every state are left out; the default is 0"),
         Option("hamiltonian", "whether to add the integrals over the orbitals; the default is no", ("yes", "no")),
     )
 
@@ -81,8 +83,9 @@ class CheckpointConverter:
                 expected="orbitals of a mean-field calculation ('scf') or of CASSCF ('mcscf')",
                 remedy=_REMEDY,
             )
+        threshold = _threshold(options)
         try:
-            parts = _mcscf_parts(mol, content, where) if part == "mcscf" else _scf_parts(mol, content, where)
+            parts = _mcscf_parts(mol, content, where, threshold) if part == "mcscf" else _scf_parts(mol, content, where)
             report("orbitals and witness", 0.3)
             wavefunction = assemble(parts, activity="read from a PySCF checkpoint", witness=True, used=used)
         except (ConversionError, UnsupportedError) as error:
@@ -200,7 +203,7 @@ def _scf_parts(mol: Any, content: dict[str, Any], where: str) -> Parts:
     )
 
 
-def _mcscf_parts(mol: Any, content: dict[str, Any], where: str) -> Parts:
+def _mcscf_parts(mol: Any, content: dict[str, Any], where: str, threshold: float = 0.0) -> Parts:
     """Natural orbitals of an active-space calculation: PySCF's, or made from its density matrix."""
     coefficients = per_spin(_array(content, "mo_coeff", where), 2)
     n_core, n_active = (np.asarray(_array(content, key, where)) for key in ("ncore", "ncas"))
@@ -237,7 +240,32 @@ def _mcscf_parts(mol: Any, content: dict[str, Any], where: str) -> Parts:
         parts.notes.append("the active orbitals are not natural orbitals: each occupation is an expectation value")
     if parts.occupations is None:
         parts.notes.append("the checkpoint has no occupations of its active orbitals")
+    if parts.coefficients[0] is coefficients[0]:  # CI vectors are over these, not over orbitals made of them
+        parts.expansion = expansion_of_checkpoint(content, core, active, n_orbitals, threshold, parts.notes)
+        if parts.expansion is not None:
+            up, down = np.asarray(content["nelecas"]).ravel().tolist()
+            parts.electrons = (core + int(up), core + int(down))
+            states = len(np.asarray(parts.expansion.coefficients))
+            energies = _numbers(content, "e_states") or _numbers(content, "e_tot")
+            if states > 1:
+                parts.method = f"CASSCF({electrons},{active}) state average"
+            if len(energies) != states:
+                parts.notes.append(f"the checkpoint has {len(energies)} energies for {states} states")
     return parts
+
+
+def _threshold(options: Mapping[str, str]) -> float:
+    text = options.get("ci-threshold", "0")
+    try:
+        value = float(text)
+    except ValueError:
+        value = -1.0
+    if not 0 <= value < 1:
+        raise ConversionError(
+            f"ci-threshold is {text!r}", where=f"--set ci-threshold={text}", expected="a number from 0 to 1",
+            remedy="such as 1e-6",
+        )  # fmt: skip
+    return value
 
 
 def _off_diagonal(density: NDArray[Any]) -> float:

@@ -7,7 +7,7 @@ carry over as they are.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
@@ -45,8 +45,6 @@ def with_ci_vectors(
     The set of each spin is ``spatial``, or ``up`` and ``down``. The electrons of the system must be those of core and
     active space.
     """
-    from dataclasses import replace
-
     sets = ("spatial", "spatial") if "spatial" in wavefunction.orbitals else ("up", "down")
     n_orbitals = tuple(wavefunction.orbitals[name].n_orbitals for name in sets)
     whole = (n_core + electrons[0], n_core + electrons[1])
@@ -114,11 +112,9 @@ def expansion_from_ci(
         _occupied(own[index], count, n_core)
         for own, index, count in ((every[0], up, electrons[0]), (every[1], down, electrons[1]))
     ]
-    expansion = expansion_of(occupied[0], occupied[1], table[:, kept], n_orbitals, sets)
-    return Expansion(*(getattr(expansion, name) for name in MEMBERS), discarded_weight=discarded)
-
-
-MEMBERS = ("up_set", "down_set", "up_strings", "down_strings", "row_start", "columns", "coefficients")
+    return replace(
+        expansion_of(occupied[0], occupied[1], table[:, kept], n_orbitals, sets), discarded_weight=discarded
+    )
 
 
 def _strings_of(vector: Any, told: Any, n_active: int, electrons: tuple[int, int]) -> tuple[Ints, Ints]:

@@ -46,8 +46,9 @@ def command(first: Path, second: Path, absolute: float, relative: float, everyth
             size = f", largest difference {d.largest:.3g}" if d.largest is not None else ""
             click.echo(f"  {d.n_different} element{'s' if d.n_different > 1 else ''} differ{size}")
     verdict = "different" if result.differences else "same"
+    noun = "difference" if len(result.differences) == 1 else "differences"
     click.echo(
-        f"{verdict}: {len(result.differences)} differences; {result.n_same} members agree, "
+        f"{verdict}: {len(result.differences)} {noun}; {result.n_same} members agree, "
         f"{result.n_identical} of them to the bit"
         + (f"; not compared: {', '.join(result.left_out)} (--everything compares them)" if result.left_out else "")
     )

@@ -12,7 +12,7 @@ __all__ = ["command"]
 @click.command("explain")
 @click.argument("rule", required=False)
 def command(rule: str | None) -> None:
-    """Print the page of RULE: what it checks, why it matters, an example that fails and the same one mended.
+    """Print the page of RULE: what it checks, why it matters, an example that fails and a near one that passes.
 
     Without RULE, list the rules.
     """

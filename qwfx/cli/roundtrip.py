@@ -80,7 +80,7 @@ def _print_text(result: RoundTrip, verbose: bool) -> None:
         for name, size in result.integrals.items():
             click.echo(f"  {name:24} {size:9.1e}")
     for name, size in result.witness.items():
-        click.echo(f"\nwitness of {name}: qwfx and the source's own evaluator differ by at most {size:.1e} (relative)")
+        click.echo(f"\nwitness of {name}: qwfx and the witness's evaluator differ by at most {size:.1e} (relative)")
     for part in result.missing:
         click.echo(f"did not come back: {part}")
     verdict = "the same" if result.same else "DIFFERENT"

@@ -72,7 +72,7 @@ class RoundTrip:
     integrals: Mapping[str, float]
     """Part of the Hamiltonian -> largest difference, hartree; empty without a Hamiltonian."""
     witness: Mapping[str, float]
-    """Orbital set -> largest relative difference between qwfx and the source's own evaluator at the witness points."""
+    """Orbital set -> largest relative difference between qwfx and the witness's evaluator at the witness points."""
     missing: tuple[str, ...]
     """Parts of the source that did not come back."""
     notes: tuple[str, ...]

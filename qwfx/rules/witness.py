@@ -43,7 +43,7 @@ def witness_presence(file: Inspection) -> Iterator[Remark]:
             "/witness",
             "values of the orbitals by the program that produced them",
             "none",
-            "convert anew from the source with qwfx, or let the producer write them: without a witness no reader "
+            "convert anew with a converter that writes them, or let the producer do so: without a witness no reader "
             "can tell that it reads the orbitals as they were meant",
         )
     elif not int(file.attribute("/witness", "independent", 0)):
