@@ -75,7 +75,7 @@ def test_orbitals_over_another_basis_are_refused(tides: Tides, file: Path, tmp_p
 
 def test_a_plug_in_that_fails_is_named(tides: Tides, file: Path, tmp_path: Path) -> None:
     tides.fault = ValueError("low water")
-    with pytest.raises(ConversionError, match="the converter 'tides' .* failed: ValueError: low water"):
+    with pytest.raises(ConversionError, match=r"the converter 'tides' .* failed: ValueError: low water"):
         read_any(file)
     tides.fault = None
     with pytest.raises(ConversionError, match="failed: KeyError"):

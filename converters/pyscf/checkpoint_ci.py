@@ -27,7 +27,7 @@ def expansion_of_checkpoint(
     from pyscf import fci
 
     if "ci" not in content:
-        notes.append("the checkpoint has no CI vectors (mc.chk_ci = True makes PySCF write them): no expansion is written")
+        notes.append("the checkpoint has no CI vectors (PySCF writes them with mc.chk_ci = True): no expansion")
         return None
     electrons = np.asarray(content.get("nelecas", ())).ravel()
     vectors = np.asarray(content["ci"])

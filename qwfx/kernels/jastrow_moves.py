@@ -22,7 +22,7 @@ BLOCK = 512
 """Distances at a time: they and what is made of them stay in the fastest cache."""
 FAR = 1e100
 """A longer cutoff is none; its square is a number."""
-GROUP = 32
+GROUP = 16
 """Lists are filled up to multiples of this with points out of reach, so that loops over them have no remainder."""
 
 
@@ -71,21 +71,31 @@ def _within(x: Any, y: Any, z: Any, here: Any, radius: float, but: int, away: fl
 
 @njit(**LEAN)  # type: ignore[untyped-decorator]
 def _triples(
-    p: Any, gamma: Any, nucleus: Any, partners: Any, n: int, at: Any, inside: Any, c: Any, other: Any, sums: Any
+    p: Any,
+    gamma: Any,
+    n_n: int,
+    nucleus: Any,
+    partners: Any,
+    n: int,
+    at: Any,
+    inside: Any,
+    c: Any,
+    other: Any,
+    sums: Any,
 ) -> None:
     """Add f to sums[q] for electrons at at[q] where inside[q], a nucleus, and partners[:, :n] within its cutoff."""
-    n_l, n_m, n_n = gamma.shape
+    n_l, n_mn = gamma.shape
+    n_m = n_mn // n_n
     for q in range(len(at)):
         if inside[q]:
             dx, dy, dz = at[q, 0] - nucleus[0], at[q, 1] - nucleus[1], at[q, 2] - nucleus[2]
             outer_values(p, np.sqrt(dx * dx + dy * dy + dz * dz), other)
-            for m in range(n_m):
-                for k in range(n_n):
-                    c[q, m, k] = 0.0
-            for l in range(n_l):
-                for m in range(n_m):
-                    for k in range(n_n):
-                        c[q, m, k] += gamma[l, m, k] * other[l]
+            sum_l = c[q]
+            for mn in range(n_mn):
+                sum_l[mn] = gamma[0, mn] * other[0]
+            for l in range(1, n_l):
+                for mn in range(n_mn):
+                    sum_l[mn] += gamma[l, mn] * other[l]
     for j in range(n):
         x, y, z = partners[0, j], partners[1, j], partners[2, j]
         dx, dy, dz = x - nucleus[0], y - nucleus[1], z - nucleus[2]
@@ -100,7 +110,7 @@ def _triples(
                 for m in range(n_m):
                     s = 0.0
                     for k in range(n_n - 1, -1, -1):
-                        s = s * d + c[q, m, k]
+                        s = s * d + c[q, m * n_n + k]
                     f += s * other[m]
                 sums[q] += f
 
@@ -113,7 +123,7 @@ def _change(
 ) -> None:  # fmt: skip
     n_places, n = places.shape[1], rows.shape[2]
     ids, lengths, firsts, nuclei = nuclear
-    heads, shapes, gamma_starts, gammas, sides, centre_starts, centres = three
+    heads, shapes, gamma_starts, gammas, sides, again, centre_starts, centres = three
     begin, end, filled = bounds[0], bounds[1], bounds[2]
     for w in range(len(rows)):
         x = rows[w]
@@ -129,7 +139,7 @@ def _change(
         step = step if total < np.inf else np.inf  # NaN included: then nothing is left out
         for q in range(n_places + 1):
             sums[q] = 0.0
-        for side in range(2):
+        for side in range(2 if reach > 0.0 else 0):
             first, last = (0, n_up) if side == 0 else (n_up, n)
             begin[side] = 0 if side == 0 else filled[0]
             end[side], filled[side] = _within(
@@ -149,10 +159,11 @@ def _change(
                 sums[q] += _sum_over(functions, ids[t : t + 1], some[0, :m], some[1, :m], some[2, :m], at[q], scratch)
         for t in range(len(heads)):
             p, side = heads[t], sides[t]
-            gamma = gammas[gamma_starts[t] : gamma_starts[t + 1]].reshape((shapes[t, 0], shapes[t, 1], shapes[t, 2]))
+            gamma = gammas[gamma_starts[t] : gamma_starts[t + 1]].reshape((shapes[t, 0], shapes[t, 1] * shapes[t, 2]))
             a, b, square = centre_starts[t], centre_starts[t + 1], p[0] * p[0]
             x0, x1 = begin[side], end[side]
-            m, _ = _within(centres[0, a:b], centres[1, a:b], centres[2, a:b], here, p[0] + step, -1, 0.0, some, 0)
+            if t == 0 or not again[t]:
+                m, _ = _within(centres[0, a:b], centres[1, a:b], centres[2, a:b], here, p[0] + step, -1, 0.0, some, 0)
             for k in range(m):
                 nucleus = (some[0, k], some[1, k], some[2, k])
                 anywhere = False
@@ -162,7 +173,7 @@ def _change(
                     anywhere = anywhere or inside[q]
                 if anywhere:
                     found = select(near[0, x0:x1], near[1, x0:x1], near[2, x0:x1], nucleus, square, -1, close, 0)
-                    _triples(p, gamma, nucleus, close, found, at, inside, c, other, sums)
+                    _triples(p, gamma, shapes[t, 2], nucleus, close, found, at, inside, c, other, sums)
         for q in range(n_places):
             out[w, q] += sums[q + 1] - sums[0]
 
@@ -178,16 +189,17 @@ def change(
     partners : numbers of the functions for pairs with an up and with a down electron.
     nuclear : numbers of the functions for nuclei, where they end, where their nuclei start, and the nuclei (3, .).
     three : of three-body terms the parameters (T, 4), shapes of gamma (T, 3), where gamma starts, gamma with the
-        powers of the moved electron first, the spin of the other electron, where the nuclei start, and the nuclei.
-    reach : longest distance of another electron that a term can see; infinite without a cutoff.
+        powers of the moved electron first, the spin of the other electron, whether nuclei and cutoff are those of the
+        one before, where the nuclei start, and the nuclei.
+    reach : longest distance of another electron that a term can see; infinite without a cutoff, 0 without such terms.
     """
     n_places, n = places.shape[1], rows.shape[2]
-    most = max(nuclear[3].shape[1], three[6].shape[1])
+    most = max(nuclear[3].shape[1], three[7].shape[1])
     shapes = three[1]
     longest = shapes.max() if len(shapes) else 0
     _change(
         functions, partners, nuclear, three, reach, n_up, rows, which, places, out,
         np.empty((3, n + 2 * GROUP)), np.empty((3, n + GROUP)), np.empty((3, most + GROUP)), np.empty((3, BLOCK)),
         np.empty((n_places + 1, 3)), np.empty(n_places + 1), np.empty(n_places + 1, np.bool_),
-        np.empty((n_places + 1, longest, longest)), np.empty(longest), np.zeros((3, 2), np.int64),
+        np.empty((n_places + 1, longest * longest)), np.empty(longest), np.zeros((3, 2), np.int64),
     )  # fmt: skip
