@@ -17,7 +17,8 @@ The bounds count what J before and after a move consists of, with nothing else t
 All pairs: every other electron and every atom, once from the old and once from the new place, is a near point, as if
 there were no cutoff. By cutoffs: those are near points that are within the cutoff, all others are far. In both, for
 each atom within the three-body cutoff of either place, the others of all electrons are far points once, and those
-within that cutoff of the atom too make triples.
+within that cutoff of the atom too make triples. A move can be faster than both: who is far from the old place by more
+than the step and the cutoff is far from the new one too, and is looked at once.
 
 What the machine can do is measured in the same run: these operations on as many numbers that lie in the fastest cache,
 in loops that the compiler turns into vector instructions.

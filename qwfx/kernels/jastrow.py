@@ -240,7 +240,6 @@ class Jastrow:
                 np.cumsum([0, *(gamma.size for _, gamma, *_ in three)]),
                 np.concatenate([np.zeros(0), *(gamma.ravel() for _, gamma, *_ in three)]),
                 np.array([side for *_, side, _ in three], dtype=np.int64),
-                np.array([k > 0 and _same_centres(three[k - 1], one) for k, one in enumerate(three)], dtype=np.bool_),
                 *_joined([nuclei for *_, nuclei in three]),
             ),
             float(max(reach, default=0.0)),
@@ -259,11 +258,6 @@ class Jastrow:
 def _joined(parts: list[NDArray[np.float64]]) -> tuple[NDArray[np.int64], NDArray[np.float64]]:
     """Where each of some arrays (3, .) starts in the whole, and the whole."""
     return np.cumsum([0, *(part.shape[1] for part in parts)]), np.concatenate([np.zeros((3, 0)), *parts], axis=1)
-
-
-def _same_centres(one: tuple[Any, ...], two: tuple[Any, ...]) -> bool:
-    """Whether two parts of a plan, of three bodies, have the same cutoff and the same nuclei."""
-    return bool(one[0][0] == two[0][0]) and np.array_equal(one[-1], two[-1])
 
 
 def _spins(channel: str) -> tuple[int, int]:

@@ -123,7 +123,7 @@ def _change(
 ) -> None:  # fmt: skip
     n_places, n = places.shape[1], rows.shape[2]
     ids, lengths, firsts, nuclei = nuclear
-    heads, shapes, gamma_starts, gammas, sides, again, centre_starts, centres = three
+    heads, shapes, gamma_starts, gammas, sides, centre_starts, centres = three
     begin, end, filled = bounds[0], bounds[1], bounds[2]
     for w in range(len(rows)):
         x = rows[w]
@@ -162,8 +162,7 @@ def _change(
             gamma = gammas[gamma_starts[t] : gamma_starts[t + 1]].reshape((shapes[t, 0], shapes[t, 1] * shapes[t, 2]))
             a, b, square = centre_starts[t], centre_starts[t + 1], p[0] * p[0]
             x0, x1 = begin[side], end[side]
-            if t == 0 or not again[t]:
-                m, _ = _within(centres[0, a:b], centres[1, a:b], centres[2, a:b], here, p[0] + step, -1, 0.0, some, 0)
+            m, _ = _within(centres[0, a:b], centres[1, a:b], centres[2, a:b], here, p[0] + step, -1, 0.0, some, 0)
             for k in range(m):
                 nucleus = (some[0, k], some[1, k], some[2, k])
                 anywhere = False
@@ -189,12 +188,11 @@ def change(
     partners : numbers of the functions for pairs with an up and with a down electron.
     nuclear : numbers of the functions for nuclei, where they end, where their nuclei start, and the nuclei (3, .).
     three : of three-body terms the parameters (T, 4), shapes of gamma (T, 3), where gamma starts, gamma with the
-        powers of the moved electron first, the spin of the other electron, whether nuclei and cutoff are those of the
-        one before, where the nuclei start, and the nuclei.
+        powers of the moved electron first, the spin of the other electron, where the nuclei start, and the nuclei.
     reach : longest distance of another electron that a term can see; infinite without a cutoff, 0 without such terms.
     """
     n_places, n = places.shape[1], rows.shape[2]
-    most = max(nuclear[3].shape[1], three[7].shape[1])
+    most = max(nuclear[3].shape[1], three[6].shape[1])
     shapes = three[1]
     longest = shapes.max() if len(shapes) else 0
     _change(
