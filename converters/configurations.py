@@ -1,7 +1,7 @@
 """D at whole configurations of electrons for the witness: the source's orbitals, LAPACK, and an explicit sum.
 
 No code of qwfx's evaluators takes part: every determinant is factorised on its own, and its derivatives come from its
-inverse, not from a table or from rows put in their place.
+adjugate, not from a table or from rows put in their place.
 """
 
 from __future__ import annotations
@@ -17,9 +17,15 @@ from qwfx.model import Expansion, System, WitnessConfigurations
 __all__ = ["MANY_ENTRIES", "configurations_by_sum", "electrons_at_atoms"]
 
 N_CONFIGURATIONS = 8
+ATTEMPTS = 32
+"""Configurations that are tried: those where D vanishes prove nothing."""
 MANY_ENTRIES = 20_000
 OPERATIONS = 2e10
 """Above, there are no configurations in the witness, and a note says so."""
+BLOCK = 1 << 22
+"""Elements of the matrices that are factorised together."""
+WIDEST = 1.2
+"""Bohr: spread of an electron about its nucleus; the narrowest is that of the innermost shell, 1/Z."""
 SEED = 20_260_401
 
 Orbitals = Callable[[str, NDArray[np.float64]], NDArray[Any]]
@@ -27,18 +33,20 @@ Orbitals = Callable[[str, NDArray[np.float64]], NDArray[Any]]
 
 
 def electrons_at_atoms(system: System, n: int = N_CONFIGURATIONS, seed: int = SEED) -> NDArray[np.float64]:
-    """(n, N, 3) electrons scattered about the atoms by their charges, off every symmetry plane."""
+    """(n, N, 3) electrons scattered about the atoms by their charges, in all shells, off every symmetry plane."""
     rng = np.random.default_rng(seed)
     charges = np.maximum(np.asarray(system.effective_charges, dtype=np.float64), 0.0)
     share = charges / charges.sum() if charges.sum() > 0 else np.full(len(charges), 1 / len(charges))
     host = rng.choice(len(share), size=(n, system.n_electrons), p=share)
-    return np.asarray(system.positions)[host] + rng.normal(scale=0.9, size=(n, system.n_electrons, 3))
+    narrowest = np.minimum(1.0 / np.maximum(charges, 1.0), WIDEST)[host]
+    spread = narrowest * (WIDEST / narrowest) ** rng.random(host.shape)
+    return np.asarray(system.positions)[host] + spread[:, :, None] * rng.normal(size=(*host.shape, 3))
 
 
 def configurations_by_sum(
     system: System, expansion: Expansion, orbitals: Orbitals, *, with_energies: bool
-) -> WitnessConfigurations | None:
-    """D, its gradients and Laplacian at `N_CONFIGURATIONS` configurations; None if that takes too long.
+) -> tuple[WitnessConfigurations | None, str]:
+    """D, its gradients and Laplacian at `N_CONFIGURATIONS` configurations, or None and the reason.
 
     Parameters
     ----------
@@ -51,26 +59,33 @@ def configurations_by_sum(
     n_entries = coefficients.shape[1]
     sides = [(expansion.up_set, np.asarray(expansion.up_strings), n_up),
              (expansion.down_set, np.asarray(expansion.down_strings), n_down)]  # fmt: skip
-    cost = N_CONFIGURATIONS * sum(len(strings) * 4.0 * n**3 for _, strings, n in sides)
-    if n_entries > MANY_ENTRIES or cost > OPERATIONS or not n_up + n_down:
-        return None
+    cost = N_CONFIGURATIONS * sum(len(strings) * 30.0 * n**3 for _, strings, n in sides)
+    if not n_up + n_down:
+        return None, "there are no electrons"
+    if n_entries > MANY_ENTRIES or cost > OPERATIONS:
+        return None, f"the expansion is too long for it: {n_entries} determinants"
     rows = np.repeat(np.arange(len(offsets) - 1), np.diff(offsets))
     occupied = [_occupied(strings, n) for _, strings, n in sides]
-    positions = electrons_at_atoms(system)
-    found = []
-    for electrons in positions:
+    places, found = [], []
+    for electrons in electrons_at_atoms(system, ATTEMPTS):
         parts = []
-        for (name, _, n), own, places in zip(sides, occupied, (electrons[:n_up], electrons[n_up:]), strict=True):
-            parts.append(_strings(orbitals(name, places) if n else np.zeros((5, 0, 0)), own))
-        found.append(_sum(coefficients, rows, columns, parts[0], parts[1]))
+        for (name, _, n), own, seats in zip(sides, occupied, (electrons[:n_up], electrons[n_up:]), strict=True):
+            parts.append(_strings(orbitals(name, seats) if n else np.zeros((5, 0, 0)), own))
+        values = _sum(coefficients, rows, columns, parts[0], parts[1])
+        if all(np.isfinite(part).all() for part in values):
+            places.append(electrons)
+            found.append(values)
+        if len(found) == N_CONFIGURATIONS:
+            break
+    if not found:
+        return None, f"D vanished at all of {ATTEMPTS} configurations"
+    positions = np.array(places)
     log_abs, sign, gradients, laplacian = (np.stack(part, axis=1) for part in zip(*found, strict=True))
-    if not np.isfinite(log_abs).all():  # a configuration where D vanishes proves nothing
-        return None
     potential = energy = None
     if with_energies:
         potential = np.repeat(_coulomb(system, positions)[None], len(coefficients), axis=0)
         energy = potential - 0.5 * laplacian
-    return WitnessConfigurations(positions, log_abs, sign, gradients, laplacian, potential, energy)
+    return WitnessConfigurations(positions, log_abs, sign, gradients, laplacian, potential, energy), ""
 
 
 def _occupied(strings: NDArray[np.uint64], n: int) -> NDArray[np.int64]:
@@ -83,19 +98,47 @@ def _occupied(strings: NDArray[np.uint64], n: int) -> NDArray[np.int64]:
 
 
 def _strings(phi: NDArray[Any], occupied: NDArray[np.int64]) -> tuple[NDArray[Any], NDArray[Any], float]:
-    """(K) determinants over exp(shift), (K, n, 4) their logarithmic derivatives for each electron, and the shift."""
+    """(K) determinants, (K, n, 4) their derivatives for each electron, both over exp(shift), and the shift.
+
+    With A = U S V+ the derivative of det A along a change dA is tr(adj(A) dA),
+    adj(A) = det(U) det(V+) V diag(products of the other singular values) U+, which holds for singular A too. Rows and
+    columns are brought to like size first, since singular values are good relative to the largest only.
+    """
     n = phi.shape[1]
     if not n:
         return np.ones(len(occupied)), np.zeros((len(occupied), 0, 4)), 0.0
-    determinants, ratios = [], []
-    for orbitals in occupied:
-        a = phi[:, :, orbitals]  # (5, electron, orbital)
-        sign, log = np.linalg.slogdet(a[0])
-        inverse = np.linalg.inv(a[0])
-        determinants.append((sign, log))
-        ratios.append(np.einsum("kip,pi->ik", a[1:], inverse))
-    shift = max(float(log) for _, log in determinants)
-    return np.array([s * np.exp(log - shift) for s, log in determinants]), np.array(ratios), shift
+    per_block = max(1, BLOCK // (5 * n * n))
+    blocks = [_factorised(phi, occupied[k : k + per_block]) for k in range(0, len(occupied), per_block)]
+    phase, log, derivatives, others = (np.concatenate(part) for part in zip(*blocks, strict=True))
+    largest = float(others.max())
+    shift = largest if np.isfinite(largest) else 0.0
+    return phase * np.exp(log - shift), derivatives * np.exp(others - shift)[:, None, None], shift
+
+
+def _factorised(phi: NDArray[Any], occupied: NDArray[np.int64]) -> tuple[NDArray[Any], ...]:
+    """(K) phase and logarithm of the determinants, (K, n, 4) derivatives over exp(others), and (K) others."""
+    a = np.moveaxis(phi[:, :, occupied], 2, 0)  # (K, 5, electron, orbital)
+    by_row = np.abs(a[:, 0]).max(axis=2)
+    by_row[by_row == 0] = 1.0
+    a = a / by_row[:, None, :, None]
+    by_column = np.abs(a[:, 0]).max(axis=1)
+    by_column[by_column == 0] = 1.0
+    a = a / by_column[:, None, None, :]
+    u, s, vh = np.linalg.svd(a[:, 0])
+    with np.errstate(divide="ignore"):
+        logs = np.log(s)
+    before, after = np.zeros_like(logs), np.zeros_like(logs)
+    before[:, 1:] = np.cumsum(logs, axis=1)[:, :-1]
+    after[:, :-1] = np.cumsum(logs[:, ::-1], axis=1)[:, ::-1][:, 1:]
+    scale = np.log(by_row).sum(axis=1) + np.log(by_column).sum(axis=1)
+    products = before + after  # logarithm of the product of all singular values but one
+    others = products.max(axis=1)
+    with np.errstate(invalid="ignore"):
+        weights = np.exp(np.where(np.isfinite(others)[:, None], products - others[:, None], -np.inf))
+    phase = np.linalg.det(u) * np.linalg.det(vh)
+    adjugate = np.einsum("k,kqp,kq,kiq->kpi", phase, vh.conj(), weights, u.conj(), optimize=True)
+    derivatives = np.einsum("kcip,kpi->kic", a[:, 1:], adjugate, optimize=True)
+    return phase, logs.sum(axis=1) + scale, derivatives, others + scale
 
 
 def _sum(
@@ -103,15 +146,12 @@ def _sum(
     up: tuple[NDArray[Any], NDArray[Any], float], down: tuple[NDArray[Any], NDArray[Any], float],
 ) -> tuple[NDArray[Any], ...]:  # fmt: skip
     """log|D|, sign, gradients (S, N, 3) of log D, Laplacian (S) of D over D."""
-    terms = coefficients * up[0][rows] * down[0][columns]  # (S, E)
-    total = terms.sum(axis=1)
-    derivatives = [
-        np.einsum("se,eik->sik", terms, side[1][index], optimize=True) / total[:, None, None]
-        for side, index in ((up, rows), (down, columns))
-    ]
-    every = np.concatenate(derivatives, axis=1)
+    total = (coefficients * up[0][rows] * down[0][columns]).sum(axis=1)
+    of_up = np.einsum("se,eik->sik", coefficients * down[0][columns], up[1][rows], optimize=True)
+    of_down = np.einsum("se,eik->sik", coefficients * up[0][rows], down[1][columns], optimize=True)
     size = np.abs(total)
     with np.errstate(divide="ignore", invalid="ignore"):
+        every = np.concatenate([of_up, of_down], axis=1) / total[:, None, None]
         return np.log(size) + up[2] + down[2], total / size, every[:, :, :3], every[:, :, 3].sum(axis=1)
 
 

@@ -8,6 +8,7 @@ doubles (10^16 > 2^53). A property test reads every kind of number back.
 
 from __future__ import annotations
 
+from pathlib import Path
 from typing import Any
 
 import numpy as np
@@ -15,6 +16,7 @@ from numba import njit
 from numpy.typing import NDArray
 
 from qwfx.converters.numbers import HIGHEST, JIT, LOWEST, _product, power_table
+from qwfx.kernels.stale import forget_stale
 
 __all__ = ["format_records"]
 
@@ -132,3 +134,6 @@ def _slowly(index: NDArray[np.int64], value: Any) -> bytes:
     numbers = " ".join(f"{i:4d}" for i in index.tolist())
     text = f"({value.real: .16E},{value.imag: .16E})" if np.iscomplexobj(value) else f"{value: .16E}"
     return f"{text} {numbers}\n".encode()
+
+
+forget_stale(_scaled, Path(__file__).parent, Path(__file__).parents[1])

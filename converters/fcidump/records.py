@@ -13,6 +13,7 @@ from numpy.typing import NDArray
 
 from qwfx.converters.numbers import JIT, NOT_A_NUMBER, UNDECIDED, number_and_unit, power_table, text_to_float
 from qwfx.errors import ConversionError, FileError
+from qwfx.kernels.stale import forget_stale
 
 __all__ = ["COARSEST", "LARGEST_INDEX", "Records", "Source", "compiled"]
 
@@ -260,3 +261,6 @@ def compiled() -> bool:
         return bool(_parse._cache._cache_file._load_index())
     except AttributeError:  # another version of Numba keeps it elsewhere
         return True
+
+
+forget_stale(_parse, Path(__file__).parent, Path(__file__).parents[1])

@@ -8,6 +8,7 @@ Of numbers that are complex conjugates of each other one is kept.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from pathlib import Path
 from typing import Any
 
 import numpy as np
@@ -15,6 +16,7 @@ from numba import njit
 from numpy.typing import NDArray
 
 from qwfx.converters.numbers import JIT
+from qwfx.kernels.stale import forget_stale
 from qwfx.reference.packing import packed_length
 
 __all__ = [
@@ -186,3 +188,6 @@ def store(flat: Any, units: Any, place: Any, real: Any, imaginary: Any, unit: An
             return repeated, m
         repeated += 1
     return repeated, -1
+
+
+forget_stale(_triangle, Path(__file__).parent, Path(__file__).parents[1])

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 from dataclasses import dataclass, replace
+from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -12,6 +13,7 @@ from numpy.typing import NDArray
 
 from qwfx.converters.molden.text import LARGEST, bad, number
 from qwfx.converters.numbers import JIT, NOT_A_NUMBER, UNDECIDED, number_at, power_table, text_to_float
+from qwfx.kernels.stale import forget_stale
 
 if TYPE_CHECKING:
     from qwfx.converters.molden.sections import WrittenOrbitals
@@ -206,3 +208,4 @@ def _decimals(text: str) -> int:
     return min(most, 16)
 
 
+forget_stale(_coefficients, Path(__file__).parent, Path(__file__).parents[1])

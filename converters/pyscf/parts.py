@@ -21,7 +21,6 @@ from qwfx.model import Energies, Expansion, OrbitalSet, Provenance, Spin, System
 __all__ = ["Parts", "assemble", "bit_string", "energies_table", "per_spin", "provenance_step", "single_determinant"]
 
 
-
 @dataclass
 class Parts:
     """What a calculation consists of, in PySCF's order and shapes, before it becomes a model."""
@@ -191,9 +190,9 @@ def _witness(parts: Parts, system: System, expansion: Expansion | None, coulomb_
 
     configurations = None
     if expansion is not None:
-        configurations = configurations_by_sum(system, expansion, orbitals, with_energies=coulomb_alone)
+        configurations, why = configurations_by_sum(system, expansion, orbitals, with_energies=coulomb_alone)
         if configurations is None:
-            parts.notes.append("the expansion is too long for a witness at whole configurations of electrons")
+            parts.notes.append(f"no witness at whole configurations of electrons: {why}")
     points = witness_points(parts.mol.atom_coords())
     return Witness(
         evaluator="pyscf",
