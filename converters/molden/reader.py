@@ -47,8 +47,8 @@ def read(path: Path, options: Mapping[str, str], progress: Progress | None = Non
     reduced = [labels[i] for i in np.flatnonzero((effective < numbers) & (effective > 0))]
     if reduced and potentials is None:
         notes.append(
-            f"the file has no core potential for {', '.join(reduced[:6])}: add it from PySCF's library with "
-            "--set core-potential=ELEMENT=NAME"
+            f"the file has no core potential for {', '.join(reduced[:6])}: only the orbitals are good "
+            "without; add it from PySCF's library with --set core-potential=ELEMENT=NAME, several separated by commas"
         )
     if progress:
         progress("trying readings", 0.4)

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterator, Mapping
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
@@ -16,6 +17,7 @@ from qwfx.converters.plugin import Progress, Writing
 from qwfx.elements import SYMBOLS
 from qwfx.errors import UnsupportedError
 from qwfx.model import Basis, OrbitalSet, Wavefunction
+from qwfx.reference.determinants import occupied
 from qwfx.reference.harmonics import monomial_powers, shell_polynomials
 from qwfx.reference.norms import gaussian_norm, monomial_norm, self_overlaps
 
@@ -206,10 +208,29 @@ def _text(wavefunction: Wavefunction, basis: Basis) -> Iterator[str]:
         yield from _orbitals(s, matrix[:, columns] * factors, "Beta" if s.spin == "down" else "Alpha")
 
 
+def _with_occupations(wavefunction: Wavefunction) -> Wavefunction:
+    """With the occupations that a single determinant implies, where the orbitals have none of their own."""
+    e, system = wavefunction.expansion, wavefunction.system
+    if e is None or len(np.asarray(e.columns)) != 1:
+        return wavefunction
+    filled: dict[str, NDArray[np.float64]] = {}
+    for name, strings, n in ((e.up_set, e.up_strings, system.n_up), (e.down_set, e.down_strings, system.n_down)):
+        s = wavefunction.orbitals.get(name)
+        if s is not None and s.occupations is None:
+            own = filled.setdefault(name, np.zeros(s.n_orbitals))
+            own[occupied(np.asarray(strings), n)[0]] += 1
+    orbitals = {
+        name: replace(s, occupations=filled[name]) if name in filled else s
+        for name, s in wavefunction.orbitals.items()
+    }
+    return replace(wavefunction, orbitals=orbitals)
+
+
 def write(
     wavefunction: Wavefunction, path: Path, options: Mapping[str, str], progress: Progress | None = None
 ) -> Writing:
     """Write orbitals to `path`, whole or not at all. Raises UnsupportedError for what the format cannot hold."""
+    wavefunction = _with_occupations(wavefunction)
     basis = _check(wavefunction, str(path))
     with replacing(path) as part, open(part, "w", encoding="utf-8", newline="\n") as stream:
         if progress:

@@ -223,3 +223,17 @@ def test_what_cannot_be_written_is_refused(said: str, tmp_path: Path) -> None:
     with pytest.raises(UnsupportedError, match=said):
         converter.write(wavefunction, path, {})
     assert not path.exists()
+
+
+@pytest.mark.parametrize("spin", [0, 1])
+def test_occupations_are_those_of_the_determinant_where_there_are_none(spin: int, tmp_path: Path) -> None:
+    """Else the file could not be read back: nothing would tell its electrons."""
+    from pyscf import scf
+
+    mol = gto.M(atom="O 0 0 0; H 0.2 0.3 0.9", basis="sto-3g", spin=1, verbose=0)
+    whole = from_pyscf((scf.UHF if spin else scf.ROHF)(mol).run())
+    bare = replace(whole, orbitals={name: replace(s, occupations=None) for name, s in whole.orbitals.items()})
+    back = there_and_back(bare, tmp_path)
+    for name, s in whole.orbitals.items():
+        assert np.array_equal(np.asarray(back.orbitals[name].occupations), np.asarray(s.occupations))
+    assert (back.system.n_up, back.system.n_down) == (5, 4)
