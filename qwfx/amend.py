@@ -13,10 +13,10 @@ from typing import Any
 import numpy as np
 
 from qwfx._version import __version__
-from qwfx.determinant_list import read_list
 from qwfx.errors import ConversionError, FormatError, UnsupportedError
 from qwfx.jastrow_terms import read_terms
 from qwfx.model import Array, Expansion, JastrowTerm, System, Wavefunction, Witness
+from qwfx.occupation_lines import read_list
 
 __all__ = ["Amendment", "amend"]
 
@@ -47,7 +47,7 @@ def amend(
     ----------
     jastrow : TOML file with a table for each term, see `qwfx.jastrow_terms.read_terms`.
     start_jastrow : add electron-electron terms that fulfil the cusp conditions.
-    determinants : plain text list, see `qwfx.determinant_list`.
+    determinants : plain text list, see `qwfx.occupation_lines`.
     sets : names of the orbital sets that its up and down orbitals count; by default those of the expansion that is
         there, or the only set of each spin.
     replacing : allow terms, and an expansion, that are there to be replaced.

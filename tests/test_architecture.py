@@ -19,7 +19,7 @@ FLOORS = [
     {"kernels"},
     {"trial"},
     {"rules"},
-    {"determinant_list", "jastrow_terms"},
+    {"occupation_lines", "jastrow_terms"},
     {"converters"},
     {"amend", "conversion", "report", "summary", "validate"},
     {"compare"},

@@ -13,9 +13,9 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from qwfx.determinant_list import expansion_of
 from qwfx.errors import ConversionError, UnsupportedError
 from qwfx.model import Expansion, Wavefunction
+from qwfx.occupation_lines import expansion_of
 
 __all__ = ["CIVectors", "expansion_from_ci", "to_ci_vectors", "with_ci_vectors"]
 

@@ -10,8 +10,8 @@ from expansions import random_expansion
 from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 
-from qwfx.determinant_list import read_list, write_list
 from qwfx.errors import ConversionError, FileError
+from qwfx.occupation_lines import read_list, write_list
 from qwfx.reference.determinants import determinant_sum
 
 
