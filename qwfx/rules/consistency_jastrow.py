@@ -93,7 +93,9 @@ def jastrow_parameters(file: Inspection) -> Iterator[Remark]:
                 f"{path}@smoothness",
                 "3 or more, so that the local energy is continuous at the cutoff",
                 str(attributes["smoothness"]),
-                "nothing, if it is meant: 2 leaves a jump of the local energy at the cutoff",
-                Severity.NOTE,
+                "nothing, if it is meant: 2 leaves a jump of the local energy at the cutoff"
+                if attributes["smoothness"] == 2
+                else "choose 3: J has a kink at the cutoff, where its Laplacian is infinite",
+                Severity.NOTE if attributes["smoothness"] == 2 else Severity.WARNING,
             )
     yield Covered(f"terms {listed(file.members('/jastrow'))}")

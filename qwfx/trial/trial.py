@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from itertools import pairwise
 from typing import Any
 
@@ -33,6 +34,7 @@ class Trial:
     ----------
     wavefunction : with basis, orbitals and expansion; a Jastrow factor and core potentials if it has them.
     rule : points of the spherical quadrature of the core potentials: 6, 12, 18, 26 or 50.
+    jastrow : False leaves the Jastrow factor out: Psi is then D alone, for projectors too.
     threads : number of threads; None takes all processors.
 
     Raises
@@ -41,7 +43,11 @@ class Trial:
     UnsupportedError : a periodic cell, or no basis, orbitals or expansion.
     """
 
-    def __init__(self, wavefunction: Wavefunction, *, rule: int = 12, threads: int | None = None) -> None:
+    def __init__(
+        self, wavefunction: Wavefunction, *, rule: int = 12, jastrow: bool = True, threads: int | None = None
+    ) -> None:
+        if not jastrow:
+            wavefunction = replace(wavefunction, jastrow={})
         expansion = _expansion(wavefunction)
         assert wavefunction.basis is not None
         self.wavefunction = wavefunction

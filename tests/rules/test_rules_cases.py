@@ -51,6 +51,9 @@ CORE = "".join(
 
 
 THRESHOLDS = [
+    ("jastrow-parameters", "dressed\n/jastrow/nuclei@smoothness = 3", "none"),
+    ("jastrow-parameters", "dressed\n/jastrow/nuclei@smoothness = 2", "note"),
+    ("jastrow-parameters", "dressed\n/jastrow/nuclei@smoothness = 1", "warning"),
     ("coincident-nuclei", place("1.7008"), "error"),
     ("coincident-nuclei", place("1.7012"), "warning"),
     ("coincident-nuclei", place("2.29"), "warning"),

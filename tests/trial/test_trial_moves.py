@@ -148,6 +148,14 @@ def ratio_of(trial: Trial, walker: np.ndarray, i: int, points: np.ndarray) -> np
     return np.asarray((there_sign / sign * np.exp(there - log_abs))[0])
 
 
+def test_without_the_factor_projectors_act_on_the_determinants_alone() -> None:
+    wf = random_wavefunction(8, 2, 2, n_entries=9, factors=2, core=True)
+    x = np.random.default_rng(9).normal(size=(3, 4, 3))
+    alone, told = Trial(wf, jastrow=False).evaluate(x), Trial(replace(wf, jastrow={})).evaluate(x)
+    assert np.array_equal(alone.potential, told.potential)
+    assert not np.allclose(alone.potential, Trial(wf).evaluate(x).potential)
+
+
 def test_rotations_average_to_the_same_and_are_reproducible() -> None:
     trial = Trial(random_wavefunction(8, 2, 1, core=True), rule=6)
     x = np.repeat(np.random.default_rng(3).normal(size=(1, 3, 3)), 4000, axis=0)
