@@ -7,6 +7,7 @@ adjugate, not from a table or from rows put in their place.
 from __future__ import annotations
 
 from collections.abc import Callable
+from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
@@ -18,7 +19,9 @@ __all__ = ["MANY_ENTRIES", "configurations_by_sum", "electrons_at_atoms"]
 
 N_CONFIGURATIONS = 8
 ATTEMPTS = 32
-"""Configurations that are tried: those where D vanishes prove nothing."""
+"""Configurations that are tried: those where D vanishes, or is lost in rounding, prove nothing."""
+SOUND = 1e-6
+"""Least |D| over what the terms, and the factors of each determinant, amount to: digits that are lost."""
 MANY_ENTRIES = 20_000
 OPERATIONS = 2e10
 """Above, there are no configurations in the witness, and a note says so."""
@@ -37,7 +40,11 @@ def electrons_at_atoms(system: System, n: int = N_CONFIGURATIONS, seed: int = SE
     rng = np.random.default_rng(seed)
     charges = np.maximum(np.asarray(system.effective_charges, dtype=np.float64), 0.0)
     share = charges / charges.sum() if charges.sum() > 0 else np.full(len(charges), 1 / len(charges))
-    host = rng.choice(len(share), size=(n, system.n_electrons), p=share)
+    host = np.empty((n, system.n_electrons), dtype=np.int64)
+    for first, last in ((0, system.n_up), (system.n_up, system.n_electrons)):
+        if first < last:  # evenly over the charges: D is well away from zero where each atom has its electrons
+            even = (np.arange(last - first) + rng.random((n, 1))) / (last - first)
+            host[:, first:last] = np.searchsorted(np.cumsum(share)[:-1], even, side="right")
     narrowest = np.minimum(1.0 / np.maximum(charges, 1.0), WIDEST)[host]
     spread = narrowest * (WIDEST / narrowest) ** rng.random(host.shape)
     return np.asarray(system.positions)[host] + spread[:, :, None] * rng.normal(size=(*host.shape, 3))
@@ -72,13 +79,13 @@ def configurations_by_sum(
         for (name, _, n), own, seats in zip(sides, occupied, (electrons[:n_up], electrons[n_up:]), strict=True):
             parts.append(_strings(orbitals(name, seats) if n else np.zeros((5, 0, 0)), own))
         values = _sum(coefficients, rows, columns, parts[0], parts[1])
-        if all(np.isfinite(part).all() for part in values):
+        if values is not None:
             places.append(electrons)
             found.append(values)
         if len(found) == N_CONFIGURATIONS:
             break
     if not found:
-        return None, f"D vanished at all of {ATTEMPTS} configurations"
+        return None, f"D vanished to rounding at all of {ATTEMPTS} configurations"
     positions = np.array(places)
     log_abs, sign, gradients, laplacian = (np.stack(part, axis=1) for part in zip(*found, strict=True))
     potential = energy = None
@@ -97,8 +104,21 @@ def _occupied(strings: NDArray[np.uint64], n: int) -> NDArray[np.int64]:
     return np.array(rows, dtype=np.int64).reshape(len(rows), n)
 
 
-def _strings(phi: NDArray[Any], occupied: NDArray[np.int64]) -> tuple[NDArray[Any], NDArray[Any], float]:
-    """(K) determinants, (K, n, 4) their derivatives for each electron, both over exp(shift), and the shift.
+@dataclass(frozen=True)
+class _Strings:
+    """The determinants of the strings of one spin, all over exp(shift)."""
+
+    values: NDArray[Any]
+    """(K)."""
+    derivatives: NDArray[Any]
+    """(K, n, 4) with respect to each electron: x, y, z, Laplacian."""
+    sizes: NDArray[np.float64]
+    """(K) what rounding is in proportion to."""
+    shift: float
+
+
+def _strings(phi: NDArray[Any], occupied: NDArray[np.int64]) -> _Strings:
+    """The determinants of each string from orbitals (5, n, M).
 
     With A = U S V+ the derivative of det A along a change dA is tr(adj(A) dA),
     adj(A) = det(U) det(V+) V diag(products of the other singular values) U+, which holds for singular A too. Rows and
@@ -106,13 +126,14 @@ def _strings(phi: NDArray[Any], occupied: NDArray[np.int64]) -> tuple[NDArray[An
     """
     n = phi.shape[1]
     if not n:
-        return np.ones(len(occupied)), np.zeros((len(occupied), 0, 4)), 0.0
+        return _Strings(np.ones(len(occupied)), np.zeros((len(occupied), 0, 4)), np.zeros(len(occupied)), 0.0)
     per_block = max(1, BLOCK // (5 * n * n))
     blocks = [_factorised(phi, occupied[k : k + per_block]) for k in range(0, len(occupied), per_block)]
     phase, log, derivatives, others = (np.concatenate(part) for part in zip(*blocks, strict=True))
     largest = float(others.max())
     shift = largest if np.isfinite(largest) else 0.0
-    return phase * np.exp(log - shift), derivatives * np.exp(others - shift)[:, None, None], shift
+    sizes = np.exp(others - shift)
+    return _Strings(phase * np.exp(log - shift), derivatives * sizes[:, None, None], sizes, shift)
 
 
 def _factorised(phi: NDArray[Any], occupied: NDArray[np.int64]) -> tuple[NDArray[Any], ...]:
@@ -142,17 +163,19 @@ def _factorised(phi: NDArray[Any], occupied: NDArray[np.int64]) -> tuple[NDArray
 
 
 def _sum(
-    coefficients: NDArray[Any], rows: NDArray[np.int64], columns: NDArray[np.int64],
-    up: tuple[NDArray[Any], NDArray[Any], float], down: tuple[NDArray[Any], NDArray[Any], float],
-) -> tuple[NDArray[Any], ...]:  # fmt: skip
-    """log|D|, sign, gradients (S, N, 3) of log D, Laplacian (S) of D over D."""
-    total = (coefficients * up[0][rows] * down[0][columns]).sum(axis=1)
-    of_up = np.einsum("se,eik->sik", coefficients * down[0][columns], up[1][rows], optimize=True)
-    of_down = np.einsum("se,eik->sik", coefficients * up[0][rows], down[1][columns], optimize=True)
-    size = np.abs(total)
-    with np.errstate(divide="ignore", invalid="ignore"):
-        every = np.concatenate([of_up, of_down], axis=1) / total[:, None, None]
-        return np.log(size) + up[2] + down[2], total / size, every[:, :, :3], every[:, :, 3].sum(axis=1)
+    coefficients: NDArray[Any], rows: NDArray[np.int64], columns: NDArray[np.int64], up: _Strings, down: _Strings
+) -> tuple[NDArray[Any], ...] | None:
+    """log|D|, sign, gradients (S, N, 3) of log D, Laplacian (S) of D over D; None where D is lost in rounding."""
+    for_up, for_down = coefficients * down.values[columns], coefficients * up.values[rows]  # (S, E)
+    D = (for_up * up.values[rows]).sum(axis=1)
+    size = np.abs(D)
+    rounding = (np.abs(for_up) * up.sizes[rows]).sum(axis=1) + (np.abs(for_down) * down.sizes[columns]).sum(axis=1)
+    if not (np.isfinite(size) & (size > SOUND * rounding)).all():
+        return None
+    of_up = np.einsum("se,eik->sik", for_up, up.derivatives[rows], optimize=True)
+    of_down = np.einsum("se,eik->sik", for_down, down.derivatives[columns], optimize=True)
+    every = np.concatenate([of_up, of_down], axis=1) / D[:, None, None]
+    return np.log(size) + up.shift + down.shift, D / size, every[:, :, :3], every[:, :, 3].sum(axis=1)
 
 
 def _coulomb(system: System, positions: NDArray[np.float64]) -> NDArray[np.float64]:

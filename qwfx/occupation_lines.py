@@ -1,7 +1,8 @@
 """Expansions from a plain text list of determinants, for those who have them from elsewhere.
 
 A line is one determinant: its coefficients (one for each state; two numbers ``re,im`` make a complex one), a ``|``, the
-occupied up orbitals, a ``|``, the occupied down orbitals. Orbitals count from 1, ranges are ``3-7``, none are ``-``.
+occupied up orbitals, a ``|``, the occupied down orbitals. Orbitals count from 1, ranges are ``3-7``, none are ``-``;
+there are blanks or commas between them.
 What follows a ``#`` is a comment::
 
     # water, two states
@@ -99,7 +100,7 @@ def _line(text: str, where: str, n_orbitals: tuple[int, int]) -> Line:
 
 def _orbitals(text: str, where: str, n_orbitals: int) -> tuple[int, ...]:
     orbitals: list[int] = []
-    for word in text.split():
+    for word in text.replace(",", " ").split():
         if word == "-":
             continue
         first, dash, last = word.partition("-")

@@ -25,7 +25,7 @@ def test_the_sign_is_that_of_the_order(tmp_path: Path) -> None:
     text = "# a comment\n\n0.9 | 1-3 | 2 1\n-0.2 0 | \n"
     with pytest.raises(ConversionError, match=r"list.txt:4"):
         read(tmp_path, text)
-    text = "0.9  0.1 | 1-3   | 2 1  # here too\n-2D-1 0.5| 4 1 3 | 1 3\n0.25 0 | 5 2 1 | 3 2\n"
+    text = "0.9  0.1 | 1-2,3 | 2, 1  # here too\n-2D-1 0.5| 4 1 3 | 1 3\n0.25 0 | 5 2 1 | 3 2\n"
     expansion = read(tmp_path, text)
     rng = np.random.default_rng(1)
     up, down = rng.normal(size=(3, 8)), rng.normal(size=(2, 8))

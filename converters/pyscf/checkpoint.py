@@ -16,6 +16,7 @@ from numpy.typing import NDArray
 from qwfx.converters.plugin import Option, Progress, Reading, Writing
 from qwfx.converters.pyscf.checkpoint_ci import expansion_of_checkpoint
 from qwfx.converters.pyscf.checkpoint_mole import molecule_from_text
+from qwfx.converters.pyscf.ci_vectors import roles_of
 from qwfx.converters.pyscf.describe import ORBITAL_QUANTITIES
 from qwfx.converters.pyscf.energies import energy
 from qwfx.converters.pyscf.hamiltonian import with_hamiltonian
@@ -230,7 +231,7 @@ def _mcscf_parts(mol: Any, content: dict[str, Any], where: str, threshold: float
         occupations=per_spin(content.get("mo_occ"), 1) or None,
         method=f"CASSCF({electrons},{active})",
         totals=_numbers(content, "e_tot"),
-        roles=("core",) * core + ("active",) * active + ("virtual",) * (n_orbitals - core - active),
+        roles=[roles_of(core, active, n_orbitals)],
     )
     density = content.get("casdm1")
     if parts.occupations is None and density is not None and np.shape(density) == (active, active):

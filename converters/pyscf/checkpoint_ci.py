@@ -30,7 +30,11 @@ def expansion_of_checkpoint(
         notes.append("the checkpoint has no CI vectors (PySCF writes them with mc.chk_ci = True): no expansion")
         return None
     electrons = np.asarray(content.get("nelecas", ())).ravel()
-    vectors = np.asarray(content["ci"])
+    stored = content["ci"]
+    if isinstance(stored, list) and len({np.shape(state) for state in stored}) != 1:
+        notes.append("the states of the checkpoint are of several spins, which one expansion cannot hold: not used")
+        return None
+    vectors = np.asarray(stored)
     density = np.asarray(content.get("casdm1", ()))
     if len(electrons) != 2 or vectors.dtype.kind not in "fc" or density.shape != (active, active):
         notes.append("the CI vectors of the checkpoint are of another kind than those of a full CI: not used")

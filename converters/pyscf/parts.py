@@ -33,7 +33,8 @@ class Parts:
     method: str | None = None
     totals: list[float] = field(default_factory=list)
     """Total energy of each state, hartree."""
-    roles: tuple[str, ...] | None = None
+    roles: list[tuple[str, ...]] | None = None
+    """For each set."""
     electrons: tuple[int, int] | None = None
     """Up and down, where the state has another spin than the molecule."""
     expansion: Expansion | None = None
@@ -85,7 +86,7 @@ def assemble(
             coefficients=np.ascontiguousarray(coefficients[order].T),
             energies=_real(parts.energies, index),
             occupations=_real(parts.occupations, index),
-            roles=parts.roles,
+            roles=None if parts.roles is None else parts.roles[index],
             irreps=_irreps(parts, coefficients),
         )
     expansion = parts.expansion

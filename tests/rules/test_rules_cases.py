@@ -151,7 +151,6 @@ THRESHOLDS = [
     ("jastrow-atoms", "dressed\n/jastrow/inner/atoms = [1, 1]", "error"),
     ("jastrow-atoms", "dressed\n/jastrow/inner/atoms = [0, 1]", "none"),
     ("jastrow-parameters", "dressed\n/jastrow/nuclei/cutoff = [4, 0]", "error"),
-    ("jastrow-parameters", "dressed\n/jastrow/nuclei@smoothness = 2", "note"),
     ("jastrow-parameters", "dressed\n/jastrow/splines/cutoff = [5, 5, -1]", "error"),
     ("jastrow-parameters", "dressed\n/jastrow/splines/coefficients = [[1, 2, 3], [1, 2, 3], [1, 2, 3]]", "none"),
     ("jastrow-parameters", "dressed\n/jastrow/inner/scale = [1, 1, -1]", "error"),

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from itertools import product
 from pathlib import Path
 from typing import Any
 
@@ -11,10 +10,14 @@ import numpy as np
 import pytest
 from pyscf import ao2mo, fci, gto, mcscf, scf
 
-from qwfx.converters.pyscf import converter, expansion_from_ci, from_pyscf, to_ci_vectors, with_ci_vectors
+import qwfx
+from qwfx.converters.pyscf import CIVectors, converter, expansion_from_ci, from_pyscf, to_ci_vectors, with_ci_vectors
+from qwfx.converters.pyscf import energy as qwfx_energy
 from qwfx.errors import ConversionError, UnsupportedError
+from qwfx.findings import Outcome, Severity
 from qwfx.model import Expansion, Wavefunction
 from qwfx.reference.determinants import DeterminantSum, determinant_sum
+from qwfx.validate import validate
 
 State = dict[tuple[int, ...], float]
 """Occupied spin orbitals, ascending (orbital p up is p, down p + n), and the coefficient: operators in this order."""
@@ -31,8 +34,12 @@ def create(state: State, p: int) -> State:
 
 
 def energy(total: DeterminantSum, state: int, h: np.ndarray, eri: np.ndarray, core: float) -> float:
-    """<s|H|s>/<s|s> with H of FORMAT.md, Hamiltonian, applied one operator at a time to F15's states."""
-    n = len(h)
+    """<s|H|s>/<s|s> with H of FORMAT.md, Hamiltonian, applied one operator at a time to F15's states.
+
+    h (n, n) or (spin, n, n), eri (n, n, n, n) or (spin, spin, n, n, n, n).
+    """
+    n = h.shape[-1]
+    h, eri = np.broadcast_to(h, (2, n, n)), np.broadcast_to(eri, (2, 2, n, n, n, n))
     ket: State = {}
     for e, (i, j) in enumerate(zip(total.rows, total.columns, strict=True)):
         ket[(*total.up[i].tolist(), *(total.down[j] + n).tolist())] = float(total.coefficients[state, e])
@@ -41,14 +48,12 @@ def energy(total: DeterminantSum, state: int, h: np.ndarray, eri: np.ndarray, co
     def overlap(other: State) -> float:
         return sum(c * ket.get(occupied, 0.0) for occupied, c in other.items())
 
-    for p, q in product(range(n), repeat=2):
-        for spin in (0, n):
-            value += h[p, q] * overlap(create(annihilate(ket, q + spin), p + spin))
-    for p, q, r, s in product(range(n), repeat=4):
-        if abs(eri[p, q, r, s]) > 1e-12:
-            for one, two in product((0, n), repeat=2):
-                moved = annihilate(annihilate(ket, q + one), s + two)
-                value += 0.5 * eri[p, q, r, s] * overlap(create(create(moved, r + two), p + one))
+    for s, p, q in np.ndindex(2, n, n):
+        value += h[s, p, q] * overlap(create(annihilate(ket, q + s * n), p + s * n))
+    for s, t, p, q, r, u in np.ndindex(2, 2, n, n, n, n):
+        if abs(eri[s, t, p, q, r, u]) > 1e-12:
+            moved = annihilate(annihilate(ket, q + s * n), u + t * n)
+            value += 0.5 * eri[s, t, p, q, r, u] * overlap(create(create(moved, r + t * n), p + s * n))
     return value / sum(c * c for c in ket.values())
 
 
@@ -193,6 +198,10 @@ def test_what_cannot_go_out(rohf: Any) -> None:
         to_ci_vectors(wf, n_core=2)
     with pytest.raises(UnsupportedError, match="2 active"):
         to_ci_vectors(wf, n_core=1, n_active=2)
+    with pytest.raises(UnsupportedError, match="a core of -1"):
+        to_ci_vectors(wf, n_core=-1)
+    with pytest.raises(UnsupportedError, match="a core of 1 up and 0 down"):
+        to_ci_vectors(wf, n_core=(1, 0))
     with pytest.raises(UnsupportedError, match="no expansion"):
         to_ci_vectors(Wavefunction(wf.system))
 
@@ -205,10 +214,126 @@ def test_vectors_that_do_not_fit(rohf: Any) -> None:
         with_ci_vectors(base, np.ones((1, 1)), strings=([0b11], [0b11]), n_core=0, n_active=5, electrons=(3, 2))
 
 
-def test_orbitals_of_each_spin() -> None:
-    uhf = scf.UHF(molecule()).run()
-    with pytest.raises(UnsupportedError, match="orbitals of each spin"):
-        from_pyscf(mcscf.UCASCI(uhf, 3, 3).run())
+@pytest.fixture(scope="module")
+def uhf() -> Any:
+    return scf.UHF(molecule()).run()
+
+
+def energy_of_both_spins(total: DeterminantSum, state: int, mf: Any, orbitals: Any) -> float:
+    """As `energy`, of orbitals of each spin."""
+    n = orbitals[0].shape[1]
+    h = np.array([C.T @ mf.get_hcore() @ C for C in orbitals])
+    eri = np.array([[ao2mo.kernel(mf.mol, (C, C, E, E), compact=False).reshape((n,) * 4) for E in orbitals]
+                    for C in orbitals])  # fmt: skip
+    return energy(total, state, h, eri, mf.mol.energy_nuc())
+
+
+@pytest.mark.parametrize(("electrons", "n_core"), [((2, 1), (1, 1)), ((1, 2), (2, 0)), ((2, 2), (1, 0))])
+def test_orbitals_of_each_spin(uhf: Any, electrons: tuple[int, int], n_core: tuple[int, int], tmp_path: Path) -> None:
+    mc = mcscf.UCASCI(uhf, 3, electrons, ncore=n_core)
+    mc.fcisolver.nroots = 2
+    mc.run()
+    wf = from_pyscf(mc)
+    assert wf.expansion is not None
+    assert (wf.expansion.up_set, wf.expansion.down_set) == ("up", "down")
+    assert wf.energies is not None
+    assert wf.energies.method[0] == "UCASCI" + f"({sum(electrons)},3)"
+    assert wf.orbitals["up"].roles is not None
+    assert wf.orbitals["down"].roles is not None
+    assert (wf.orbitals["up"].roles.count("core"), wf.orbitals["down"].roles.count("core")) == n_core
+    total = determinant_sum(wf.expansion, wf.system.n_up, wf.system.n_down)
+    for state in range(2):
+        assert energy_of_both_spins(total, state, uhf, mc.mo_coeff) == pytest.approx(mc.e_tot[state], abs=1e-7)
+    back = to_ci_vectors(wf, n_core=n_core, n_active=3)
+    assert (back.n_core, back.electrons) == (n_core, electrons)
+    assert all(np.array_equal(mine, theirs) for mine, theirs in zip(back.vectors, mc.ci, strict=True))
+    passes(wf, tmp_path)
+
+
+def passes(wf: Wavefunction, folder: Path) -> None:
+    qwfx.save(wf, folder / "a.qwfx")
+    report = validate(folder / "a.qwfx")
+    assert not report.count(Severity.ERROR) + report.count(Severity.WARNING), report.findings
+    assert next(r for r in report.results if r.rule == "witness-configurations").outcome is Outcome.PASSED
+
+
+@pytest.mark.parametrize("kind", ["rohf", "uhf"])
+def test_a_solver_over_a_mean_field(kind: str, rohf: Any, uhf: Any, tmp_path: Path) -> None:
+    mf = {"rohf": rohf, "uhf": uhf}[kind]
+    solver = fci.FCI(mf)
+    total, vector = solver.kernel()
+    wf = from_pyscf(mf, ci=solver)
+    assert wf.expansion is not None
+    assert any("energies of the CI" in note for note in wf.provenance.steps[0]["notes"])
+    assert wf.energies is not None
+    assert "total" not in wf.energies.quantity
+    passes(wf, tmp_path)
+    sum_of = determinant_sum(wf.expansion, 3, 2)
+    orbitals = mf.mo_coeff if kind == "uhf" else (mf.mo_coeff, mf.mo_coeff)
+    assert energy_of_both_spins(sum_of, 0, mf, orbitals) == pytest.approx(total, abs=1e-7)
+    one = solver.make_rdm1s(vector, 5, (3, 2))
+    mine = [s.occupations for s in wf.orbitals.values()]
+    theirs = [np.diag(d) for d in one] if kind == "uhf" else [np.diag(one[0] + one[1])]
+    for a, b in zip(mine, theirs, strict=True):
+        assert a is not None
+        assert np.allclose(a, b, atol=1e-12)
+
+
+def test_vectors_with_their_energies(rohf: Any, tmp_path: Path) -> None:
+    total, vector = selected(rohf)
+    wf = from_pyscf(rohf, ci=CIVectors(vector, 0, 5, (3, 2), totals=[total]))
+    assert wf.energies is not None
+    assert (wf.energies.method[0], float(wf.energies.value[0])) == ("selected CI(5,5)", total)
+    passes(wf, tmp_path)
+    again = from_pyscf(rohf, ci=CIVectors(np.asarray(vector), 0, 5, (3, 2), vector._strs), method="mine")
+    assert wf.expansion is not None
+    assert again.expansion is not None
+    assert np.array_equal(np.asarray(again.expansion.coefficients), np.asarray(wf.expansion.coefficients))
+    mc = mcscf.CASCI(rohf, 4, 3).run()
+    whole = from_pyscf(rohf, ci=CIVectors(mc.ci, 1, 4, (2, 1), totals=[mc.e_tot]))
+    assert qwfx_energy(whole) == pytest.approx(mc.e_tot, abs=1e-8)
+    bare = from_pyscf(rohf.mol, mo_coeff=rohf.mo_coeff, ci=CIVectors(mc.ci, 1, 4, (2, 1), totals=[mc.e_tot]))
+    assert qwfx_energy(bare) == pytest.approx(mc.e_tot, abs=1e-8)
+
+
+def test_solvers_and_vectors_that_cannot_be_taken(rohf: Any) -> None:
+    with pytest.raises(ConversionError, match="no vectors"):
+        from_pyscf(rohf, ci=fci.FCI(rohf))
+    with pytest.raises(ConversionError, match="no orbitals"):
+        from_pyscf(rohf.mol, ci=CIVectors(np.ones((10, 10)), 0, 5, (3, 2)))
+    with pytest.raises(ConversionError, match="2 energies for 1 states"):
+        from_pyscf(rohf, ci=CIVectors(np.ones((10, 10)), 0, 5, (3, 2), totals=[1.0, 2.0]))
+    for space in ((0, 6, (3, 2)), (-1, 5, (3, 2)), (0, 5, (6, 2)), (2, 4, (1, 0))):
+        with pytest.raises(ConversionError, match="a core of"):
+            from_pyscf(rohf, ci=CIVectors(np.ones((10, 10)), *space))
+    solver = fci.FCI(rohf)
+    solver.kernel()
+    solver.norb = 4
+    with pytest.raises(ConversionError, match="a CI of 4 orbitals"):
+        from_pyscf(rohf, ci=solver)
+
+
+def test_total_spin_by_operators(rohf: Any) -> None:
+    """S^2 = S- S+ + Sz(Sz + 1) on F15's states, of quartets and doublets, against PySCF's."""
+    solver = fci.FCI(rohf)
+    solver.nroots = 12
+    _, vectors = solver.kernel()
+    wf = from_pyscf(rohf, ci=solver)
+    assert wf.expansion is not None
+    total = determinant_sum(wf.expansion, 3, 2)
+    found = []
+    for state, vector in enumerate(vectors):
+        ket: State = {}
+        for e, (i, j) in enumerate(zip(total.rows, total.columns, strict=True)):
+            ket[(*total.up[i].tolist(), *(total.down[j] + 5).tolist())] = float(total.coefficients[state, e])
+        raised: State = {}
+        for p in range(5):
+            for key, c in create(annihilate(ket, p + 5), p).items():
+                raised[key] = raised.get(key, 0.0) + c
+        found.append(sum(c * c for c in raised.values()) + 0.5 * 1.5)
+        assert found[-1] == pytest.approx(fci.spin_op.spin_square(vector, 5, (3, 2))[0], abs=1e-8)
+    assert min(found) == pytest.approx(0.75, abs=1e-5)
+    assert max(found) == pytest.approx(3.75, abs=1e-5)
 
 
 @pytest.fixture(scope="module")
@@ -238,6 +363,20 @@ def test_vectors_of_a_checkpoint(checkpoints: Any) -> None:
             assert energy(total, state, h, eri, mc.mol.energy_nuc()) == pytest.approx(value, abs=1e-7)
         assert wf.witness is not None
         assert wf.witness.configurations is not None
+
+
+def test_states_of_several_spins_in_a_checkpoint(tmp_path: Path) -> None:
+    mol = gto.M(atom="H 0 0 0; H 0 0 1.5; H 0 .3 3; H 0 .1 4.5", basis="sto-3g", verbose=0)
+    solvers = [fci.direct_spin1.FCI(mol), fci.direct_spin1.FCI(mol)]
+    solvers[1].spin = 2
+    mc = mcscf.state_average_mix(mcscf.CASSCF(scf.RHF(mol).run(), 3, 2), solvers, [0.5, 0.5])
+    mc.verbose, mc.chk_ci, mc.chkfile = 0, True, str(tmp_path / "a.chk")
+    mc.kernel()
+    reading = converter.read(tmp_path / "a.chk", {"part": "mcscf"})
+    assert reading.wavefunction.expansion is None
+    assert any("several spins" in note for note in reading.notes)
+    with pytest.raises(ConversionError, match="CI vector of 3 elements"):
+        from_pyscf(mc)
 
 
 def test_a_threshold_for_a_checkpoint(checkpoints: Any) -> None:

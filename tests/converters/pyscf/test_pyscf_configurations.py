@@ -6,6 +6,7 @@ from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
+import mpmath
 import numpy as np
 import pytest
 from expansions import random_expansion
@@ -14,9 +15,9 @@ from pyscf import fci, gto, mcscf, scf
 import qwfx
 from qwfx.converters import configurations
 from qwfx.converters.configurations import configurations_by_sum, electrons_at_atoms
-from qwfx.converters.pyscf import from_pyscf, with_ci_vectors
+from qwfx.converters.pyscf import CIVectors, from_pyscf, with_ci_vectors
 from qwfx.findings import Outcome, RuleResult
-from qwfx.model import System, Wavefunction, WitnessConfigurations
+from qwfx.model import Expansion, System, Wavefunction, WitnessConfigurations
 from qwfx.reference.determinants import determinant_sum, evaluate_determinants
 from qwfx.validate import validate
 
@@ -53,7 +54,7 @@ def rohf() -> Any:
 
 
 def amplitude(vector: np.ndarray, n_orbitals: int, electrons: tuple[int, int], phi: list[np.ndarray]) -> float:
-    """<0| psi(r_N) ... psi(r_1) |vector>, psi(r) = sum_p phi_p(r) a_p, by PySCF's operators, up electrons first."""
+    """<0| psi(r_N) ... psi(r_1) |vector>, psi(r) = sum_p phi_p(r) a_p, by the operators of PySCF, up first."""
     n = list(electrons)
     for spin, annihilate in enumerate((fci.addons.des_a, fci.addons.des_b)):
         for row in phi[spin]:
@@ -66,6 +67,23 @@ def amplitude(vector: np.ndarray, n_orbitals: int, electrons: tuple[int, int], p
 def orbitals_at(mol: Any, C: np.ndarray, found: WitnessConfigurations, n_up: int, m: int) -> list[np.ndarray]:
     values = mol.eval_gto("GTOval", np.asarray(found.positions)[m]) @ C
     return [values[:n_up], values[n_up:]]
+
+
+def test_values_by_the_annihilation_operators_of_pyscf(rohf: Any, tmp_path: Path) -> None:
+    """D of three states of a full CI, one sign for all of them and for all configurations."""
+    n_orbitals = rohf.mo_coeff.shape[1]
+    solver = fci.FCI(rohf)
+    solver.nroots = 3
+    _, vectors = solver.kernel()
+    wf = from_pyscf(rohf, ci=CIVectors(vectors, 0, n_orbitals, (3, 2)))
+    found = witness_of(wf)
+    assert checked(wf, tmp_path / "a.qwfx").outcome is Outcome.PASSED
+    D = np.asarray(found.sign) * np.exp(found.log_abs)
+    places = [orbitals_at(rohf.mol, rohf.mo_coeff, found, 3, m) for m in range(8)]
+    theirs = np.array([[amplitude(np.asarray(v), n_orbitals, (3, 2), phi) for phi in places] for v in vectors])
+    ratio = D / theirs
+    assert abs(abs(ratio[0, 0]) - 1) < 1e-8
+    np.testing.assert_allclose(ratio, ratio[0, 0], rtol=1e-7)
 
 
 def test_a_core_is_as_if_its_orbitals_were_active(rohf: Any, tmp_path: Path) -> None:
@@ -139,8 +157,7 @@ def planes(n: int, kind: type, seed: int = 3) -> Any:
         r2 = (d**2).sum(axis=2)
         g = np.exp(-exponents * r2)
         slopes = np.moveaxis(-2 * exponents[:, None] * d * g[..., None], 2, 0)
-        rows = [g, *slopes, (4 * exponents**2 * r2 - 6 * exponents) * g]
-        return np.array(rows) @ mix
+        return np.array([g, *slopes, (4 * exponents**2 * r2 - 6 * exponents) * g]) @ mix
 
     return orbitals
 
@@ -159,6 +176,43 @@ def test_sum_against_rows_put_in_their_place(electrons: tuple[int, int], kind: t
         for word in ("log_abs", "sign", "gradients", "laplacian"):
             theirs = np.asarray(getattr(found, word))[:, m]
             np.testing.assert_allclose(theirs, getattr(mine, word), rtol=1e-7, atol=1e-8, err_msg=word)
+
+
+def test_strings_that_vanish_still_have_derivatives() -> None:
+    """One determinant is exactly zero where others are not; its derivatives are not zero. Exact numbers by mpmath."""
+    strings = np.array([[0b0111], [0b1011], [0b1101]], dtype=np.uint64)
+    c = np.array([[0.5, -0.25, 0.75]])
+    expansion = Expansion("a", "a", strings, np.zeros((1, 1), np.uint64), np.arange(4), np.zeros(3, np.int64), c)
+    phi = np.random.default_rng(7).integers(-4, 5, size=(5, 3, 4)).astype(float)
+    phi[0, 2, :3] = phi[0, 0, :3] + phi[0, 1, :3]
+    found, why = configurations_by_sum(system(3, 0), expansion, lambda *_: phi, with_energies=False)
+    assert found is not None, why
+
+    def det(a: np.ndarray) -> float:
+        return float(mpmath.det(mpmath.matrix(a.tolist())))
+
+    occupied = ([0, 1, 2], [0, 1, 3], [0, 2, 3])
+    assert det(phi[0][:, occupied[0]]) == 0
+    D = sum(c[0, e] * det(phi[0][:, own]) for e, own in enumerate(occupied))
+    sums, of_the_first = np.zeros((3, 4)), 0.0
+    for electron, k in np.ndindex(3, 4):
+        for e, own in enumerate(occupied):
+            a = phi[0][:, own].copy()
+            a[electron] = phi[k + 1][electron, own]
+            sums[electron, k] += c[0, e] * det(a)
+            of_the_first += abs(det(a)) if e == 0 else 0
+    assert of_the_first > 1
+    assert np.allclose(found.log_abs, np.log(abs(D)), rtol=0, atol=1e-13)
+    assert np.allclose(found.gradients, sums[:, :3] / D, rtol=1e-12)
+    assert np.allclose(found.laplacian, sums[:, 3].sum() / D, rtol=1e-12)
+
+
+@pytest.mark.parametrize("phi", [np.ones((5, 2, 3)), np.ones((5, 2, 3)) + 1e-13 * np.arange(30).reshape(5, 2, 3) ** 2])
+def test_where_d_is_lost_in_rounding_nothing_is_told(phi: np.ndarray) -> None:
+    expansion = random_expansion(np.random.default_rng(5), (2, 0), 3, 1)
+    found, why = configurations_by_sum(system(2, 0), expansion, lambda *_: phi, with_energies=False)
+    assert found is None
+    assert "vanished" in why
 
 
 def test_electrons_are_in_every_shell() -> None:
