@@ -22,7 +22,7 @@ ATTEMPTS = 32
 """Configurations that are tried: those where D vanishes, or is lost in rounding, prove nothing."""
 SOUND = 1e-6
 """Least |D| over what the terms, and the factors of each determinant, amount to: digits that are lost."""
-MANY_ENTRIES = 20_000
+MANY_ENTRIES = 200_000
 OPERATIONS = 2e10
 """Above, there are no configurations in the witness, and a note says so."""
 BLOCK = 1 << 22
