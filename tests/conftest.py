@@ -5,6 +5,10 @@ from __future__ import annotations
 import os
 from pathlib import Path
 
+# The molecules of the tests are small: threads of OpenMP would wait for each other, for minutes where another process
+# has one of the processors. To be said before any library starts them.
+os.environ.setdefault("OMP_NUM_THREADS", "1")
+
 import numpy as np
 import pytest
 from hypothesis import settings
