@@ -21,6 +21,7 @@ from qwfx.converters.fcidump.store import BLOCK_CORE, BLOCKS, RESTRICTED, Places
 from qwfx.converters.fcidump.symmetry import symmetry_of
 from qwfx.converters.plugin import Progress, Reading
 from qwfx.errors import ConversionError, UnsupportedError
+from qwfx.kernels.packing import positions
 from qwfx.model import Hamiltonian, Provenance, System, Wavefunction
 
 __all__ = ["read"]
@@ -58,6 +59,14 @@ def _read(
         complex_orbitals=places.is_complex,
         orbital_energies=energies,
     )
+    missing = _missing(hamiltonian) if not filled.seen_core and options.get("accept-incomplete", "no") != "yes" else ""
+    if missing:
+        raise ConversionError(
+            missing,
+            where=source.end(),
+            expected="one-electron integrals of every orbital, and the core energy",
+            remedy="the file is cut off: write it again; if it is meant so, --set accept-incomplete=yes",
+        )
     symmetry = symmetry_of(header, hamiltonian, options.get("isym", "like-orbsym"), source.name)
     hamiltonian = replace(hamiltonian, orbital_symmetry=symmetry.orbitals, state_symmetry=symmetry.state)
     notes = [*layout.notes, *_doubt(header, layout, filled), *header_notes, *spin_notes, *symmetry.notes]
@@ -188,8 +197,33 @@ def _check_complete(source: Source, layout: Layout, filled: Filled, accept: bool
         )
 
 
+def _missing(h: Hamiltonian) -> str:
+    """What shows that one-electron integrals were cut off: an orbital with self-repulsion and not one of them.
+
+    Written last before the core energy, they are what a file that was cut off between two lines lacks.
+    """
+    n = h.n_orbitals
+    diagonal = np.repeat(np.arange(n)[:, None], 4, axis=1)
+    for key, matrix in h.one_body.items():
+        like = h.two_body["both" if key == "both" else f"{key}_{key}"]
+        place = positions("pairs" if h.complex_orbitals else "eightfold", n, diagonal, True)
+        values = np.asarray(like.values)
+        if like.index is not None:
+            index = np.asarray(like.index).astype(np.int64)
+            at = np.minimum(np.searchsorted(index, place), max(len(index) - 1, 0))
+            own = np.where(index[at] == place, values[at], 0) if len(index) else np.zeros(n)
+        else:
+            own = values[place]
+        bare = (np.abs(own) > 0) & ~np.asarray(matrix).any(axis=1)
+        if bare.any():
+            return f"orbital {int(np.argmax(bare)) + 1} has two-electron and no one-electron integrals"
+    return ""
+
+
 def _notes(filled: Filled) -> list[str]:
     notes = []
+    if not filled.seen_two_body:
+        notes.append("there are no two-electron integrals in the file: taken as 0")
     if not filled.seen_core:
         notes.append("no core energy in the file: taken as 0")
     if filled.n_repeated:

@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+from collections import deque
 from collections.abc import Iterator
+from concurrent.futures import Future, ThreadPoolExecutor
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any, NoReturn
@@ -18,6 +20,8 @@ from qwfx.kernels.stale import forget_stale
 __all__ = ["COARSEST", "LARGEST_INDEX", "Records", "Source", "compiled"]
 
 PIECE = 1 << 18
+AHEAD = 2
+"""Pieces that are parsed while the caller is busy with one."""
 SHORTEST = 10  # bytes of a record: "1 1 1 1 1\n"
 FINE, BAD_VALUE, FEW, BAD_INDEX, MORE, SLOW = range(6)
 PROBLEMS = {
@@ -47,6 +51,28 @@ class Records:
     """(n) byte of the file at which each record begins."""
     done: float
     """Fraction of the file that is behind us."""
+
+
+class _Room:
+    """Arrays for the records of a piece, used again for later ones."""
+
+    real: NDArray[np.float64]
+    imaginary: NDArray[np.float64]
+    unit: NDArray[np.int8]
+    index: NDArray[np.int32]
+    place: NDArray[np.int64]
+
+    def __init__(self) -> None:
+        self.size = -1
+        self.make(0)
+
+    def make(self, n: int) -> None:
+        """Room for n records at least; what was in it is lost."""
+        if n > self.size:
+            self.size = n
+            self.real, self.imaginary = np.empty(n), np.empty(n)
+            self.unit, self.place = np.empty(n, dtype=np.int8), np.empty(n, dtype=np.int64)
+            self.index = np.empty((n, 4), dtype=np.int32)
 
 
 class Source:
@@ -126,32 +152,49 @@ class Source:
             raise self.unreadable(error) from None
 
     def records(self) -> Iterator[Records]:
-        """All records in order. Raises ConversionError with the line of the first that is none."""
-        table, bits = power_table(), np.zeros(1, dtype=np.uint64)
-        first, room = 0, 0
-        for offset, piece in self.pieces():
-            if len(piece) // SHORTEST + 1 > room:
-                room = len(piece) // SHORTEST + 1
-                real, imaginary = np.empty(room), np.empty(room)
-                unit = np.empty(room, dtype=np.int8)
-                index, place = np.empty((room, 4), dtype=np.int32), np.empty(room, dtype=np.int64)
-            text = np.frombuffer(piece, dtype=np.uint8)
-            n, position, status = 0, 0, SLOW
-            while status == SLOW:
-                n, position, status = _parse(
-                    text, position, n, table, bits, real.view(np.uint64), imaginary.view(np.uint64), unit, index, place
-                )
-                if status == SLOW:
-                    values, unit[n], index[n], position, place[n] = self.slowly(piece, offset, position)
-                    real[n], imaginary[n] = values
-                    n += 1
-            if status != FINE:
-                self.complain(piece, offset, position, status)
-            if n:
-                place[:n] += offset
-                done = (offset + len(piece)) / max(self.size, 1)
-                yield Records(first, real[:n], imaginary[:n], unit[:n], index[:n], place[:n], done)
-                first += n
+        """All records in order, good until the next are asked for; pieces ahead are parsed in threads meanwhile.
+
+        Raises ConversionError with the line of the first that is none.
+        """
+        table, first = power_table(), 0
+        rooms = [_Room() for _ in range(AHEAD + 1)]  # one is with the caller, the others with the threads
+        pending: deque[tuple[int, int, Future[tuple[int, _Room]]]] = deque()
+        with ThreadPoolExecutor(AHEAD) as pool:
+            pieces = enumerate(self.pieces())
+            while True:
+                while len(pending) < AHEAD and (following := next(pieces, None)):
+                    number, (offset, piece) = following
+                    job = pool.submit(self.parsed, offset, piece, table, rooms[number % len(rooms)])
+                    pending.append((offset, len(piece), job))
+                if not pending:
+                    return
+                offset, length, job = pending.popleft()
+                n, room = job.result()
+                if n:
+                    done = (offset + length) / max(self.size, 1)
+                    yield Records(
+                        first, room.real[:n], room.imaginary[:n], room.unit[:n], room.index[:n], room.place[:n], done
+                    )
+                    first += n
+
+    def parsed(self, offset: int, piece: bytes, table: NDArray[np.uint64], room: _Room) -> tuple[int, _Room]:
+        """The number of records of a piece, which lie in the room. Raises ConversionError."""
+        room.make(len(piece) // SHORTEST + 1)
+        bits, text = np.zeros(1, dtype=np.uint64), np.frombuffer(piece, dtype=np.uint8)
+        real, imaginary = room.real.view(np.uint64), room.imaginary.view(np.uint64)
+        n, position, status = 0, 0, SLOW
+        while status == SLOW:
+            n, position, status = _parse(
+                text, position, n, table, bits, real, imaginary, room.unit, room.index, room.place
+            )
+            if status == SLOW:
+                values, room.unit[n], room.index[n], position, room.place[n] = self.slowly(piece, offset, position)
+                room.real[n], room.imaginary[n] = values
+                n += 1
+        if status != FINE:
+            self.complain(piece, offset, position, status)
+        room.place[:n] += offset
+        return n, room
 
     def slowly(self, piece: bytes, offset: int, position: int) -> tuple[list[float], int, list[int], int, int]:
         """One record whose value only Python's own parser can round: values, unit, indices, end, begin."""

@@ -77,6 +77,8 @@ def _state(header: Header, orbitals: NDArray[np.int32], base: int, state_from: s
     if written is None:
         return None
     if not orbitals.any():  # a single irrep, whatever the number
+        if written not in (0, 1, base):
+            notes.append(f"ISYM = {written}, but all orbitals have one irrep: taken as totally symmetric")
         return 0
     decided = {"from-0": 0, "from-1": 1}.get(state_from)
     start = decided if decided is not None else 0 if written == 0 else base

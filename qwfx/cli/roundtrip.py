@@ -82,8 +82,8 @@ def _print_text(result: RoundTrip, verbose: bool) -> None:
     for name, size in result.witness.items():
         click.echo(f"\nwitness of {name}: qwfx and the witness's evaluator differ by at most {size:.1e} (relative)")
     for part in result.missing:
-        click.echo(f"did not come back: {part}")
-    verdict = "the same" if result.same else "DIFFERENT"
+        click.echo(f"not carried, and so not compared: {part}")
+    verdict = "DIFFERENT" if not result.same else "what came back is the same" if result.missing else "the same"
     click.echo(f"\n{verdict}: worst difference {result.worst:.1e}, tolerance {result.tolerance:g}")
 
 

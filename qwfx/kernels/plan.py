@@ -135,9 +135,10 @@ def make_plan(basis: Basis, positions: NDArray[np.float64]) -> Plan:
     centers = np.asarray(positions, dtype=np.float64)
     angular = np.asarray(basis.shell_l, dtype=np.int64)
     atoms = np.asarray(basis.shell_center, dtype=np.int64)
-    if len(atoms) and not (atoms.min() >= 0 and atoms.max() < len(centers)):
+    outside = atoms[(atoms < 0) | (atoms >= len(centers))]
+    if len(outside):
         raise EvaluationError(
-            f"a shell sits on atom {int(atoms.max())}, but there are {len(centers)} positions",
+            f"a shell sits on atom {int(outside[0])}, but there are {len(centers)} positions",
             where="basis.shell_center",
             expected="indices of atoms from 0",
             remedy="validate the file; `qwfx validate` names the shell",

@@ -57,9 +57,11 @@ def overlap(
     centers = np.asarray(positions, dtype=np.float64)
     if centers.ndim != 2 or centers.shape[1] != 3:
         raise EvaluationError(f"an array of shape {centers.shape}", where="positions", expected="(number, 3), in bohr")
-    if basis.n_shells and not 0 <= int(np.min(basis.shell_center)) <= int(np.max(basis.shell_center)) < len(centers):
+    atoms = np.asarray(basis.shell_center, dtype=np.int64)
+    outside = atoms[(atoms < 0) | (atoms >= len(centers))]
+    if len(outside):
         raise EvaluationError(
-            f"a shell sits on atom {int(np.max(basis.shell_center))}, but there are {len(centers)} positions",
+            f"a shell sits on atom {int(outside[0])}, but there are {len(centers)} positions",
             where="basis.shell_center",
             expected="indices of atoms from 0",
             remedy="validate the file; `qwfx validate` names the shell",

@@ -117,6 +117,8 @@ def test_integrals_are_compared_dense_and_sparse(nitrogen: Wavefunction) -> None
     assert found["two-body both"] == pytest.approx(1e-6)
     assert found["core energy"] == pytest.approx(1e-3)
     assert compare_integrals(h, None)[1] == ["the Hamiltonian"]
+    fewer = dataclasses.replace(h, n_orbitals=h.n_orbitals - 1)
+    assert compare_integrals(h, fewer)[0]["one-body both"] == np.inf
 
 
 class _Careless:

@@ -257,7 +257,9 @@ def test_contradiction_in_a_sparse_file(tmp_path: Path) -> None:
     body = "0.5 40 3 2 1\n" + "".join(f"1.0 {i} {i} {i} {i}\n" for i in range(1, 41)) + "-1.0 1 1 0 0\n"
     path = tmp_path / "x.fcidump"
     path.write_text(head + body + "0.5000000001 1 2 3 40\n")
-    reading = converter.read(path, {})
+    with pytest.raises(ConversionError, match="orbital 2 has two-electron and no one-electron"):
+        converter.read(path, {})
+    reading = converter.read(path, {"accept-incomplete": "yes"})
     assert "1 records repeat a number that an earlier one gives, and agree with it" in reading.notes
     assert reading.wavefunction.hamiltonian is not None
     assert len(reading.wavefunction.hamiltonian.two_body["both"].values) == 41
@@ -265,6 +267,30 @@ def test_contradiction_in_a_sparse_file(tmp_path: Path) -> None:
     with pytest.raises(ConversionError, match="line 2 says") as caught:
         converter.read(path, {})
     assert caught.value.where == f"{path}:44"
+
+
+@pytest.mark.parametrize("resolved", [False, True])
+@pytest.mark.parametrize("is_complex", [False, True])
+def test_a_cut_between_one_electron_records_is_seen(tmp_path: Path, resolved: bool, is_complex: bool) -> None:
+    """At every line end behind the two-electron integrals but the last one, which is the core energy."""
+    h = hamiltonian(5, 3, resolved, is_complex, 0.0, False)
+    path = tmp_path / "x.fcidump"
+    converter.write(wrap(h), path, {"threshold": "0"})
+    lines = path.read_text().splitlines(keepends=True)
+    first = next(k for k, line in enumerate(lines) if line.split()[-2:] == ["0", "0"] and not line.startswith(" &"))
+    n_orbitals = 3 * (1 + resolved)
+    for end in range(first + 1, len(lines) - 1):
+        path.write_text("".join(lines[:end]))
+        indices = {int(i) for line in lines[first:end] for i in line.split()[-4:-2]}
+        if len(indices) < n_orbitals:
+            with pytest.raises(ConversionError, match="no one-electron integrals"):
+                converter.read(path, {})
+
+
+def test_no_two_electron_integrals_are_said(tmp_path: Path) -> None:
+    path = tmp_path / "x.fcidump"
+    path.write_text("&FCI NORB=2,NELEC=2,MS2=0 /\n-1.0 1 1 0 0\n-0.5 2 2 0 0\n0.7 0 0 0 0\n")
+    assert any("no two-electron integrals" in note for note in converter.read(path, {}).notes)
 
 
 def test_agreement_is_judged_by_the_digits_printed(tmp_path: Path) -> None:
