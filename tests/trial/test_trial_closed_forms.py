@@ -7,6 +7,9 @@ shares nothing with this package.
 
 from __future__ import annotations
 
+import tempfile
+from pathlib import Path
+
 import numpy as np
 import pytest
 from atoms import helium, hydrogenic, pair_term
@@ -14,6 +17,7 @@ from numpy.typing import NDArray
 from published_atoms import BUNGE
 
 from qwfx.model import JastrowTerm, Wavefunction
+from qwfx.storage import load, save
 from qwfx.trial import Trial
 
 
@@ -67,8 +71,10 @@ GRID = perimetric(0.18)
 
 
 def energy_and_variance(wavefunction: Wavefunction) -> tuple[float, float]:
-    """<E_L> and <E_L^2> - <E_L>^2 over Psi^2."""
-    trial = Trial(wavefunction)
+    """<E_L> and <E_L^2> - <E_L>^2 over Psi^2, of the wave function as it comes out of a file."""
+    with tempfile.TemporaryDirectory() as folder:
+        save(wavefunction, Path(folder) / "helium.qwfx")
+        trial = Trial(load(Path(folder) / "helium.qwfx"))
     electrons, weights = GRID
     log_abs, _ = trial.log(electrons)
     density = weights * np.exp(2 * (log_abs[0] - log_abs.max()))
